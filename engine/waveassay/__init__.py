@@ -1,0 +1,1 @@
+"""Spectral analysis of physiologic recordings from checked recipes, with provenance."""

@@ -1,0 +1,327 @@
+"""The data that flow between steps. Each object concerns one signal of one recording.
+
+Times are exact fractions of a second from the recording's start. Arrays are read-only: a stage
+never writes its input, it returns a new object (``dataclasses.replace`` or the helpers here).
+"""
+
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field, replace
+from enum import StrEnum
+from fractions import Fraction
+from math import ceil
+
+import numpy as np
+from numpy.typing import NDArray
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+Bools = NDArray[np.bool_]
+
+
+class Kind(StrEnum):
+    """What a step takes or gives."""
+
+    SIGNALS = "signals"
+    EPOCHS = "epochs"
+    SPECTRA = "spectra"
+    AVERAGES = "averages"  # spectra averaged over the epochs of a condition
+    FEATURES = "features"
+    AVERAGE_FEATURES = "average features"  # features of averaged spectra
+    TABLE = "table"
+    FIGURE = "figure"
+
+
+@dataclass(frozen=True, order=True)
+class Interval:
+    """A stretch of time, start included and stop not."""
+
+    start_s: Fraction
+    stop_s: Fraction
+
+    @property
+    def length_s(self) -> Fraction:
+        """Length, s; never negative."""
+        return max(Fraction(0), self.stop_s - self.start_s)
+
+    def overlaps(self, other: "Interval") -> bool:
+        """Tell whether the two share any time."""
+        return self.start_s < other.stop_s and other.start_s < self.stop_s
+
+    def contains(self, other: "Interval") -> bool:
+        """Tell whether the other lies in this one entirely."""
+        return self.start_s <= other.start_s and other.stop_s <= self.stop_s
+
+
+@dataclass(frozen=True, order=True)
+class Exclusion(Interval):
+    """Masked time with its reason. A mask changes no sample."""
+
+    reason: str
+
+
+@dataclass(frozen=True, order=True)
+class Condition(Interval):
+    """A named stretch of time."""
+
+    name: str
+
+
+def merged(exclusions: Iterable[Exclusion]) -> tuple[Exclusion, ...]:
+    """Join touching exclusions of one reason; sorted by start, then stop, then reason."""
+    by_reason: dict[str, list[Exclusion]] = {}
+    for item in sorted(exclusions, key=lambda e: (e.reason, e.start_s, e.stop_s)):
+        if item.stop_s <= item.start_s:
+            continue
+        known = by_reason.setdefault(item.reason, [])
+        if known and item.start_s <= known[-1].stop_s:
+            last = known.pop()
+            item = Exclusion(last.start_s, max(last.stop_s, item.stop_s), item.reason)
+        known.append(item)
+    return tuple(sorted(item for items in by_reason.values() for item in items))
+
+
+@dataclass(frozen=True)
+class Signal:
+    """A signal over a stretch of one piece (a part of a recording without gaps).
+
+    Attributes
+    ----------
+    name : the recipe's name of the signal, or its label where one name stands for many.
+    x : samples in ``unit``, shape (n,).
+    rate_hz : exact sampling rate.
+    start_s : time of ``x[0]``.
+    piece : the whole piece; ``x`` may be a part of it, with context on either side.
+    excluded : masked time, sorted; may reach beyond ``x``.
+    conditions : the recording's conditions.
+    """
+
+    name: str
+    unit: str
+    rate_hz: Fraction
+    start_s: Fraction
+    x: Floats
+    piece: Interval
+    excluded: tuple[Exclusion, ...] = ()
+    conditions: tuple[Condition, ...] = ()
+
+    def __post_init__(self) -> None:
+        self.x.flags.writeable = False
+
+    @property
+    def stop_s(self) -> Fraction:
+        """Time just after the last sample."""
+        return self.start_s + self.x.size / self.rate_hz
+
+    def time_s(self, index: int) -> Fraction:
+        """Return the exact time of sample ``index`` of ``x``."""
+        return self.start_s + index / self.rate_hz
+
+    def index_at(self, time_s: Fraction) -> int:
+        """Return the index of the first sample at or after a time, not clipped to ``x``."""
+        return ceil((time_s - self.start_s) * self.rate_hz)
+
+    def with_samples(
+        self, x: Floats, *, rate_hz: Fraction | None = None, unit: str | None = None
+    ) -> "Signal":
+        """Return the signal with other samples from the same start."""
+        return replace(
+            self,
+            x=np.asarray(x, np.float64),
+            rate_hz=self.rate_hz if rate_hz is None else rate_hz,
+            unit=self.unit if unit is None else unit,
+        )
+
+    def excluding(self, more: Iterable[Exclusion]) -> "Signal":
+        """Return the signal with more time masked."""
+        return replace(self, excluded=merged((*self.excluded, *more)))
+
+    def widened(self, before_s: Fraction, after_s: Fraction) -> "Signal":
+        """Return the signal with every exclusion widened: what a filter does to a mask.
+
+        ``before_s`` is how far ahead of masked time its effect is felt, ``after_s`` how far behind.
+        """
+        wide = (
+            Exclusion(
+                max(self.piece.start_s, e.start_s - before_s),
+                min(self.piece.stop_s, e.stop_s + after_s),
+                e.reason,
+            )
+            for e in self.excluded
+        )
+        return replace(self, excluded=merged(wide))
+
+    def excluding_edges(self, before_s: Fraction, after_s: Fraction) -> "Signal":
+        """Mask the two ends of the piece, with reason ``edge``.
+
+        ``after_s`` is masked behind the piece's start, ``before_s`` ahead of its stop.
+        """
+        start, stop = self.piece.start_s, self.piece.stop_s
+        return self.excluding(
+            (
+                Exclusion(start, min(stop, start + after_s), "edge"),
+                Exclusion(max(start, stop - before_s), stop, "edge"),
+            )
+        )
+
+    def cut(self, start_s: Fraction, stop_s: Fraction) -> "Signal":
+        """Return the samples at or after ``start_s`` and before ``stop_s``, masks cut alike."""
+        first = min(max(0, self.index_at(start_s)), self.x.size)
+        last = min(max(first, self.index_at(stop_s)), self.x.size)
+        kept = (
+            Exclusion(max(start_s, e.start_s), min(stop_s, e.stop_s), e.reason)
+            for e in self.excluded
+        )
+        return replace(
+            self, x=self.x[first:last], start_s=self.time_s(first), excluded=merged(kept)
+        )
+
+
+@dataclass(frozen=True)
+class Rows:
+    """What the rows of a table are about: epochs, or conditions after averaging.
+
+    Every attribute has one entry a row. ``epochs`` is how many epochs a row stands for.
+    """
+
+    start_s: Floats
+    duration_s: Floats
+    condition: tuple[str, ...]
+    kept: Bools
+    reason: tuple[str, ...]
+    epochs: Ints
+
+    def __len__(self) -> int:
+        return len(self.condition)
+
+
+@dataclass(frozen=True)
+class Epochs:
+    """Equal lengths of one signal, as places in it: a view, not a copy.
+
+    Attributes
+    ----------
+    length : samples an epoch.
+    first : index in ``signal.x`` of each epoch's first sample, rising within a condition.
+    condition, kept, reason : one entry an epoch; ``reason`` is empty where kept.
+    """
+
+    signal: Signal
+    length: int
+    first: Ints
+    condition: tuple[str, ...]
+    kept: Bools
+    reason: tuple[str, ...]
+
+    def __len__(self) -> int:
+        return int(self.first.size)
+
+    def samples(self) -> Floats:
+        """Return the kept epochs, shape (kept, length); a copy only of what is kept."""
+        if self.signal.x.size < self.length:
+            return np.empty((0, self.length))
+        windows = np.lib.stride_tricks.sliding_window_view(self.signal.x, self.length)
+        return windows[self.first[self.kept]]
+
+    @property
+    def rows(self) -> Rows:
+        """What each epoch's row says of it."""
+        signal = self.signal
+        start = [float(signal.time_s(int(i))) for i in self.first]
+        count = len(self)
+        return Rows(
+            start_s=np.array(start, np.float64),
+            duration_s=np.full(count, float(self.length / signal.rate_hz)),
+            condition=self.condition,
+            kept=self.kept,
+            reason=self.reason,
+            epochs=np.ones(count, np.int64),
+        )
+
+    def starting_in(self, start_s: Fraction, stop_s: Fraction) -> "Epochs":
+        """Return the epochs that start at or after ``start_s`` and before ``stop_s``."""
+        low, high = self.signal.index_at(start_s), self.signal.index_at(stop_s)
+        inside = (self.first >= low) & (self.first < high)
+        places = np.flatnonzero(inside)
+        return replace(
+            self,
+            first=self.first[inside],
+            condition=tuple(self.condition[i] for i in places),
+            kept=self.kept[inside],
+            reason=tuple(self.reason[i] for i in places),
+        )
+
+
+@dataclass(frozen=True)
+class Spectra:
+    """Spectral densities, one a row: of epochs, or averaged by condition.
+
+    Attributes
+    ----------
+    unit : the signal's unit; densities are in unit squared per Hz.
+    freq_hz : bin centres, shape (f,), equally spaced from 0.
+    density : one-sided, shape (rows, f); NaN in rows that are not kept.
+    resolution_hz : true resolution (equivalent noise bandwidth, or 2W of a multitaper estimate).
+    dof : equivalent degrees of freedom of each row, shape (rows,).
+    """
+
+    signal: str
+    unit: str
+    rows: Rows
+    freq_hz: Floats
+    density: Floats
+    resolution_hz: float
+    dof: Floats
+
+    def __post_init__(self) -> None:
+        self.density.flags.writeable = False
+
+    @property
+    def bin_hz(self) -> float:
+        """Spacing of the bins, which zero padding narrows and which is no resolution."""
+        return float(self.freq_hz[1] - self.freq_hz[0])
+
+
+@dataclass(frozen=True)
+class Features:
+    """Numbers of each row.
+
+    Attributes
+    ----------
+    columns : part -> one value a row, NaN where missing. Parts and order as in the spec;
+        the empty part stands for the feature itself.
+    missing : why a kept row has no value, one text a row, empty where all are there.
+    """
+
+    signal: str
+    rows: Rows
+    columns: Mapping[str, Floats]
+    missing: tuple[str, ...]
+
+
+@dataclass(frozen=True)
+class Table:
+    """What `export.table` asks for; the engine writes it."""
+
+    csv: str
+    comment: str = ""
+
+
+@dataclass(frozen=True)
+class Figure:
+    """One picture, drawn; the engine writes it.
+
+    Attributes
+    ----------
+    signal : whose picture it is.
+    show : what is shown; part of the file's name.
+    png : the file's bytes.
+    caption : one or two sentences that name units, reference and settings.
+    """
+
+    signal: str
+    show: str
+    png: bytes = field(repr=False)
+    caption: str
+
+
+Data = Signal | Epochs | Spectra | Features | Table | Figure
