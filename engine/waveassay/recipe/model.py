@@ -47,8 +47,9 @@ class Anchor(_Part):
 
 
 class ConditionRule(_Part):
-    """A named stretch of time. Without start it begins, without end and length it ends, with
-    the recording.
+    """A named stretch of time.
+
+    Without start it begins, and without end and length it ends, with the recording.
     """
 
     start: Anchor | None = Field(default=None, description="Where it starts.")
