@@ -10,6 +10,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from fractions import Fraction
 from functools import lru_cache
+from math import inf, nextafter
 from typing import TYPE_CHECKING, Annotated, Any
 
 from pydantic_core import PydanticCustomError, core_schema
@@ -169,8 +170,13 @@ class InUnit:
         return float(exact(quantity.value) * factor * scale)
 
     def text(self, value: float) -> str:
-        """Return the canonical text of a value held in this field."""
-        shown = float(exact(value) * 100) if self.unit == "%" else value
+        """Return the canonical text of a value held in this field; it reads back to the same."""
+        shown = value + 0.0  # no negative zero
+        if self.unit == "%":
+            near = float(exact(shown) * 100)
+            # Times 100 and back may miss by one unit in the last place.
+            tries = (near, nextafter(near, -inf), nextafter(near, inf))
+            shown = next((n for n in tries if float(exact(n) / 100) == value), near)
         return f"{number_text(shown)} {self.unit}"
 
     def __get_pydantic_core_schema__(

@@ -4,11 +4,12 @@ from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from typing import Annotated, Literal
 
-from pydantic import BaseModel, ConfigDict, Field
+from pydantic import BaseModel, ConfigDict, Field, JsonValue
 
 from waveassay.contract import Kind, Params, Seconds, Stage
 
-Name = Annotated[str, Field(pattern=r"^[a-z][a-z0-9_]*$")]
+NAME_PATTERN = r"^[a-z][a-z0-9_]*$"
+Name = Annotated[str, Field(pattern=NAME_PATTERN)]
 RecipeName = Annotated[str, Field(pattern=r"^[a-z0-9][a-z0-9-]*$")]
 
 
@@ -32,12 +33,14 @@ class Anchor(_Part):
     """A moment of a recording: an annotation, a time from its start, or a time of day."""
 
     annotation: str | None = Field(
-        default=None, description="Text of an annotation, whole; case and outer spaces ignored."
+        default=None,
+        min_length=1,
+        description="Text of an annotation, whole; case and outer spaces ignored.",
     )
-    time: Seconds | None = Field(default=None, description="Time from the recording's start.")
+    time: Seconds | None = Field(default=None, ge=0, description="Time from the recording's start.")
     clock: str | None = Field(
         default=None,
-        pattern=r"^\d{1,2}:\d{2}(:\d{2}(\.\d+)?)?$",
+        pattern=r"^([01]?\d|2[0-3]):[0-5]\d(:[0-5]\d(\.\d+)?)?$",
         description="Time of day, such as 14:30:00; the first one after the recording's start.",
     )
     offset: Seconds = Field(default=0.0, description="Added to the moment; may be negative.")
@@ -72,7 +75,7 @@ class Origin(_Part):
     )
     where: str | None = Field(default=None, description="Where the source states it.")
     why: str | None = Field(default=None, description="Why this value, where none is stated.")
-    alternatives: tuple[str | int | float | bool, ...] = Field(
+    alternatives: tuple[JsonValue, ...] = Field(
         default=(), description="Other values that the source leaves open."
     )
 

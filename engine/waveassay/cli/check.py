@@ -1,0 +1,45 @@
+"""``waveassay check``."""
+
+from collections.abc import Sequence
+from pathlib import Path
+
+from waveassay.cli.loading import load_recipe
+from waveassay.cli.screen import console, plural
+from waveassay.contract import SignalError
+from waveassay.plan.recordings import find_recordings
+from waveassay.recipe.model import Recipe
+
+
+def check(argument: str, arguments: Sequence[Path]) -> int:
+    """Check a recipe, and whether recordings would go through it; return the exit code."""
+    recipe, warnings = load_recipe(argument)
+    screen = console()
+    for warning in warnings:
+        screen.print(str(warning))
+    steps = sum(len(chain.steps) for chain in recipe.chains.values())
+    screen.print(
+        f"{recipe.path}: sound. {recipe.name}, edition {recipe.edition}: "
+        f"{plural(len(recipe.chains), 'chain')}, {plural(steps, 'step')}."
+    )
+    screen.print(f"Digest: {recipe.digest}")
+    if not arguments:
+        return 0
+    found = find_recordings(arguments)
+    failing = sum(not _would_run(recipe, item.name, item.path) for item in found)
+    screen.print(f"{len(found) - failing} of {plural(len(found), 'recording')} would run.")
+    return 3 if failing else 0
+
+
+def _would_run(recipe: Recipe, name: str, path: Path) -> bool:
+    from waveassay.plan.passage import passages
+    from waveassay.recording import read_facts
+
+    screen = console()
+    try:
+        _, warnings = passages(recipe, name, "", read_facts(path))
+    except SignalError as error:
+        screen.print(f"would fail  {name}: {error}")
+        return False
+    for warning in warnings:
+        screen.print(f"warning     {name}: {warning}")
+    return True

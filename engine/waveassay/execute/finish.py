@@ -1,0 +1,237 @@
+"""The tasks that see a whole recording: combining for the next pass, and finishing a passage."""
+
+import json
+from collections import defaultdict
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from waveassay.contract import (
+    Data,
+    Exclusion,
+    Features,
+    FeaturesSpec,
+    Figure,
+    Kind,
+    Part,
+    Spectra,
+    Table,
+    merged,
+)
+from waveassay.execute.arrays import Arrays, exclusions_from_json, load_arrays, save_arrays
+from waveassay.execute.moves import collect_move, combine_move, run_move
+from waveassay.execute.rows import FILE as ROWS_FILE
+from waveassay.execute.rows import features_from_arrays
+from waveassay.execute.store import Store
+from waveassay.execute.tables import (
+    Block,
+    excluded_rows,
+    feature_table,
+    spectra_table,
+    summary_rows,
+)
+from waveassay.plan.columns import FeatureColumn, column_name
+from waveassay.plan.passage import Lane, Passage
+from waveassay.plan.program import Level
+from waveassay.plan.tasks import barriers
+from waveassay.provenance.tables import write_parquet
+
+STATE_FILE = "state.npz"
+FACTS_FILE = "passage.json"
+
+
+@dataclass(frozen=True)
+class Gathered:
+    """What all stretches gave, in order of time."""
+
+    arrays: Sequence[Arrays]
+    masks: Sequence[Mapping[str, Mapping[str, list[list[str]]]]]
+
+    def named(self, prefix: str) -> dict[str, list[Any]]:
+        """Return the arrays below a prefix, each name with its parts."""
+        found: dict[str, list[Any]] = defaultdict(list)
+        for arrays in self.arrays:
+            for name, array in arrays.items():
+                if name.startswith(prefix):
+                    found[name.removeprefix(prefix)].append(array)
+        return found
+
+    def parts(self, prefix: str) -> list[Part]:
+        """Return what one step collected, one part a stretch."""
+        parts = (
+            {n.removeprefix(prefix): a for n, a in arrays.items() if n.startswith(prefix)}
+            for arrays in self.arrays
+        )
+        return [part for part in parts if part]
+
+    def excluded(self, lane_no: int) -> tuple[Exclusion, ...]:
+        """Return the masks on a signal where epochs were cut."""
+        return merged(
+            item
+            for masks in self.masks
+            for items in masks[str(lane_no)].values()
+            for item in exclusions_from_json(items)
+        )
+
+
+def gather(store: Store, keys: Sequence[str]) -> Gathered:
+    """Read the rows of all stretches."""
+    read = [load_arrays(store.read(key).path(ROWS_FILE)) for key in keys]
+    return Gathered([arrays for arrays, _ in read], [facts for _, facts in read])
+
+
+def combine(passage: Passage, pass_no: int, gathered: Gathered, folder: Path) -> None:
+    """Turn what the pass before collected into what this pass applies."""
+    state: Arrays = {}
+    for lane_no, lane in enumerate(passage.lanes):
+        for move in barriers(lane, pass_no):
+            parts = gathered.parts(f"{lane_no}.{move.index}.part.")
+            made: Part = combine_move(move, parts)
+            state |= {f"{lane_no}.{move.index}.{name}": array for name, array in made.items()}
+    save_arrays(folder / STATE_FILE, state, {})
+
+
+def read_states(store: Store, keys: Sequence[str]) -> dict[tuple[int, int], Part]:
+    """Read what `combine` wrote: (lane, move) -> named arrays."""
+    states: dict[tuple[int, int], dict[str, Any]] = defaultdict(dict)
+    for key in keys:
+        arrays, _ = load_arrays(store.read(key).path(STATE_FILE))
+        for place, array in arrays.items():
+            lane, move, name = place.split(".", 2)
+            states[int(lane), int(move)][name] = array
+    return dict(states)
+
+
+def finish(
+    passage: Passage, columns: Sequence[FeatureColumn], gathered: Gathered, folder: Path
+) -> None:
+    """Write a passage's tables, figures, summary and excluded time."""
+    blocks: list[Block] = []
+    average_blocks: list[Block] = []
+    averages: list[tuple[str, Spectra]] = []
+    excluded: list[list[Any]] = []
+    figures: list[dict[str, str]] = []
+    units: dict[tuple[str, str], str] = {}
+    for lane_no, lane in enumerate(passage.lanes):
+        values = _recording_values(lane_no, lane, gathered)
+        blocks += _epoch_blocks(lane_no, lane, gathered)
+        average_blocks += _average_blocks(lane, values)
+        figures += _save_figures(lane, values, folder)
+        averages += [
+            (lane.program.moves[index].step.name, data)
+            for index, data in values.items()
+            if isinstance(data, Spectra)
+        ]
+        units |= _units(lane)
+        masks = gathered.excluded(lane_no)
+        excluded += excluded_rows(
+            passage.recording, passage.chain.name, lane.signal, masks, passage.pieces,
+            passage.conditions,
+        )  # fmt: skip
+    facts: dict[str, Any] = {
+        "excluded": excluded,
+        "figures": figures,
+        "summary": [],
+        "csv": "never",
+    }
+    tables = [s for s in passage.chain.steps if s.given is Kind.TABLE]
+    if tables:
+        own = [c for c in columns if not c.averaged]
+        facts["csv"] = _csv_choice(passage)
+        for averaged, name, some in (
+            (False, "epochs.parquet", blocks),
+            (True, "averages.parquet", average_blocks),
+        ):
+            wanted = [c for c in columns if c.averaged is averaged]
+            if wanted:
+                table = feature_table(
+                    passage.recording, some, wanted, passage.conditions, averaged=averaged
+                )
+                write_parquet(folder / name, table)
+        facts["summary"] = list(
+            summary_rows(
+                passage.recording, passage.chain.name, blocks, own, units, passage.conditions
+            )
+        )
+    if averages:
+        write_parquet(folder / "spectra.parquet", spectra_table(passage.recording, averages))
+    (folder / FACTS_FILE).write_text(json.dumps(facts, sort_keys=True))
+
+
+def _recording_values(lane_no: int, lane: Lane, gathered: Gathered) -> dict[int, Data]:
+    """Run the steps that need the whole, and those that follow them."""
+    values: dict[int, Data] = {}
+    for move in lane.program.moves.values():
+        if move.level is not Level.RECORDING or move.step.given is Kind.TABLE:
+            continue
+        assert move.source is not None, "only a source takes nothing"
+        if move.gather is None:
+            values[move.index] = run_move(move, values[move.source])
+            continue
+        if lane.program.moves[move.source].level is Level.RECORDING:
+            parts = [collect_move(move, values[move.source])]
+        else:
+            parts = gathered.parts(f"{lane_no}.{move.index}.part.")
+        if parts:
+            values[move.index] = combine_move(move, parts)
+    return values
+
+
+def _epoch_blocks(lane_no: int, lane: Lane, gathered: Gathered) -> list[Block]:
+    cut = lane.program.rows_step
+    by_cut: dict[int, dict[int, Features]] = defaultdict(dict)
+    for move in lane.program.moves.values():
+        if move.step.given is not Kind.FEATURES or move.level is not Level.ROWS:
+            continue
+        named = gathered.named(f"{lane_no}.{move.index}.feature.")
+        if named:
+            by_cut[cut[move.index]][move.index] = features_from_arrays(lane.signal, named)
+    return [Block(lane.signal, features) for _, features in sorted(by_cut.items())]
+
+
+def _average_blocks(lane: Lane, values: Mapping[int, Data]) -> list[Block]:
+    by_source: dict[int, dict[int, Features]] = defaultdict(dict)
+    for index, data in values.items():
+        if isinstance(data, Features):
+            by_source[lane.program.moves[index].source or 0][index] = data
+    return [Block(lane.signal, features) for _, features in sorted(by_source.items())]
+
+
+def _save_figures(lane: Lane, values: Mapping[int, Data], folder: Path) -> list[dict[str, str]]:
+    saved = []
+    for index, data in values.items():
+        if isinstance(data, Figure):
+            name = f"figure-{lane.channel}-{index}.png"
+            (folder / name).write_bytes(data.png)
+            step = lane.program.moves[index].step
+            saved.append(
+                {
+                    "file": name,
+                    "signal": data.signal,
+                    "show": data.show,
+                    "step": step.alias or step.name,
+                    "caption": data.caption,
+                }
+            )
+    return saved
+
+
+def _units(lane: Lane) -> dict[tuple[str, str], str]:
+    return {
+        (lane.signal, column_name(move.step.alias or move.step.name, column.part)): column.unit
+        for move in lane.program.moves.values()
+        if isinstance(move.spec_out, FeaturesSpec)
+        for column in move.spec_out.columns
+    }
+
+
+def _csv_choice(passage: Passage) -> str:
+    """Return what the chain's table steps ask for; the most eager one decides."""
+    asked = {"never"}
+    for step in passage.chain.steps:
+        if step.given is Kind.TABLE and step.stage.run is not None:
+            table = step.stage.run(step.params, None)
+            assert isinstance(table, Table), f"{step.name} gives a table"
+            asked.add(table.csv)
+    return next(choice for choice in ("always", "auto", "never") if choice in asked)

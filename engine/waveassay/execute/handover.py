@@ -1,0 +1,70 @@
+"""What is handed to workers: a work folder with the plan and the jobs, all of it plain data."""
+
+import json
+import shutil
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Any
+
+from waveassay.contract import SignalError
+from waveassay.execute.store import Store
+from waveassay.execute.work import JOBS_FILE, OUTCOMES, PLAN_FILE
+from waveassay.plan.jobs import Job
+from waveassay.plan.plan import Plan, ReadRecording
+from waveassay.plan.recordings import Found
+from waveassay.provenance.environment import environment_id
+from waveassay.provenance.files import machine_errors, write_text
+from waveassay.provenance.recording_digests import RecordingDigests
+from waveassay.recording import Facts, read_facts
+
+
+def read_recording(found: Found, digests: RecordingDigests) -> ReadRecording:
+    """Return a recording's digest and header facts, computed only when the file has changed.
+
+    Raises
+    ------
+    SignalError
+        When it cannot be read, or is not what it should be.
+    """
+    try:
+        facts = digests.facts(found.path, lambda: read_facts(found.path).to_json())
+        return ReadRecording(digests.digest(found.path), Facts.from_json(facts))
+    except OSError as error:
+        raise SignalError(
+            f"{found.path}: cannot be read: {error.strerror}. Check the file and your right to "
+            "read it."
+        ) from error
+
+
+def write_work(
+    store: Store, plan: Plan, jobs: Sequence[Job], env: dict[str, Any], run_name: str
+) -> Path:
+    """Write the work folder of a run afresh and return it."""
+    identifier = environment_id(env)
+    folder = store.root / "work" / run_name
+    recordings = {
+        item.found.name: {
+            "path": str(item.found.path.resolve()),
+            "sha256": item.read.sha256,
+            "facts": item.read.facts.to_json(),
+        }
+        for item in plan.recordings
+        if item.read is not None
+    }
+    work = {
+        "recipe": plan.recipe.text,
+        "recipe_path": plan.recipe.path,
+        "store": str(store.root),
+        "environment": identifier,
+        "recordings": recordings,
+        "jobs": {job.identifier: [[t.recording, t.key] for t in job.tasks] for job in jobs},
+    }
+    with machine_errors(folder):
+        shutil.rmtree(folder, ignore_errors=True)
+        for name in (OUTCOMES, "jobs"):
+            (folder / name).mkdir(parents=True)
+    text = json.dumps(env, sort_keys=True, indent=1)
+    write_text(store.root / "environments" / f"{identifier}.json", text)
+    write_text(folder / PLAN_FILE, json.dumps(work))
+    write_text(folder / JOBS_FILE, json.dumps({job.identifier: job.needs for job in jobs}))
+    return folder

@@ -1,0 +1,159 @@
+"""Get a signal over any interval: from its file, or from what earlier tasks prepared."""
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
+from fractions import Fraction
+from math import ceil
+from pathlib import Path
+
+import numpy as np
+
+from waveassay.contract import Floats, Interval, Signal, merged
+from waveassay.execute.arrays import (
+    Arrays,
+    exclusions_from_json,
+    exclusions_to_json,
+    load_arrays,
+    save_arrays,
+)
+from waveassay.execute.store import Store
+from waveassay.plan.passage import Lane, Passage
+from waveassay.plan.tasks import Task, overlapping
+from waveassay.recording import Facts, open_recording
+
+FILE = "signals.npz"
+
+Window = tuple[Fraction, Fraction]
+
+
+def read_from_file(
+    passage: Passage, path: Path, facts: Facts, piece_no: int, windows: Mapping[int, Window]
+) -> dict[int, Signal]:
+    """Read lanes from the recording, each over its own window, in one pass for equal windows.
+
+    Parameters
+    ----------
+    windows : index of a lane -> (start, stop), s; the samples at or after start and before stop.
+    """
+    piece = passage.pieces[piece_no]
+    groups: dict[Window, list[int]] = {}
+    for index, window in windows.items():
+        groups.setdefault(window, []).append(index)
+    read: dict[int, Signal] = {}
+    with open_recording(path, facts=facts) as recording:
+        for (start_s, stop_s), lanes in groups.items():
+            channels = [passage.lanes[index].channel for index in lanes]
+            arrays = recording.read(channels, piece_no, start_s, stop_s)
+            for index, x in zip(lanes, arrays, strict=True):
+                read[index] = _as_signal(passage.lanes[index], piece, start_s, x)
+    return read
+
+
+def _as_signal(lane: Lane, piece: Interval, start_s: Fraction, x: Floats) -> Signal:
+    rate_hz = lane.spec.rate_hz
+    assert rate_hz is not None, "a recording's rates are known"
+    first = ceil((start_s - piece.start_s) * rate_hz)
+    samples = np.ascontiguousarray(x, np.float64)
+    if lane.scale != 1.0:
+        samples = samples * lane.scale
+    return Signal(
+        lane.signal, lane.spec.unit, rate_hz, piece.start_s + first / rate_hz, samples, piece
+    )
+
+
+def save_prepared(folder: Path, prepared: Mapping[tuple[int, int], Signal]) -> None:
+    """Write prepared signals, by lane and move."""
+    arrays: Arrays = {}
+    facts = {}
+    for (lane, move), signal in prepared.items():
+        arrays[f"{lane}.{move}"] = signal.x
+        facts[f"{lane}.{move}"] = {
+            "rate_hz": str(signal.rate_hz),
+            "start_s": str(signal.start_s),
+            "unit": signal.unit,
+            "excluded": exclusions_to_json(signal.excluded),
+        }
+    save_arrays(folder / FILE, arrays, facts)
+
+
+@dataclass
+class SignalSource:
+    """Signals of a passage over any interval of a piece, whatever holds them.
+
+    Attributes
+    ----------
+    prepared : (pass, stretch number) -> the key of the result that holds it, within ``piece_no``.
+    """
+
+    passage: Passage
+    path: Path
+    facts: Facts
+    store: Store
+    piece_no: int
+    prepared: Mapping[tuple[int, int], str]
+    _loaded: dict[str, tuple[Arrays, dict[str, dict[str, object]]]] = field(default_factory=dict)
+
+    def over(self, wanted: Mapping[tuple[int, int], Window]) -> dict[tuple[int, int], Signal]:
+        """Return signals by (lane, move), each over its own window."""
+        found: dict[tuple[int, int], Signal] = {}
+        from_file: dict[int, Window] = {}
+        for (lane_no, move_no), window in wanted.items():
+            pass_no = self.passage.lanes[lane_no].program.moves[move_no].pass_no
+            if any(held == pass_no for held, _ in self.prepared):
+                found[lane_no, move_no] = self._assemble(lane_no, move_no, pass_no, window)
+            else:
+                from_file[lane_no] = self._within(window)
+        if from_file:
+            read = read_from_file(self.passage, self.path, self.facts, self.piece_no, from_file)
+            for lane_no, move_no in wanted:
+                if (lane_no, move_no) not in found:
+                    found[lane_no, move_no] = read[lane_no]
+        conditions = self.passage.conditions
+        return {place: replace(signal, conditions=conditions) for place, signal in found.items()}
+
+    def _assemble(self, lane_no: int, move_no: int, pass_no: int, window: Window) -> Signal:
+        lane = self.passage.lanes[lane_no]
+        piece = self.passage.pieces[self.piece_no]
+        start_s, stop_s = self._within(window)
+        parts: list[Signal] = []
+        for stretch in overlapping(self.passage, lane, self.piece_no, start_s, stop_s):
+            arrays, facts = self._load(self.prepared[pass_no, stretch.number])
+            name = f"{lane_no}.{move_no}"
+            known = facts[name]
+            parts.append(
+                Signal(
+                    lane.signal,
+                    str(known["unit"]),
+                    Fraction(str(known["rate_hz"])),
+                    Fraction(str(known["start_s"])),
+                    arrays[name],
+                    piece,
+                    exclusions_from_json(known["excluded"]),  # type: ignore[arg-type]
+                )
+            )
+        return _joined(parts).cut(start_s, stop_s)
+
+    def _within(self, window: Window) -> Window:
+        piece = self.passage.pieces[self.piece_no]
+        return max(window[0], piece.start_s), min(window[1], piece.stop_s)
+
+    def _load(self, key: str) -> tuple[Arrays, dict[str, dict[str, object]]]:
+        if key not in self._loaded:
+            self._loaded[key] = load_arrays(self.store.read(key).path(FILE))
+        return self._loaded[key]
+
+
+def _joined(parts: Sequence[Signal]) -> Signal:
+    if len(parts) == 1:
+        return parts[0]
+    excluded = merged(item for part in parts for item in part.excluded)
+    return replace(parts[0], x=np.concatenate([part.x for part in parts]), excluded=excluded)
+
+
+def prepared_keys(task: Task, by_key: Mapping[str, Task]) -> dict[tuple[int, int], str]:
+    """Return where a task finds prepared stretches: (pass, stretch number) -> key."""
+    return {
+        (need.pass_no, need.stretch.number): key
+        for key in task.needs
+        if (need := by_key[key]).action == "prepare" and need.stretch is not None
+    }

@@ -1,0 +1,1 @@
+"""The Snakemake backend. Nothing outside this package knows Snakemake."""

@@ -1,0 +1,144 @@
+"""The store: results by the key of what made them, shared by runs.
+
+A result is a folder of files, written beside its place and renamed, so that a half-written one is
+never taken for whole. Its ``artefact.json`` names the files with their digests and the environment
+that made them, and is checked when the result is read.
+"""
+
+import hashlib
+import json
+import os
+import shutil
+import tempfile
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+
+from waveassay.contract.errors import SignalError
+from waveassay.provenance.files import PART_PREFIX, machine_error
+
+_FACTS = "artefact.json"
+
+
+class MissingArtefactError(SignalError):
+    """A result that a task needs is not in the store, since the task that makes it failed."""
+
+
+@dataclass(frozen=True)
+class Artefact:
+    """A stored result."""
+
+    key: str
+    folder: Path
+    digest: str
+    environment: str
+
+    def path(self, name: str) -> Path:
+        """Return one of its files."""
+        return self.folder / name
+
+
+class Store:
+    """A folder of results."""
+
+    def __init__(self, root: Path) -> None:
+        self.root = root
+
+    def _place(self, key: str) -> Path:
+        return self.root / "objects" / key[:2] / key
+
+    def has(self, key: str) -> bool:
+        """Tell whether a result is there, whole."""
+        return (self._place(key) / _FACTS).exists()
+
+    @contextmanager
+    def writing(self, key: str, environment: str) -> Iterator[Path]:
+        """Give a folder to write a result's files to; it takes its place when all went well.
+
+        Raises
+        ------
+        MachineError
+            When the disk is full or may not be written.
+        """
+        place = self._place(key)
+        try:
+            place.parent.mkdir(parents=True, exist_ok=True)
+            part = Path(tempfile.mkdtemp(prefix=PART_PREFIX, dir=place.parent))
+            try:
+                yield part
+                self._put(key, environment, part)
+            finally:
+                shutil.rmtree(part, ignore_errors=True)
+        except OSError as error:
+            told = machine_error(error, self.root)
+            if told is None or not self._concerns(error):
+                raise
+            raise told from error
+
+    def _put(self, key: str, environment: str, part: Path) -> None:
+        place = self._place(key)
+        files = {
+            path.relative_to(part).as_posix(): _sha256(path)
+            for path in sorted(part.rglob("*"))
+            if path.is_file()
+        }
+        facts = {"files": files, "digest": _digest(files), "environment": environment}
+        (part / _FACTS).write_text(json.dumps(facts, sort_keys=True, indent=1))
+        part.chmod(0o755)
+        if place.exists() and not self.has(key):
+            shutil.rmtree(place)
+        try:
+            os.rename(part, place)
+        except OSError:
+            if not self.has(key):  # else another process made the same result first
+                raise
+
+    def _concerns(self, error: OSError) -> bool:
+        """Tell whether an error is about the store, not about a recording being read."""
+        return error.filename is None or Path(error.filename).is_relative_to(self.root)
+
+    def read(self, key: str) -> Artefact:
+        """Return a result after checking its files against their digests.
+
+        Raises
+        ------
+        MissingArtefactError
+            When it is not there.
+        SignalError
+            When a file was changed or lost; the result is removed, so that the next run makes it.
+        """
+        place = self._place(key)
+        try:
+            facts = json.loads((place / _FACTS).read_text())
+        except FileNotFoundError:
+            raise MissingArtefactError(f"result {key[:12]} is not in the store") from None
+        for name, sha256 in facts["files"].items():
+            path = place / name
+            if not path.exists() or _sha256(path) != sha256:
+                shutil.rmtree(place, ignore_errors=True)
+                raise SignalError(
+                    f"{path}: a stored result was changed or lost. It has been removed; run again "
+                    "and it is computed afresh."
+                )
+        return Artefact(key, place, facts["digest"], facts["environment"])
+
+    def facts(self, key: str) -> tuple[str, str]:
+        """Return a result's digest and environment without reading its files."""
+        facts = json.loads((self._place(key) / _FACTS).read_text())
+        return facts["digest"], facts["environment"]
+
+    def sweep(self) -> None:
+        """Remove what killed processes left half written."""
+        for part in self.root.glob(f"objects/*/{PART_PREFIX}*"):
+            shutil.rmtree(part, ignore_errors=True)
+
+
+def _sha256(path: Path) -> str:
+    with path.open("rb") as file:
+        return hashlib.file_digest(file, "sha256").hexdigest()
+
+
+def _digest(files: dict[str, str]) -> str:
+    lines = "".join(f"{sha256}  {name}\n" for name, sha256 in files.items())
+    return hashlib.sha256(lines.encode()).hexdigest()

@@ -1,0 +1,263 @@
+"""The rows of a passage's tables, as Arrow tables and plain rows."""
+
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from fractions import Fraction
+from itertools import pairwise
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from waveassay.contract import (
+    Condition,
+    Exclusion,
+    Features,
+    Floats,
+    Interval,
+    Ints,
+    Rows,
+    Spectra,
+    merged,
+)
+from waveassay.plan.columns import FeatureColumn
+
+if TYPE_CHECKING:
+    import pyarrow as pa
+
+EPOCH_COLUMNS = (
+    "recording",
+    "signal",
+    "signal_2",
+    "condition",
+    "epoch",
+    "start_s",
+    "duration_s",
+    "kept",
+    "reason",
+)
+AVERAGE_COLUMNS = (
+    "recording",
+    "signal",
+    "signal_2",
+    "condition",
+    "epochs",
+    "start_s",
+    "duration_s",
+    "kept",
+    "reason",
+)
+
+
+@dataclass(frozen=True)
+class Block:
+    """Rows of one signal that belong together: features of the same epochs, by step."""
+
+    signal: str
+    features: Mapping[int, Features]
+
+    @property
+    def rows(self) -> Rows:
+        """What the rows say; the last step decides, since it has been through every rejection."""
+        return self.features[max(self.features)].rows
+
+    def column(self, wanted: FeatureColumn) -> Floats:
+        """Return one column, NaN where this block has none."""
+        features = self.features.get(wanted.step_index)
+        if features is None or wanted.part not in features.columns:
+            return np.full(len(self.rows), np.nan)
+        return features.columns[wanted.part]
+
+
+def feature_table(
+    recording: str,
+    blocks: Sequence[Block],
+    columns: Sequence[FeatureColumn],
+    conditions: Sequence[Condition],
+    *,
+    averaged: bool,
+) -> "pa.Table":
+    """Return a wide table: one row an epoch (or condition), sorted, one column a feature."""
+    import pyarrow as pa
+
+    parts = [_block_columns(recording, block, columns, conditions, averaged) for block in blocks]
+    kinds: dict[str, Any] = {
+        "epoch": pa.int64(),
+        "epochs": pa.int64(),
+        "start_s": pa.float64(),
+        "duration_s": pa.float64(),
+        "kept": pa.bool_(),
+    }
+    names = list(AVERAGE_COLUMNS if averaged else EPOCH_COLUMNS)
+    features = [column.name for column in columns]
+    arrays = []
+    for name in [*names, *features, "missing_reason"]:
+        kind = pa.float64() if name in features else kinds.get(name, pa.string())
+        values = [value for part in parts for value in part[name]]
+        arrays.append(pa.array(values, kind, from_pandas=name in features))
+    return pa.table(dict(zip([*names, *features, "missing_reason"], arrays, strict=True)))
+
+
+def _block_columns(
+    recording: str,
+    block: Block,
+    columns: Sequence[FeatureColumn],
+    conditions: Sequence[Condition],
+    averaged: bool,
+) -> dict[str, list[Any]]:
+    rows = block.rows
+    rank = {name: place for place, name in enumerate(dict.fromkeys(c.name for c in conditions))}
+    ranks = np.array([rank.get(name, len(rank)) for name in rows.condition], np.int64)
+    order = np.lexsort((rows.start_s, ranks))
+    count = len(order)
+    table: dict[str, list[Any]] = {
+        "recording": [recording] * count,
+        "signal": [block.signal] * count,
+        "signal_2": [None] * count,
+        "condition": [rows.condition[i] for i in order],
+        "start_s": rows.start_s[order].tolist(),
+        "duration_s": rows.duration_s[order].tolist(),
+        "kept": rows.kept[order].tolist(),
+        "reason": [rows.reason[i] or None for i in order],
+    }
+    if averaged:
+        table["epochs"] = rows.epochs[order].tolist()
+    else:
+        table["epoch"] = _numbers(ranks[order])
+    for column in columns:
+        table[column.name] = block.column(column)[order].tolist()
+    missing = _missing(block, columns, count)
+    table["missing_reason"] = [missing[i] or None for i in order]
+    return table
+
+
+def _numbers(ranks: Ints) -> list[int]:
+    """Return each row's number within its condition, from 0; ``ranks`` are sorted."""
+    starts = np.searchsorted(ranks, ranks, side="left")
+    return [int(i) for i in np.arange(ranks.size) - starts]
+
+
+def _missing(block: Block, columns: Sequence[FeatureColumn], count: int) -> list[str]:
+    steps = dict.fromkeys((c.step_index, c.name.split(".")[0]) for c in columns)
+    texts: list[list[str]] = [[] for _ in range(count)]
+    for step_index, feature in steps:
+        features = block.features.get(step_index)
+        if features is None:
+            continue
+        for place, reason in enumerate(features.missing):
+            if reason:
+                texts[place].append(f"{feature}: {reason}")
+    return ["; ".join(items) for items in texts]
+
+
+def summary_rows(
+    recording: str,
+    chain: str,
+    blocks: Sequence[Block],
+    columns: Sequence[FeatureColumn],
+    units: Mapping[tuple[str, str], str],
+    conditions: Sequence[Condition],
+) -> Iterator[list[Any]]:
+    """Yield one row a signal, condition and feature, over kept epochs that have a value.
+
+    The standard deviation divides by n - 1; quantiles are interpolated linearly between order
+    statistics (type 7 of Hyndman and Fan, The American Statistician 50:361-365, 1996).
+    """
+    for block in blocks:
+        names = np.array(block.rows.condition, np.str_)
+        for condition in dict.fromkeys(c.name for c in conditions):
+            inside = (names == condition) & block.rows.kept
+            for column in columns:
+                if column.step_index not in block.features:
+                    continue
+                values = block.column(column)[inside]
+                values = values[np.isfinite(values)]
+                unit = units.get((block.signal, column.name), column.unit)
+                yield [
+                    recording,
+                    chain,
+                    block.signal,
+                    None,
+                    condition,
+                    column.name,
+                    unit,
+                    *_statistics(values),
+                ]
+
+
+def _statistics(values: Floats) -> list[Any]:
+    if not values.size:
+        return [0, None, None, None, None, None]
+    quartiles = np.quantile(values, [0.5, 0.25, 0.75])
+    sd = float(np.std(values, ddof=1)) if values.size > 1 else None
+    return [int(values.size), float(np.mean(values)), sd, *(float(q) for q in quartiles)]
+
+
+def excluded_rows(
+    recording: str,
+    chain: str,
+    signal: str,
+    masks: Sequence[Exclusion],
+    pieces: Sequence[Interval],
+    conditions: Sequence[Condition],
+) -> Iterator[list[Any]]:
+    """Yield one row a condition and reason: masked time, gaps, and all of it together (``any``)."""
+    gaps = [Exclusion(before.stop_s, after.start_s, "gap") for before, after in pairwise(pieces)]
+    everything = merged((*masks, *gaps))
+    together = merged(Exclusion(e.start_s, e.stop_s, "any") for e in everything)
+    for name in dict.fromkeys(c.name for c in conditions):
+        windows = [c for c in conditions if c.name == name]
+        total_s = sum((c.length_s for c in windows), Fraction(0))
+        reasons = dict.fromkeys(sorted({e.reason for e in everything}))
+        for reason in (*reasons, "any"):
+            source = together if reason == "any" else everything
+            excluded_s = sum(
+                (_shared_s(e, c) for e in source if e.reason == reason for c in windows),
+                Fraction(0),
+            )
+            if excluded_s or reason == "any":
+                share = float(excluded_s / total_s) if total_s else None
+                yield [recording, chain, signal, name, reason, float(excluded_s), share]
+
+
+def _shared_s(one: Interval, other: Interval) -> Fraction:
+    return max(Fraction(0), min(one.stop_s, other.stop_s) - max(one.start_s, other.start_s))
+
+
+def spectra_table(recording: str, averages: Sequence[tuple[str, Spectra]]) -> "pa.Table":
+    """Return averaged spectra, long: one row a signal, condition and frequency."""
+    import pyarrow as pa
+
+    names = (
+        "recording",
+        "signal",
+        "condition",
+        "step",
+        "epochs",
+        "dof",
+        "frequency_hz",
+        "density",
+        "unit",
+    )
+    kinds = [pa.string()] * 4 + [pa.int64()] + [pa.float64()] * 3 + [pa.string()]
+    columns: list[list[Any]] = [[] for _ in names]
+    for step, spectra in averages:
+        for place, condition in enumerate(spectra.rows.condition):
+            count = spectra.freq_hz.size
+            values: list[list[Any]] = [
+                [recording] * count,
+                [spectra.signal] * count,
+                [condition] * count,
+                [step] * count,
+                [int(spectra.rows.epochs[place])] * count,
+                [float(spectra.dof[place])] * count,
+                spectra.freq_hz.tolist(),
+                spectra.density[place].tolist(),
+                [f"{spectra.unit}^2/Hz"] * count,
+            ]
+            for column, more in zip(columns, values, strict=True):
+                column.extend(more)
+    arrays = [
+        pa.array(column, kind, from_pandas=kind == pa.float64())
+        for column, kind in zip(columns, kinds, strict=True)
+    ]
+    return pa.table(dict(zip(names, arrays, strict=True)))

@@ -1,0 +1,180 @@
+"""Do a job: its tasks one after another, each recording failing alone."""
+
+import json
+import sys
+import traceback
+from collections.abc import Mapping
+from dataclasses import dataclass
+from functools import cached_property, lru_cache
+from importlib import import_module
+from pathlib import Path
+from typing import Any
+
+from waveassay.contract import SignalError
+from waveassay.contract.errors import MachineError
+from waveassay.execute.finish import combine, finish, gather, read_states
+from waveassay.execute.moves import StepError
+from waveassay.execute.prepare import prepare
+from waveassay.execute.rows import make_rows
+from waveassay.execute.signals import SignalSource, prepared_keys
+from waveassay.execute.store import MissingArtefactError, Store
+from waveassay.plan.columns import FeatureColumn, feature_columns
+from waveassay.plan.passage import Passage, passages
+from waveassay.plan.tasks import Task, tasks_of
+from waveassay.provenance.files import write_text
+from waveassay.recipe.check import check_recipe
+from waveassay.recipe.model import Recipe
+from waveassay.recipe.problems import RecipeError
+from waveassay.recording import Facts
+
+PLAN_FILE, JOBS_FILE, OUTCOMES = "plan.json", "jobs.json", "outcomes"
+
+
+@dataclass(frozen=True)
+class Failure:
+    """Why a recording failed, at which step."""
+
+    recording: str
+    chain: str
+    step: str
+    message: str
+    detail: str = ""
+
+
+@dataclass(frozen=True)
+class Ready:
+    """A recording made ready for work: its passages and tasks."""
+
+    path: Path
+    facts: Facts
+    passages: Mapping[str, Passage]
+    tasks: Mapping[str, Task]
+
+
+class Bench:
+    """All that workers need to know, read from a work folder."""
+
+    def __init__(self, folder: Path) -> None:
+        self.folder = folder
+        plan = json.loads((folder / PLAN_FILE).read_text(encoding="utf-8"))
+        self.environment: str = plan["environment"]
+        self.store = Store(Path(plan["store"]))
+        self._plan: dict[str, Any] = plan
+        self._ready: dict[str, Ready] = {}
+
+    @cached_property
+    def recipe(self) -> Recipe:
+        """The recipe, checked again from its text."""
+        checked = check_recipe(self._plan["recipe"], self._plan["recipe_path"])
+        if checked.recipe is None:
+            raise RecipeError(checked.problems)
+        return checked.recipe
+
+    @cached_property
+    def columns(self) -> dict[str, tuple[FeatureColumn, ...]]:
+        """Columns of every chain's tables."""
+        recipe = self.recipe
+        return {c.name: feature_columns(c, recipe.signals) for c in recipe.chains.values()}
+
+    def tasks_of_job(self, job: str) -> list[tuple[str, str]]:
+        """Return a job's tasks: (recording, key)."""
+        return [(recording, key) for recording, key in self._plan["jobs"][job]]
+
+    def ready(self, recording: str) -> Ready:
+        """Work out a recording's passages and tasks, as the planner did."""
+        if recording not in self._ready:
+            known = self._plan["recordings"][recording]
+            facts = Facts.from_json(known["facts"])
+            ways, _ = passages(self.recipe, recording, known["sha256"], facts)
+            tasks = {task.key: task for way in ways for task in tasks_of(way)}
+            self._ready.clear()  # jobs take recordings one after another
+            self._ready[recording] = Ready(
+                Path(known["path"]), facts, {way.chain.name: way for way in ways}, tasks
+            )
+        return self._ready[recording]
+
+
+@lru_cache(maxsize=1)
+def _bench(folder: Path, stamp: int) -> Bench:
+    return Bench(folder)
+
+
+def run_job(folder: Path, job: str) -> None:
+    """Do a job's tasks and write its outcome; a failed recording leaves the others alone.
+
+    Raises
+    ------
+    MachineError
+        When the disk or the memory ends: no task would fare better.
+    """
+    bench = _bench(folder, (folder / PLAN_FILE).stat().st_mtime_ns)
+    failures: dict[str, Failure] = {}
+    for recording, key in bench.tasks_of_job(job):
+        if recording in failures or bench.store.has(key):
+            continue
+        task: Task | None = None
+        try:
+            task = bench.ready(recording).tasks[key]
+            _do(bench, recording, task)
+        except MissingArtefactError:
+            continue  # the task that makes it failed in another job, and is told there
+        except MemoryError as error:
+            raise MachineError(
+                f"{recording}: the memory does not suffice; use fewer workers (--workers)"
+            ) from error
+        except StepError as error:
+            failures[recording] = Failure(
+                recording, task.chain if task else "", error.step, str(error), error.detail
+            )
+        except SignalError as error:
+            failures[recording] = Failure(recording, task.chain if task else "", "", str(error))
+        except MachineError:
+            raise
+        except Exception as error:  # our own fault: it must not take other recordings with it
+            failures[recording] = Failure(
+                recording,
+                task.chain if task else "",
+                "",
+                f"{type(error).__name__}: {error}. This is a fault of waveassay, not of the "
+                "recording; please report it with the run's log.jsonl.",
+                traceback.format_exc(),
+            )
+    lines = [vars(failure) for failure in failures.values()]
+    write_text(folder / OUTCOMES / f"{job}.json", json.dumps(lines))
+
+
+def _do(bench: Bench, recording: str, task: Task) -> None:
+    ready = bench.ready(recording)
+    passage = ready.passages[task.chain]
+    store = bench.store
+    by_action: dict[str, list[str]] = {"prepare": [], "rows": [], "combine": [], "finish": []}
+    for need in task.needs:
+        by_action[ready.tasks[need].action].append(need)
+    with store.writing(task.key, bench.environment) as folder:
+        if task.action == "finish":
+            finish(passage, bench.columns[task.chain], gather(store, by_action["rows"]), folder)
+        elif task.action == "combine":
+            combine(passage, task.pass_no, gather(store, by_action["rows"]), folder)
+        else:
+            assert task.stretch is not None, "stretches are what is prepared and cut"
+            source = SignalSource(
+                passage,
+                ready.path,
+                ready.facts,
+                store,
+                task.stretch.piece,
+                prepared_keys(task, ready.tasks),
+            )
+            states = read_states(store, by_action["combine"])
+            make = prepare if task.action == "prepare" else make_rows
+            make(source, task.pass_no, task.stretch, states, folder)
+
+
+def warm_up() -> None:
+    """Import what jobs need, while the first job is being handed over."""
+    for module in ("pyarrow.parquet", "scipy.fft", "scipy.signal"):
+        import_module(module)
+
+
+if __name__ == "__main__":
+    run_job(Path(sys.argv[1]).resolve(), sys.argv[2])

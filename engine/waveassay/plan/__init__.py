@@ -1,0 +1,1 @@
+"""From a recipe and recordings to tasks: pure data, nothing read beyond headers and digests."""

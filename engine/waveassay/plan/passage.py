@@ -1,0 +1,162 @@
+"""One recording's passage through one chain: its signals, their programs and their stretches."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from fractions import Fraction
+from functools import cached_property
+
+from waveassay.contract import Condition, Interval, SignalError, SignalSpec
+from waveassay.plan.conditions import resolve_conditions
+from waveassay.plan.labels import match_signals, unit_scale
+from waveassay.plan.program import Program, compile_program
+from waveassay.plan.stretches import Stretch, bounds_s
+from waveassay.recipe.fold import fold
+from waveassay.recipe.model import Chain, Recipe
+from waveassay.recording import Facts
+
+
+@dataclass(frozen=True)
+class Lane:
+    """One signal on its way through a chain.
+
+    Attributes
+    ----------
+    signal : its name in tables.
+    role : the recipe's name of it; the same, unless one name stands for many signals.
+    channel : its index in the file.
+    label : its label in the file.
+    scale : what turns the file's unit into the recipe's.
+    borders_s : for each piece, the stretches' borders.
+    """
+
+    signal: str
+    role: str
+    channel: int
+    label: str
+    scale: float
+    spec: SignalSpec
+    program: Program
+    borders_s: tuple[tuple[Fraction, ...], ...]
+
+    def bounds_s(self, stretch: Stretch) -> tuple[Fraction, Fraction]:
+        """Return this signal's own borders of a stretch."""
+        borders = self.borders_s[stretch.piece]
+        return borders[stretch.number], borders[stretch.number + 1]
+
+
+@dataclass(frozen=True)
+class Passage:
+    """One recording's passage through one chain."""
+
+    recording: str
+    sha256: str
+    chain: Chain
+    pieces: tuple[Interval, ...]
+    conditions: tuple[Condition, ...]
+    lanes: tuple[Lane, ...]
+    warnings: tuple[str, ...]
+
+    @cached_property
+    def stretches(self) -> tuple[Stretch, ...]:
+        """All stretches, in order of time."""
+        if not self.lanes:
+            return ()
+        return tuple(
+            Stretch(piece, number)
+            for piece, borders in enumerate(self.lanes[0].borders_s)
+            for number in range(len(borders) - 1)
+        )
+
+    @property
+    def passes(self) -> int:
+        """How often the recording is passed over."""
+        return max((lane.program.passes for lane in self.lanes), default=0)
+
+
+def passages(
+    recipe: Recipe, recording: str, sha256: str, facts: Facts
+) -> tuple[tuple[Passage, ...], tuple[str, ...]]:
+    """Return the recording's passage through every chain, and warnings about the recording.
+
+    Raises
+    ------
+    SignalError
+        When a signal or an annotation cannot be matched, a unit does not fit, or a stage refuses
+        what the recording has (a band above its Nyquist frequency).
+    """
+    conditions = resolve_conditions(
+        recipe.conditions, facts.annotations, facts.start, facts.duration_s
+    )
+    wanted = tuple(
+        dict.fromkeys(name for chain in recipe.chains.values() for name in chain.signals)
+    )
+    labels = [signal.label for signal in facts.signals]
+    matched = match_signals(recipe.signals, labels, wanted)
+    warnings = list(facts.warnings)
+    found: list[Passage] = []
+    for chain in recipe.chains.values():
+        passage = _passage(recipe, chain, recording, sha256, facts, conditions, matched)
+        if not passage.lanes:
+            warnings.append(f"chain {chain.name}: none of its signals is in this recording")
+        warnings.extend(passage.warnings)
+        found.append(passage)
+    return tuple(found), tuple(dict.fromkeys(warnings))
+
+
+def _passage(
+    recipe: Recipe,
+    chain: Chain,
+    recording: str,
+    sha256: str,
+    facts: Facts,
+    conditions: tuple[Condition, ...],
+    matched: Mapping[str, tuple[tuple[str, int], ...]],
+) -> Passage:
+    refusals: list[str] = []
+    warnings: list[str] = []
+    planned: list[tuple[str, str, int, float, SignalSpec, Program]] = []
+    for role in chain.signals:
+        rule = recipe.signals[role]
+        for name, channel in matched[role]:
+            file_signal = facts.signals[channel]
+            scale = unit_scale(rule.unit, file_signal.unit, file_signal.label)
+            spec = SignalSpec(name, rule.unit, rule.modality, file_signal.rate_hz)
+            folded = fold(chain, spec, rule=role)
+            for finding in folded.findings:
+                step = chain.steps[finding.step_index]
+                text = f"{chain.name}.{step.name}: {finding.message} (signal {name})"
+                (refusals if finding.severity == "error" else warnings).append(text)
+            program = compile_program(chain, role, spec, folded)
+            planned.append((name, role, channel, scale, spec, program))
+    if refusals:
+        raise SignalError("; ".join(dict.fromkeys(refusals)))
+    whole = any(program.whole_pieces() for *_, program in planned)
+    lanes = []
+    for name, role, channel, scale, spec, program in planned:
+        warnings.extend(_short_pieces(chain, name, program, facts.pieces))
+        step_s = program.grid_step_s()
+        borders = tuple(bounds_s(piece, step_s, whole=whole) for piece in facts.pieces)
+        label = facts.signals[channel].label
+        lanes.append(Lane(name, role, channel, label, scale, spec, program, borders))
+    return Passage(
+        recording, sha256, chain, facts.pieces, conditions, tuple(lanes), tuple(warnings)
+    )
+
+
+def _short_pieces(
+    chain: Chain, signal: str, program: Program, pieces: tuple[Interval, ...]
+) -> list[str]:
+    response_s = max(
+        (
+            move.spec_out.response_s
+            for move in program.moves.values()
+            if isinstance(move.spec_out, SignalSpec)
+        ),
+        default=0.0,
+    )
+    return [
+        f"{chain.name}: piece {number} is {float(piece.length_s):g} s long, shorter than the "
+        f"response of its filters ({response_s:.3g} s above 1 %) (signal {signal})"
+        for number, piece in enumerate(pieces, start=1)
+        if float(piece.length_s) < response_s
+    ]

@@ -1,0 +1,71 @@
+"""A plan: a recipe and recordings, worked out to tasks."""
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+from waveassay.contract import SignalError
+from waveassay.contract.digests import digest
+from waveassay.plan.passage import Passage, passages
+from waveassay.plan.recordings import Found
+from waveassay.plan.tasks import Task, numerics, tasks_of
+from waveassay.recipe.model import Recipe
+from waveassay.recording import Facts
+
+
+@dataclass(frozen=True)
+class ReadRecording:
+    """What is known of a recording before it is computed on."""
+
+    sha256: str
+    facts: Facts
+
+
+@dataclass(frozen=True)
+class PlannedRecording:
+    """A recording with its tasks, or with why it cannot be run."""
+
+    found: Found
+    read: ReadRecording | None
+    passages: tuple[Passage, ...] = ()
+    tasks: tuple[Task, ...] = ()
+    warnings: tuple[str, ...] = ()
+    problem: str | None = None
+
+
+@dataclass(frozen=True)
+class Plan:
+    """What will be computed."""
+
+    recipe: Recipe
+    recordings: tuple[PlannedRecording, ...]
+
+
+def run_digest(recipe: Recipe, sha256_by_name: dict[str, str]) -> str:
+    """Return what two runs share when the second has nothing to compute."""
+    stages = sorted({(s.stage.name, s.stage.version) for _, _, s in recipe.steps()})
+    return digest(
+        {
+            "recipe": recipe.text,
+            "stages": [list(stage) for stage in stages],
+            "recordings": sha256_by_name,
+            "numerics": numerics(),
+        }
+    )
+
+
+def make_plan(
+    recipe: Recipe, found: Sequence[Found], read: Mapping[str, ReadRecording | SignalError]
+) -> Plan:
+    """Plan every recording; one that cannot be run carries its problem and stops no other."""
+    return Plan(recipe, tuple(_planned(recipe, item, read[item.name]) for item in found))
+
+
+def _planned(recipe: Recipe, found: Found, read: ReadRecording | SignalError) -> PlannedRecording:
+    if isinstance(read, SignalError):
+        return PlannedRecording(found, None, problem=str(read))
+    try:
+        ways, warnings = passages(recipe, found.name, read.sha256, read.facts)
+    except SignalError as error:
+        return PlannedRecording(found, read, problem=str(error))
+    tasks = tuple(task for way in ways for task in tasks_of(way))
+    return PlannedRecording(found, read, ways, tasks, warnings)

@@ -1,0 +1,307 @@
+"""Tasks: what is computed at once, each with the key of what it makes.
+
+``prepare``  filters, resamples and masks a stretch of every signal of a passage;
+``rows``     cuts epochs that start in a stretch, down to their features, and collects;
+``combine``  turns what a pass collected into what the next pass applies;
+``finish``   turns all rows of a passage into tables, averages and figures.
+
+A key is the digest of all that can change a byte of what a task makes, and of nothing else.
+"""
+
+from collections.abc import Iterable, Iterator
+from dataclasses import dataclass, field
+from fractions import Fraction
+from functools import lru_cache
+from importlib.metadata import version
+from typing import Any, Literal
+
+from waveassay.contract.digests import digest
+from waveassay.plan.passage import Lane, Passage
+from waveassay.plan.program import Level, Move
+from waveassay.plan.stretches import Stretch, aligned
+
+Action = Literal["prepare", "rows", "combine", "finish"]
+
+# Rough CPU seconds, only to balance jobs: they change no byte.
+_PREPARE_COST_S = 1.5e-7  # a sample and step
+_ROWS_COST_S = 1.0e-7  # a sample and step
+_TASK_COST_S = 0.01
+
+
+@dataclass(frozen=True)
+class Task:
+    """One task of a passage. ``needs`` are keys of tasks whose artefacts it reads."""
+
+    action: Action
+    recording: str
+    chain: str
+    pass_no: int
+    stretch: Stretch | None
+    key: str
+    needs: tuple[str, ...]
+    cost_s: float
+
+
+@lru_cache(maxsize=1)
+def numerics() -> dict[str, str]:
+    """Return the versions that can change a number."""
+    return {name: version(name) for name in ("waveassay", "numpy", "scipy")}
+
+
+@dataclass
+class _Planner:
+    """Makes a passage's tasks from the end backwards, so that only what is needed is planned."""
+
+    passage: Passage
+    tasks: dict[tuple[str, int, Stretch | None], Task] = field(default_factory=dict)
+
+    def finish(self) -> Task:
+        passes = range(self.passage.passes)
+        needs = [self.rows(p, s).key for p in passes for s in self._selected(p)]
+        needs += [self.combine(p).key for p in passes if p > 0]
+        identity = {
+            "recording": self.passage.recording,
+            "chain": self.passage.chain.name,
+            "pieces": [[p.start_s, p.stop_s] for p in self.passage.pieces],
+            "conditions": _conditions(self.passage),
+            "lanes": [
+                {
+                    **_lane(lane),
+                    "steps": [_step(m, named=True) for m in lane.program.moves.values()],
+                }
+                for lane in self.passage.lanes
+            ],
+        }
+        return self._task("finish", 0, None, identity, needs, 0.05)
+
+    def combine(self, pass_no: int) -> Task:
+        """Plan the state that pass ``pass_no`` applies."""
+        known = self.tasks.get(("combine", pass_no, None))
+        if known is not None:
+            return known
+        needs = [self.rows(pass_no - 1, s).key for s in self._selected(pass_no - 1)]
+        identity = {
+            "lanes": [
+                {**_lane(lane), "steps": [_step(m) for m in barriers(lane, pass_no)]}
+                for lane in self.passage.lanes
+            ]
+        }
+        return self._task("combine", pass_no, None, identity, needs, 0.05)
+
+    def rows(self, pass_no: int, stretch: Stretch) -> Task:
+        known = self.tasks.get(("rows", pass_no, stretch))
+        if known is not None:
+            return known
+        needs: list[str] = []
+        lanes = []
+        cost = 0.0
+        for lane in self.passage.lanes:
+            reach = lane.program.rows_reach()
+            start, stop = lane.bounds_s(stretch)
+            moves = rows_moves(lane, pass_no)
+            for p in range(pass_no + 1):
+                if lane.program.kept_signals(p) and lane.program.prepares(p):
+                    for other in overlapping(
+                        self.passage,
+                        lane,
+                        stretch.piece,
+                        start - reach.before_s,
+                        stop + reach.after_s,
+                    ):
+                        needs.append(self.prepare(p, other).key)
+            lanes.append(
+                {
+                    **_lane(lane),
+                    "bounds": [start, stop],
+                    "steps": [_step(m) for m in moves],
+                    "collected": [_step(m) for m in collected(lane, pass_no)],
+                }
+            )
+            cost += _samples(lane, start, stop) * max(1, len(moves)) * _ROWS_COST_S
+        needs += [self.combine(p).key for p in range(1, pass_no + 1)]
+        identity = {
+            "piece": _piece(self.passage, stretch),
+            "conditions": _conditions(self.passage),
+            "lanes": lanes,
+        }
+        return self._task("rows", pass_no, stretch, identity, needs, cost)
+
+    def prepare(self, pass_no: int, stretch: Stretch) -> Task:
+        known = self.tasks.get(("prepare", pass_no, stretch))
+        if known is not None:
+            return known
+        needs: list[str] = []
+        lanes = []
+        cost = 0.0
+        for lane in self.passage.lanes:
+            start, stop = lane.bounds_s(stretch)
+            low, high = window_s(self.passage, lane, pass_no, stretch)
+            moves = lane.program.samples_moves(pass_no)
+            for p in range(pass_no):
+                if lane.program.kept_signals(p) and lane.program.prepares(p):
+                    for other in overlapping(self.passage, lane, stretch.piece, low, high):
+                        needs.append(self.prepare(p, other).key)
+            lanes.append(
+                {
+                    **_lane(lane),
+                    "bounds": [start, stop],
+                    "window": [low, high],
+                    "steps": [_step(m) for m in moves],
+                    "kept": lane.program.kept_signals(pass_no),
+                }
+            )
+            cost += _samples(lane, low, high) * max(1, len(moves)) * _PREPARE_COST_S
+        needs += [self.combine(p).key for p in range(1, pass_no + 1)]
+        identity = {"piece": _piece(self.passage, stretch), "lanes": lanes}
+        return self._task("prepare", pass_no, stretch, identity, needs, cost)
+
+    def _selected(self, pass_no: int) -> Iterator[Stretch]:
+        """Yield the stretches a pass looks at: all, or those that meet a condition."""
+        everywhere = self.passage.passes > 1
+        for stretch in self.passage.stretches:
+            if everywhere or any(
+                _meets(self.passage, lane, stretch) for lane in self.passage.lanes
+            ):
+                yield stretch
+
+    def _task(
+        self,
+        action: Action,
+        pass_no: int,
+        stretch: Stretch | None,
+        identity: dict[str, Any],
+        needs: Iterable[str],
+        cost_s: float,
+    ) -> Task:
+        unique = tuple(dict.fromkeys(needs))
+        key = digest(
+            {
+                "action": action,
+                "pass": pass_no,
+                "numerics": numerics(),
+                "precision": "double",
+                "sha256": self.passage.sha256,
+                "needs": list(unique),
+                **identity,
+            }
+        )
+        task = Task(
+            action,
+            self.passage.recording,
+            self.passage.chain.name,
+            pass_no,
+            stretch,
+            key,
+            unique,
+            cost_s + _TASK_COST_S,
+        )
+        self.tasks[(action, pass_no, stretch)] = task
+        return task
+
+
+def tasks_of(passage: Passage) -> tuple[Task, ...]:
+    """Return the tasks of a passage, each after those that it needs; none without signals."""
+    if not passage.lanes:
+        return ()
+    planner = _Planner(passage)
+    planner.finish()
+    return tuple(planner.tasks.values())
+
+
+def rows_moves(lane: Lane, pass_no: int) -> list[Move]:
+    """Return the moves on rows that a pass computes: its own and those they rest on."""
+    return [
+        m for m in lane.program.moves.values() if m.level is Level.ROWS and m.pass_no <= pass_no
+    ]
+
+
+def barriers(lane: Lane, pass_no: int) -> list[Move]:
+    """Return the barriers whose state pass ``pass_no`` applies."""
+    return [
+        m
+        for m in lane.program.moves.values()
+        if m.barrier is not None and m.level is not Level.RECORDING and m.pass_no == pass_no
+    ]
+
+
+def gathers(lane: Lane, pass_no: int) -> list[Move]:
+    """Return the steps that need nothing but the whole and whose input this pass has first."""
+    return [
+        m
+        for m in lane.program.moves.values()
+        if m.gather is not None
+        and m.source is not None
+        and lane.program.moves[m.source].level is not Level.RECORDING
+        and lane.program.moves[m.source].pass_no == pass_no
+    ]
+
+
+def collected(lane: Lane, pass_no: int) -> list[Move]:
+    """Return the steps for which a pass collects: barriers of the next pass, and gathers."""
+    return [*barriers(lane, pass_no + 1), *gathers(lane, pass_no)]
+
+
+def window_s(
+    passage: Passage, lane: Lane, pass_no: int, stretch: Stretch
+) -> tuple[Fraction, Fraction]:
+    """Return what a stretch reads: itself and the context of the pass's steps on samples."""
+    piece = passage.pieces[stretch.piece]
+    reach = lane.program.samples_reach(pass_no)
+    start, stop = lane.bounds_s(stretch)
+    low = aligned(start - reach.before_s, piece, lane.program.grid_step_s())
+    return low, min(piece.stop_s, stop + reach.after_s)
+
+
+def overlapping(
+    passage: Passage, lane: Lane, piece: int, start_s: Fraction, stop_s: Fraction
+) -> list[Stretch]:
+    """Return the stretches of a piece that share time with an interval, for one signal."""
+    return [
+        stretch
+        for stretch in passage.stretches
+        if stretch.piece == piece
+        and lane.bounds_s(stretch)[0] < stop_s
+        and start_s < lane.bounds_s(stretch)[1]
+    ]
+
+
+def _meets(passage: Passage, lane: Lane, stretch: Stretch) -> bool:
+    start, stop = lane.bounds_s(stretch)
+    return any(c.start_s < stop and start < c.stop_s for c in passage.conditions)
+
+
+def _lane(lane: Lane) -> dict[str, Any]:
+    return {
+        "signal": lane.signal,
+        "channel": lane.channel,
+        "scale": lane.scale,
+        "unit": lane.spec.unit,
+        "modality": lane.spec.modality,
+        "rate_hz": lane.spec.rate_hz,
+    }
+
+
+def _step(move: Move, *, named: bool = False) -> dict[str, Any]:
+    known: dict[str, Any] = {
+        "index": move.index,
+        "source": move.source,
+        "stage": move.step.stage.name,
+        "version": move.step.stage.version,
+        "params": move.step.params.model_dump(mode="json"),
+    }
+    if named:
+        known |= {"name": move.step.name, "alias": move.step.alias}
+    return known
+
+
+def _conditions(passage: Passage) -> list[list[Any]]:
+    return [[c.name, c.start_s, c.stop_s] for c in passage.conditions]
+
+
+def _piece(passage: Passage, stretch: Stretch) -> list[Fraction]:
+    piece = passage.pieces[stretch.piece]
+    return [piece.start_s, piece.stop_s]
+
+
+def _samples(lane: Lane, start_s: Fraction, stop_s: Fraction) -> float:
+    return float((stop_s - start_s) * (lane.spec.rate_hz or 1))

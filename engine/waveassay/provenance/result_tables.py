@@ -1,0 +1,185 @@
+"""The tables of results: epochs, averages, summary, excluded time, and what every column means."""
+
+import shutil
+from collections.abc import Iterator, Mapping, Sequence
+from pathlib import Path
+from typing import Any
+
+from waveassay.plan.columns import FeatureColumn
+from waveassay.provenance.results import Result
+from waveassay.provenance.tables import Column, concat_parquet_to_csv, write_csv
+
+#: Above so many rows, the CSV of all recordings is written only when a recipe asks.
+CSV_ROWS = 1_000_000
+
+_SUMMARY = (
+    Column("recording", "text"),
+    Column("chain", "text"),
+    Column("signal", "text"),
+    Column("signal_2", "text"),
+    Column("condition", "text"),
+    Column("feature", "text"),
+    Column("unit", "text"),
+    Column("n", "count"),
+    Column("mean", "number"),
+    Column("sd", "number"),
+    Column("median", "number"),
+    Column("q25", "number"),
+    Column("q75", "number"),
+)
+_EXCLUDED = (
+    Column("recording", "text"),
+    Column("chain", "text"),
+    Column("signal", "text"),
+    Column("condition", "text"),
+    Column("reason", "text"),
+    Column("excluded_s", "number"),
+    Column("share_of_condition", "number"),
+)
+
+# Where the tables of each kind stand.
+_PLACES = {
+    "epochs": "epochs/{chain}",
+    "averages": "averages/{chain}",
+    "spectra": "averages/{chain}-spectra",
+}
+
+# Table -> column -> (unit, meaning): the columns that every run has.
+_MEANINGS: dict[str, dict[str, tuple[str, str]]] = {
+    "epochs": {
+        "recording": ("", "name of the recording: its path below the folder given"),
+        "signal": ("", "name of the signal"),
+        "signal_2": ("", "second signal, where a number is of a pair"),
+        "condition": ("", "condition that the epoch lies in entirely"),
+        "epoch": ("", "number of the epoch within its condition, from 0"),
+        "start_s": ("s", "start of the epoch, from the recording's start"),
+        "duration_s": ("s", "length of the epoch"),
+        "kept": ("", "whether the epoch was computed on"),
+        "reason": ("", "why it was not kept"),
+        "missing_reason": ("", "why a kept epoch lacks a feature"),
+    },
+    "averages": {
+        "recording": ("", "name of the recording: its path below the folder given"),
+        "signal": ("", "name of the signal"),
+        "signal_2": ("", "second signal, where a number is of a pair"),
+        "condition": ("", "condition averaged over"),
+        "epochs": ("", "how many kept epochs were averaged"),
+        "start_s": ("s", "start of the first epoch averaged"),
+        "duration_s": ("s", "from there to the end of the last"),
+        "kept": ("", "whether any epoch was kept"),
+        "reason": ("", "why there is no average"),
+        "missing_reason": ("", "why a feature is lacking"),
+    },
+    "spectra": {
+        "recording": ("", "name of the recording"),
+        "signal": ("", "name of the signal"),
+        "condition": ("", "condition averaged over"),
+        "step": ("", "step that averaged"),
+        "epochs": ("", "how many epochs were averaged"),
+        "dof": ("", "equivalent degrees of freedom of the average"),
+        "frequency_hz": ("Hz", "centre of the bin"),
+        "density": ("see unit", "one-sided power spectral density"),
+        "unit": ("", "unit of the density"),
+    },
+    "summary": {
+        "recording": ("", "name of the recording"),
+        "chain": ("", "chain of the recipe"),
+        "signal": ("", "name of the signal"),
+        "signal_2": ("", "second signal, where a number is of a pair"),
+        "condition": ("", "condition"),
+        "feature": ("", "column of the epoch table"),
+        "unit": ("", "unit of mean, sd, median and quartiles"),
+        "n": ("", "kept epochs that have a value"),
+        "mean": ("see unit", "arithmetic mean"),
+        "sd": ("see unit", "standard deviation, dividing by n - 1"),
+        "median": ("see unit", "median"),
+        "q25": ("see unit", "lower quartile, linear between order statistics"),
+        "q75": ("see unit", "upper quartile, linear between order statistics"),
+    },
+    "excluded": {
+        "recording": ("", "name of the recording"),
+        "chain": ("", "chain of the recipe"),
+        "signal": ("", "name of the signal"),
+        "condition": ("", "condition"),
+        "reason": ("", "why time is masked; 'gap' between pieces; 'any' for all of it together"),
+        "excluded_s": ("s", "masked time within the condition"),
+        "share_of_condition": ("1", "the same as a share of the condition's length"),
+    },
+}
+
+
+def write_result_tables(
+    folder: Path, columns: Mapping[str, Sequence[FeatureColumn]], results: Sequence[Result]
+) -> None:
+    """Write all tables of a run.
+
+    Parameters
+    ----------
+    columns : chain -> its feature columns.
+    results : in order of the recordings' names.
+    """
+    written = []
+    for chain in columns:
+        for kind, place in _PLACES.items():
+            path = folder / place.format(chain=chain)
+            if _wide_table(path, chain, results, f"{kind}.parquet"):
+                written.append((chain, kind))
+    write_csv(folder / "summary.csv", _SUMMARY, list(_rows(results, "summary")))
+    write_csv(folder / "excluded.csv", _EXCLUDED, list(_rows(results, "excluded")))
+    dictionary = list(_dictionary(columns, written))
+    names = ("table", "column", "unit", "meaning", "step")
+    write_csv(folder / "columns.csv", [Column(name, "text") for name in names], dictionary)
+
+
+def _rows(results: Sequence[Result], table: str) -> Iterator[list[Any]]:
+    for result in results:
+        for output in result.outputs:
+            yield from output.facts[table]
+
+
+def _wide_table(folder: Path, chain: str, results: Sequence[Result], file: str) -> bool:
+    """Copy every recording's table, and join them as CSV where they are few; tell if any is."""
+    paths: list[Path] = []
+    choices = set()
+    for result in results:
+        for output in result.outputs:
+            source = output.folder / file
+            if output.chain == chain and source.exists():
+                path = folder / f"{result.recording}.parquet"
+                path.parent.mkdir(parents=True, exist_ok=True)
+                shutil.copyfile(source, path)
+                paths.append(path)
+                choices.add(output.facts["csv"])
+    if not paths:
+        return False
+    limit = None if "always" in choices else CSV_ROWS
+    csv_path = folder.with_name(f"{folder.name}.csv")
+    if choices != {"never"} and (limit is None or _row_count(paths) < limit):
+        concat_parquet_to_csv(paths, csv_path)
+    return True
+
+
+def _row_count(paths: Sequence[Path]) -> int:
+    import pyarrow.parquet as pq
+
+    return sum(pq.read_metadata(path).num_rows for path in paths)
+
+
+def _dictionary(
+    columns: Mapping[str, Sequence[FeatureColumn]], written: Sequence[tuple[str, str]]
+) -> Iterator[list[str]]:
+    for chain, kind in written:
+        place = _PLACES[kind].format(chain=chain)
+        first, last = list(_MEANINGS[kind].items()), []
+        if kind != "spectra":
+            first, last = first[:-1], first[-1:]
+        for name, (unit, meaning) in first:
+            yield [place, name, unit, meaning, ""]
+        for column in columns[chain]:
+            if kind != "spectra" and column.averaged == (kind == "averages"):
+                yield [place, column.name, column.unit, column.meaning, column.step]
+        for name, (unit, meaning) in last:
+            yield [place, name, unit, meaning, ""]
+    for table in ("summary", "excluded"):
+        for name, (unit, meaning) in _MEANINGS[table].items():
+            yield [table, name, unit, meaning, ""]

@@ -1,0 +1,191 @@
+"""A run folder: begun, filled when the work is done, and closed by its manifest."""
+
+import csv
+import json
+import shutil
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import Any
+
+from waveassay.plan.columns import feature_columns
+from waveassay.provenance.files import machine_errors, write_text
+from waveassay.provenance.log import Log
+from waveassay.provenance.manifest import LOG, MANIFEST, read_manifest, write_manifest
+from waveassay.provenance.result_tables import write_result_tables
+from waveassay.provenance.results import Result
+from waveassay.provenance.tables import Column, write_csv
+from waveassay.recipe.canonical import parameters, resolved_yaml
+from waveassay.recipe.model import Recipe
+
+SOURCE, RESOLVED = "recipe.source.yaml", "recipe.resolved.yaml"
+RECORDINGS = "recordings.csv"
+
+_RECORDING_COLUMNS = (
+    Column("recording", "text"),
+    Column("path", "text"),
+    Column("sha256", "text"),
+    Column("start", "text"),
+    Column("duration_s", "number"),
+    Column("status", "text"),
+    Column("chain", "text"),
+    Column("step", "text"),
+    Column("message", "text"),
+)
+_PARAMETER_COLUMNS = tuple(
+    Column(name, "text") for name in ("step", "parameter", "value", "unit", "origin", "where")
+)
+_STEP_COLUMNS = (
+    Column("recording", "text"),
+    Column("chain", "text"),
+    Column("step", "text"),
+    Column("key", "text"),
+    Column("digest", "text"),
+    Column("reused", "flag"),
+    Column("environment", "text"),
+)
+
+
+@dataclass
+class RunFolder:
+    """The folder of one run, and its log."""
+
+    path: Path
+    log: Log
+
+    @classmethod
+    def open(cls, runs: Path, recipe: Recipe) -> "RunFolder":
+        """Go on with the newest unfinished run of the same recipe, or make a new folder."""
+        for folder in reversed(_folders(runs, recipe)):
+            if not (folder / MANIFEST).exists() and _same_recipe(folder, recipe):
+                _clear(folder)
+                return cls(folder, Log(folder / LOG))
+        stamp = datetime.now(UTC).strftime("%Y%m%dT%H%M%SZ")
+        name = f"{recipe.name}-{recipe.edition}-{stamp}"
+        for number in range(1, 1000):
+            folder = runs / (name if number == 1 else f"{name}-{number}")
+            with machine_errors(folder):
+                try:
+                    folder.mkdir(parents=True)
+                except FileExistsError:
+                    continue
+            write_text(folder / SOURCE, recipe.text)
+            return cls(folder, Log(folder / LOG))
+        raise RuntimeError(f"{runs}: a thousand runs in one second")
+
+    def begin(
+        self, run_digest: str, environment: dict[str, Any], *, workers: int, recordings: int
+    ) -> None:
+        """Write what is known before anything is computed."""
+        text = json.dumps(environment, indent=1, ensure_ascii=False)
+        write_text(self.path / "environment.json", text + "\n")
+        self.log.append(
+            "run_started", run_digest=run_digest, workers=workers, recordings=recordings
+        )
+
+    def complete(
+        self, recipe: Recipe, results: Sequence[Result], steps: Iterable[Sequence[Any]]
+    ) -> str:
+        """Write every table and figure, then the manifest; return the results digest."""
+        write_text(self.path / RESOLVED, resolved_yaml(recipe))
+        self._write_parameters(recipe)
+        self._write_recordings(results)
+        write_csv(self.path / "steps.csv", _STEP_COLUMNS, list(steps))
+        columns = {c.name: feature_columns(c, recipe.signals) for c in recipe.chains.values()}
+        with machine_errors(self.path):
+            write_result_tables(self.path, columns, results)
+            _copy_figures(self.path, results)
+        for result in results:
+            self.log.append(
+                "recording",
+                recording=result.recording,
+                sha256=result.sha256,
+                status=result.status,
+                chain=result.chain,
+                step=result.step,
+                message=result.message,
+            )
+        failed = sum(result.status == "failed" for result in results)
+        self.log.append("run_finished", recipe_digest=recipe.digest, failed=failed)
+        self.log.close()
+        return write_manifest(self.path, self.log.head).results_digest
+
+    def _write_parameters(self, recipe: Recipe) -> None:
+        rows = [
+            [row.step, row.parameter, row.value, row.unit, row.origin, row.where]
+            for row in parameters(recipe)
+        ]
+        write_csv(self.path / "parameters.csv", _PARAMETER_COLUMNS, rows)
+
+    def _write_recordings(self, results: Sequence[Result]) -> None:
+        names = [column.name for column in _RECORDING_COLUMNS]
+        rows = [[getattr(result, name) for name in names] for result in results]
+        write_csv(self.path / RECORDINGS, _RECORDING_COLUMNS, rows)
+
+
+def finished_run(
+    runs: Path, recipe: Recipe, run_digest: str
+) -> tuple[Path, list[Result], str] | None:
+    """Return the newest finished run that a new one would only repeat: folder, results, digest.
+
+    One in which a recording failed is not taken: a new run tries that recording again.
+    """
+    for folder in reversed(_folders(runs, recipe)):
+        if not (folder / MANIFEST).exists() or not _same_recipe(folder, recipe):
+            continue
+        lines = (folder / LOG).read_text(encoding="utf-8").splitlines()
+        events = [json.loads(line) for line in lines]
+        started = [event for event in events if event["event"] == "run_started"]
+        ended = [event for event in events if event["event"] == "run_finished"]
+        if started and ended and started[-1]["run_digest"] == run_digest:
+            if ended[-1]["failed"]:
+                return None
+            digest = read_manifest(folder).results_digest
+            return folder, _read_results(folder), digest
+    return None
+
+
+def _read_results(folder: Path) -> list[Result]:
+    with (folder / RECORDINGS).open(encoding="utf-8", newline="") as file:
+        return [
+            Result(**{**row, "duration_s": float(row["duration_s"] or "nan")})  # type: ignore[arg-type]
+            for row in csv.DictReader(file)
+        ]
+
+
+def _folders(runs: Path, recipe: Recipe) -> list[Path]:
+    prefix = f"{recipe.name}-{recipe.edition}-"
+    if not runs.is_dir():
+        return []
+    return sorted(path for path in runs.iterdir() if path.name.startswith(prefix) and path.is_dir())
+
+
+def _same_recipe(folder: Path, recipe: Recipe) -> bool:
+    try:
+        return (folder / SOURCE).read_text(encoding="utf-8") == recipe.text
+    except (OSError, UnicodeDecodeError):
+        return False
+
+
+def _clear(folder: Path) -> None:
+    """Remove what a run that was cut off had written, but its recipe and its log."""
+    for path in folder.iterdir():
+        if path.name not in (SOURCE, LOG):
+            shutil.rmtree(path) if path.is_dir() else path.unlink()
+
+
+def _copy_figures(folder: Path, results: Sequence[Result]) -> None:
+    rows = []
+    for result in results:
+        for output in result.outputs:
+            for figure in output.facts["figures"]:
+                name = "-".join((figure["signal"], figure["step"], figure["show"]))
+                safe = "".join(c if c.isalnum() or c in "-_." else "_" for c in name)
+                path = Path("figures", output.chain, result.recording, f"{safe}.png")
+                (folder / path).parent.mkdir(parents=True, exist_ok=True)
+                shutil.copyfile(output.folder / figure["file"], folder / path)
+                rows.append([path.as_posix(), figure["caption"]])
+    if rows:
+        columns = (Column("figure", "text"), Column("caption", "text"))
+        write_csv(folder / "figures" / "captions.csv", columns, rows)

@@ -1,0 +1,1 @@
+"""Ways of cutting a signal into epochs."""

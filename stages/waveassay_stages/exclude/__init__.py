@@ -1,0 +1,1 @@
+"""Masks: time that is not to be used, with the reason. No sample is changed."""

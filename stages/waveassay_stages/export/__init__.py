@@ -1,0 +1,1 @@
+"""What leaves the pipeline: tables and figures. The engine writes the files."""

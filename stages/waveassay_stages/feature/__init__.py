@@ -1,0 +1,1 @@
+"""Numbers drawn from spectra, and from the epochs of a pulse wave."""

@@ -1,0 +1,1 @@
+"""Spectral densities of epochs, and their averages."""

@@ -1,0 +1,171 @@
+"""What the estimators share: detrending, transforms in blocks, one-sided density, specs."""
+
+from collections.abc import Iterable
+from fractions import Fraction
+from functools import lru_cache
+from typing import Literal
+
+import numpy as np
+
+from waveassay.contract import Epochs, EpochsSpec, Findings, Floats, Spectra, SpectraSpec, exact
+
+Detrend = Literal["none", "constant", "linear"]
+ZeroPadding = Literal["none", "next_power_of_two", "twice", "four_times"]
+
+DETREND_TEXT = "What is subtracted first: nothing, the mean, or the least-squares line."
+PADDING_TEXT = (
+    "Zeros added before the transform: bins stand closer, and the resolution stays what it was."
+)
+
+#: Fewer samples make no spectrum worth the name.
+FEWEST_SAMPLES = 8
+#: Samples worked on at once: small enough for a processor's cache. No number depends on it.
+BLOCK_SAMPLES = 32768
+
+
+def samples_in(length_s: float, rate_hz: Fraction) -> int:
+    """Return the nearest whole number of samples in a time."""
+    return round(exact(length_s) * rate_hz)
+
+
+def transform_length(samples: int, padding: ZeroPadding) -> int:
+    """Return the length of the transform after zero padding."""
+    if padding == "twice":
+        return 2 * samples
+    if padding == "four_times":
+        return 4 * samples
+    if padding == "next_power_of_two":
+        return 1 << max(0, samples - 1).bit_length()
+    return samples
+
+
+@lru_cache(maxsize=32)
+def bin_centres_hz(rate_hz: Fraction, n_fft: int) -> Floats:
+    """Return ``k fs / N`` for k = 0 .. floor(N / 2), Hz, each rounded once; read-only."""
+    spacing = rate_hz / n_fft
+    centres = np.array([float(k * spacing) for k in range(n_fft // 2 + 1)])
+    centres.flags.writeable = False
+    return centres
+
+
+def as_rate(rate_hz: float | Fraction) -> Fraction:
+    """Return an exact rate: a float stands for the decimal that a person wrote."""
+    return rate_hz if isinstance(rate_hz, Fraction) else exact(rate_hz)
+
+
+def scaled(taper: Floats, rate_hz: Fraction, share: float = 1.0) -> Floats:
+    """Return a taper whose squared transform is its share of the one-sided density.
+
+    The factor is ``sqrt(2 share / (fs sum(w^2)))``: 2 for one side, fs for density per Hz,
+    ``sum(w^2)`` for the taper's own energy.
+    """
+    energy = float(np.sum(taper * taper))
+    return np.asarray(taper * np.sqrt(2 * share / (float(rate_hz) * energy)), np.float64)
+
+
+def _remove_trend(x: Floats, how: Detrend) -> None:
+    """Take the trend out of each row, in place."""
+    if how == "none":
+        return
+    x -= np.mean(x, axis=-1, keepdims=True)
+    if how == "linear":
+        n = x.shape[-1]
+        t = np.arange(n) - (n - 1) / 2
+        slope = np.sum(x * t, axis=-1, keepdims=True) / (n * (n * n - 1) / 12)
+        x -= slope * t
+
+
+def density(x: Floats, tapers: Iterable[Floats], n_fft: int, detrend: Detrend) -> Floats:
+    r"""Return the one-sided density of each row, shape (rows, n_fft // 2 + 1).
+
+    .. math:: P[r, q] = c_q \sum_k \Bigl| \sum_n h_{k,n} x_{r,n} e^{-2 \pi i q n / N} \Bigr|^2
+
+    with tapers ``h`` from `scaled`; ``c`` is 1, but 1/2 at 0 Hz and, for even N, at the Nyquist
+    frequency, which have no mirror image. Tapers are summed in their order.
+
+    Every row is worked on alone, so neither the other rows nor the block size change a bit of it.
+
+    Parameters
+    ----------
+    x : shape (rows, n), any unit; not written. May be a view.
+    tapers : each of shape (n,).
+    n_fft : N, at least n; zeros make up the difference.
+    detrend : what is taken out of each row first.
+    """
+    from scipy import fft
+
+    rows, n = x.shape
+    out = np.empty((rows, n_fft // 2 + 1))
+    step = max(1, BLOCK_SAMPLES // n_fft)
+    plain = np.empty((step, n))
+    tapered = np.zeros((step, n_fft))
+    for first in range(0, rows, step):
+        total = out[first : first + step]
+        count = total.shape[0]
+        part = plain[:count]
+        part[...] = x[first : first + step]
+        _remove_trend(part, detrend)
+        for k, taper in enumerate(tapers):
+            np.multiply(part, taper, out=tapered[:count, :n])
+            squares = fft.rfft(tapered[:count], axis=-1).view(np.float64)
+            np.square(squares, out=squares)
+            power = np.add(squares[:, 0::2], squares[:, 1::2], out=None if k else total)
+            if k:
+                total += power
+    out[:, 0] *= 0.5
+    if n_fft % 2 == 0:
+        out[:, -1] *= 0.5
+    return out
+
+
+def as_spectra(
+    epochs: Epochs, freq_hz: Floats, kept_density: Floats, resolution_hz: float, dof: float
+) -> Spectra:
+    """Put the densities of the kept epochs among the others, which are NaN."""
+    rows = epochs.rows
+    full = np.full((len(rows), freq_hz.size), np.nan)
+    full[rows.kept] = kept_density
+    return Spectra(
+        signal=epochs.signal.name,
+        unit=epochs.signal.unit,
+        rows=rows,
+        freq_hz=freq_hz,
+        density=full,
+        resolution_hz=resolution_hz,
+        dof=np.where(rows.kept, dof, np.nan),
+    )
+
+
+def spectra_spec(
+    given: EpochsSpec, window_s: float, resolution_hz: float | None, padding: ZeroPadding
+) -> SpectraSpec:
+    """Return what comes out of a transform of ``window_s``; None for what the rate decides."""
+    rate_hz = given.signal.rate_hz
+    bin_hz = top_hz = None
+    if rate_hz is not None:
+        n_fft = transform_length(max(1, samples_in(window_s, rate_hz)), padding)
+        bin_hz, top_hz = float(rate_hz / n_fft), float(n_fft // 2 * rate_hz / n_fft)
+    return SpectraSpec(
+        signal=given.signal,
+        window_s=window_s,
+        resolution_hz=resolution_hz,
+        bin_hz=bin_hz,
+        top_hz=top_hz,
+    )
+
+
+def refuse_too_short(
+    what: str, length_s: float, given: EpochsSpec, findings: Findings, at: str = ""
+) -> None:
+    """Refuse an epoch or a segment of too few samples, where the rate is known."""
+    rate_hz = given.signal.rate_hz
+    if rate_hz is None:
+        return
+    count = samples_in(length_s, rate_hz)
+    if count < FEWEST_SAMPLES:
+        findings.refuse(
+            f"{what} of {length_s:g} s has {count} samples at {float(rate_hz):g} Hz; a spectrum "
+            f"needs at least {FEWEST_SAMPLES}, so make it at least "
+            f"{float(FEWEST_SAMPLES / rate_hz):g} s long",
+            at,
+        )
