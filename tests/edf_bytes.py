@@ -109,9 +109,9 @@ def build(
 
 
 def stored(signal: Sig, records: int) -> list[int]:
-    """Return a signal's stored values: its data, or the default, a count from 1."""
+    """Return a signal's stored values: its data, or the default, a count from 1 to 30,000."""
     size = records * int(signal.spr)
-    return list(signal.data) if signal.data is not None else list(range(1, size + 1))
+    return list(signal.data) if signal.data is not None else [_count(i) for i in range(size)]
 
 
 def _record(signals: Sequence[Sig], record: int, width: int, tals: Tals | None) -> bytes:
@@ -128,12 +128,16 @@ def _record(signals: Sequence[Sig], record: int, width: int, tals: Tals | None) 
         size = int(signal.spr) if str(signal.spr).lstrip("-").isdigit() else 0
         first = record * size
         values = (
-            range(first + 1, first + size + 1)
+            [_count(i) for i in range(first, first + size)]
             if signal.data is None
             else signal.data[first : first + size]
         )
         parts += [value.to_bytes(width, "little", signed=True) for value in values]
     return b"".join(parts)
+
+
+def _count(index: int) -> int:
+    return index % 30_000 + 1
 
 
 def _or(value: Value | None, default: Value) -> Value:

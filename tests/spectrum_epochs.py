@@ -2,6 +2,7 @@
 
 from collections.abc import Sequence
 from fractions import Fraction
+from typing import TypeVar
 
 import numpy as np
 
@@ -11,11 +12,19 @@ from waveassay.contract import (
     Findings,
     Floats,
     Interval,
+    Params,
     Rows,
     Signal,
     SignalSpec,
     Spectra,
 )
+
+P = TypeVar("P", bound=Params)
+
+
+def params_of(kind: type[P], **values: object) -> P:
+    """Return parameters from what a recipe would say."""
+    return kind.model_validate(values)
 
 
 def epochs_of(

@@ -74,7 +74,7 @@ def kaiser_beta(attenuation_db: float) -> float:
     if attenuation_db > 50:
         return 0.1102 * (attenuation_db - 8.7)
     if attenuation_db >= 21:
-        return 0.5842 * (attenuation_db - 21) ** 0.4 + 0.07886 * (attenuation_db - 21)
+        return float(0.5842 * (attenuation_db - 21) ** 0.4 + 0.07886 * (attenuation_db - 21))
     return 0.0
 
 

@@ -2,11 +2,11 @@
 
 import numpy as np
 import pytest
-from check_values import entry
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
-from spectrum_epochs import spectra_of
 
+from check_values import entry
+from spectrum_epochs import spectra_of
 from waveassay.contract.statistics import confidence_factors
 from waveassay_stages.spectrum._windows import WindowName, overlap_correlation, window
 from waveassay_stages.spectrum.average import (
@@ -75,6 +75,7 @@ def test_confidence_factors(dof: int) -> None:
     assert confidence_factors(dof, 0.95) == pytest.approx(expected, abs=check.tolerance["abs"])
 
 
+@settings(deadline=None)
 @given(seed=st.integers(0, 2**32 - 1), n=st.integers(8, 700), padded=st.booleans())
 def test_parseval(seed: int, n: int, padded: bool) -> None:
     """C05: Parseval, for a rectangle of any length, padded or not."""

@@ -5,8 +5,8 @@ from typing import Any
 
 import numpy as np
 import pytest
-from check_values import entry
 
+from check_values import entry
 from waveassay.contract import Floats, exact
 from waveassay.contract.statistics import confidence_factors
 from waveassay_stages.spectrum._slepian import slepian_tapers
@@ -40,26 +40,31 @@ def test_eigenvalues_of_the_continuous_problem(key: str) -> None:
 
 
 def spectral_window(length_s: int, time_bandwidth: int) -> tuple[Floats, Floats]:
-    """Return frequency (Hz, from the tone) and share of a tone's power, by the stage."""
-    rate, tone_hz, lengthened = 256, 64, 16
+    """Return frequency (Hz, from a tone) and density of the tone's unit power, by the stage.
+
+    The tone is moved between bins, which samples the window more finely than padding alone, and
+    given both phases, whose mean is free of the tone's mirror image at negative frequency.
+    """
+    rate, tone_hz, places = 256, 64, 16
     n = np.arange(rate * length_s)
-    x = np.sqrt(2) * np.cos(2 * np.pi * tone_hz * n / rate)
-    half_bandwidth = Fraction(time_bandwidth, length_s)
-    bins: list[Floats] = []
-    shares: list[Floats] = []
-    # Moving the tone between bins samples its spectral window more finely than padding allows.
-    for k in range(lengthened):
-        shift = k / (4 * length_s * lengthened)
-        moved = np.cos(2 * np.pi * (tone_hz + shift) * n / rate) * np.sqrt(2)
-        freq, density = multitaper(
-            moved[None], rate, half_bandwidth_hz=half_bandwidth, zero_padding="four_times"
+    from_tone: list[Floats] = []
+    densities: list[Floats] = []
+    for k in range(places):
+        moved_hz = tone_hz + k / (4 * length_s * places)
+        angle = 2 * np.pi * moved_hz * n / rate
+        x = np.sqrt(2) * np.stack([np.cos(angle), np.sin(angle)])
+        freq_hz, density = multitaper(
+            x,
+            rate,
+            half_bandwidth_hz=Fraction(time_bandwidth, length_s),
+            detrend="none",
+            zero_padding="four_times",
         )
-        bins.append(freq - tone_hz - shift)
-        shares.append(density[0])
-    assert np.mean(x * x) == pytest.approx(1)
-    freq_hz, share = np.concatenate(bins), np.concatenate(shares)
-    order = np.argsort(freq_hz)
-    return freq_hz[order], share[order]
+        from_tone.append(freq_hz - moved_hz)
+        densities.append(np.mean(density, axis=0))
+    offset, share = np.concatenate(from_tone), np.concatenate(densities)
+    order = np.argsort(offset)
+    return offset[order], share[order]
 
 
 @pytest.mark.parametrize(("length_s", "time_bandwidth"), [(2, 3), (4, 2)])

@@ -4,8 +4,8 @@ from typing import Any
 
 import numpy as np
 import pytest
-from check_values import entry
 
+from check_values import entry
 from waveassay.contract import Floats
 from waveassay_stages.spectrum._windows import (
     WINDOW_NAMES,
@@ -60,9 +60,12 @@ def gain(w: Floats, bins: Floats) -> Floats:
 
 
 def side_lobe_db(w: Floats) -> float:
-    """Return the highest level beyond the main lobe's first minimum, dB below its top."""
+    """Return how far below the main lobe the highest side lobe lies, dB.
+
+    The main lobe ends at the first minimum below -10 dB: a flat top has ripples above that.
+    """
     level = np.abs(np.fft.rfft(w, 64 * w.size))[: 64 * 40] / np.sum(w)
-    first_minimum = int(np.argmax(np.diff(level) > 0))
+    first_minimum = int(np.argmax((np.diff(level) > 0) & (level[:-1] < 10**-0.5)))
     return float(-20 * np.log10(np.max(level[first_minimum:])))
 
 

@@ -106,19 +106,24 @@ def test_lines_added_behind_the_end_are_found_by_the_count(tmp_path: Path) -> No
     assert (verdict.broken_line, verdict.fault) == (2, LogFault.INSERTED)
 
 
-def forged(lines: Lines, number: int, link: Callable[[int], str]) -> bytes:
+def forged(lines: Lines, number: int, link: Callable[[int], str], **changes: object) -> bytes:
     record = {**json.loads(lines[number - 1]), "event": "forged", "previous": link(number)}
+    record.update(changes)
     return json.dumps(record, sort_keys=True, separators=(",", ":")).encode() + b"\n"
 
 
 @pytest.mark.parametrize("number", range(1, COUNT + 1))
-@pytest.mark.parametrize("kind", ["fitting", "unfitting", "junk", "empty", "two"])
+@pytest.mark.parametrize(
+    "kind", ["fitting", "numbered", "dated", "unfitting", "junk", "empty", "two"]
+)
 def test_inserted_lines(lines: Lines, number: int, kind: str) -> None:
     def fitting(number: int) -> str:
         return FIRST if number == 1 else hashlib.sha256(lines[number - 2]).hexdigest()
 
     added = {
         "fitting": lambda: [forged(lines, number, fitting)],
+        "numbered": lambda: [forged(lines, number, fitting, sequence=99)],
+        "dated": lambda: [forged(lines, number, fitting, time="2001-01-01T00:00:00+00:00")],
         "unfitting": lambda: [forged(lines, number, lambda _: "ab" * 32)],
         "junk": lambda: [b"not a line\n"],
         "empty": lambda: [b"\n"],

@@ -83,6 +83,16 @@ def test_whole_seconds_hide_no_gap(tmp_path: Path) -> None:
     assert [piece.start_s for piece in facts.pieces] == [0, 3]
 
 
+def test_rounding_does_not_add_up(tmp_path: Path) -> None:
+    """Four records of 0.25 s may start at one whole second; one of 0.03 s a second may not."""
+    whole = ["+0", "+0", "+1", "+1", "+1", "+1", "+2", "+2"]
+    assert lengths(facts_of(tmp_path, whole, duration="0.25")) == [2]
+    apart = [f"+{i}" for i in range(40)]
+    facts = facts_of(tmp_path, apart, duration="0.033333", kind="EDF+D")
+    assert len(facts.pieces) == 20
+    assert facts.duration_s > 38
+
+
 def test_a_duration_with_too_few_decimals_drifts_without_a_gap(tmp_path: Path) -> None:
     """A 1/30 s record stated as 0.033333 s: 10 ppm, so 1,500 records are off by 0.5 ms."""
     onsets = [f"+{i / 30:.7f}" for i in range(1501)]

@@ -49,7 +49,8 @@ def pressure(seconds: int = 6) -> WrittenSignal:
 
 
 def step_of(one: WrittenSignal, bits: int) -> float:
-    return abs(one.physical_max - one.physical_min) / (2**bits - 1)
+    levels: int = (1 << bits) - 1
+    return abs(one.physical_max - one.physical_min) / levels
 
 
 def read_back(path: Path) -> tuple[Any, list[list[Floats]]]:

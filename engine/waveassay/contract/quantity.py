@@ -80,6 +80,7 @@ def unit_factor(given: str, wanted: str) -> Fraction:
 
     registry = _registry()
     try:
+        nothing = registry.Quantity(Fraction(0), given).to(wanted).magnitude
         magnitude = registry.Quantity(Fraction(1), given).to(wanted).magnitude
     except pint.UndefinedUnitError:
         raise UnitError(f"'{given}' is not a known unit") from None
@@ -87,6 +88,8 @@ def unit_factor(given: str, wanted: str) -> Fraction:
         raise UnitError(f"'{given}' cannot be turned into '{wanted}'") from None
     except Exception:  # pint's parser raises whatever its tokenizer meets
         raise UnitError(f"'{given}' is not a known unit") from None
+    if nothing != 0:  # degrees Celsius and kelvin: no factor turns one into the other
+        raise UnitError(f"'{given}' cannot be turned into '{wanted}'")
     return Fraction(magnitude)
 
 

@@ -30,8 +30,7 @@ def write_volunteer(path: Path, one: Volunteer) -> None:
     """Write one recording."""
     number = study.VOLUNTEERS.index(one)
     site = one.site
-    eeg = [_eeg(one, (SEED, number, side)) for side in (1, 2)]
-    _take_off(eeg[1], one)
+    eeg = [_eeg(one, (SEED, number, 1)), _eeg(one, (SEED, number, 2), comes_off=True)]
     values = [eeg[0] / site.uv_per_unit, eeg[1] / site.uv_per_unit, _pressure(one, number)]
     labels = (site.left, site.right, site.artery)
     limits = ((-site.limit, site.limit), (-site.limit, site.limit), (-50.0, 300.0))
@@ -66,16 +65,19 @@ def _recorded(one: Volunteer, rate_hz: int) -> Bools:
     return ~_within(_time_s(one, rate_hz), one.gap_s)
 
 
-def _eeg(one: Volunteer, seed: tuple[int, ...]) -> Floats:
+def _eeg(one: Volunteer, seed: tuple[int, ...], *, comes_off: bool = False) -> Floats:
     """Return one EEG signal, uV: slow and alpha waves that change, on a background that does not.
 
-    The alpha waves of baseline and of sedation are two noises, since their peaks differ.
+    The planted powers are exact over what is recorded while the electrode is on. The alpha waves
+    of baseline and of sedation are two noises, since their peaks differ.
     """
     rate_hz = one.site.rate_hz
     time_s = _time_s(one, rate_hz)
-    recorded = _recorded(one, rate_hz)
+    flat, mains = (
+        _within(time_s, span if comes_off else None) for span in (one.flat_s, one.mains_s)
+    )
     baseline = _within(time_s, study.BASELINE_S)
-    sedation = _within(time_s, one.sedation_s) & recorded
+    sedation = _within(time_s, one.sedation_s) & _recorded(one, rate_hz) & ~flat & ~mains
     low_hz, high_hz = study.BACKGROUND_HZ
     total = noise(falling(study.BACKGROUND, low_hz, high_hz), rate_hz, time_s.size, (*seed, 0))
     shape = hill(study.SLOW_HZ, study.SLOW_HALF_WIDTH_HZ)
@@ -89,15 +91,10 @@ def _eeg(one: Volunteer, seed: tuple[int, ...]) -> Floats:
             one.alpha_uv2[1] if condition == 1 else 0.0,
         )
         total += alpha * with_power(alpha, baseline, sedation, powers)
+    # An electrode that has come off leaves nothing, then mains.
+    total[flat] = 0.0
+    total[mains] = study.MAINS_UV * np.sin(2 * np.pi * ((study.MAINS_HZ * time_s[mains]) % 1.0))
     return total
-
-
-def _take_off(x: Floats, one: Volunteer) -> None:
-    """Put in what an electrode that came off leaves: nothing, then mains."""
-    time_s = _time_s(one, one.site.rate_hz)
-    x[_within(time_s, one.flat_s)] = 0.0
-    mains = _within(time_s, one.mains_s)
-    x[mains] = study.MAINS_UV * np.sin(2 * np.pi * ((study.MAINS_HZ * time_s[mains]) % 1.0))
 
 
 def _pressure(one: Volunteer, number: int) -> Floats:

@@ -12,7 +12,7 @@ from waveassay.plan.program import Program, compile_program
 from waveassay.plan.stretches import Stretch, bounds_s
 from waveassay.recipe.fold import fold
 from waveassay.recipe.model import Chain, Recipe
-from waveassay.recording import Facts
+from waveassay.recording import Facts, SignalFacts
 
 
 @dataclass(frozen=True)
@@ -114,11 +114,11 @@ def _passage(
 ) -> Passage:
     refusals: list[str] = []
     warnings: list[str] = []
-    planned: list[tuple[str, str, int, float, SignalSpec, Program]] = []
+    planned: list[tuple[str, str, SignalFacts, float, SignalSpec, Program]] = []
     for role in chain.signals:
         rule = recipe.signals[role]
-        for name, channel in matched[role]:
-            file_signal = facts.signals[channel]
+        for name, place in matched[role]:
+            file_signal = facts.signals[place]
             scale = unit_scale(rule.unit, file_signal.unit, file_signal.label)
             spec = SignalSpec(name, rule.unit, rule.modality, file_signal.rate_hz)
             folded = fold(chain, spec, rule=role)
@@ -127,17 +127,18 @@ def _passage(
                 text = f"{chain.name}.{step.name}: {finding.message} (signal {name})"
                 (refusals if finding.severity == "error" else warnings).append(text)
             program = compile_program(chain, role, spec, folded)
-            planned.append((name, role, channel, scale, spec, program))
+            planned.append((name, role, file_signal, scale, spec, program))
     if refusals:
         raise SignalError("; ".join(dict.fromkeys(refusals)))
     whole = any(program.whole_pieces() for *_, program in planned)
     lanes = []
-    for name, role, channel, scale, spec, program in planned:
+    for name, role, file_signal, scale, spec, program in planned:
         warnings.extend(_short_pieces(chain, name, program, facts.pieces))
         step_s = program.grid_step_s()
         borders = tuple(bounds_s(piece, step_s, whole=whole) for piece in facts.pieces)
-        label = facts.signals[channel].label
-        lanes.append(Lane(name, role, channel, label, scale, spec, program, borders))
+        lanes.append(
+            Lane(name, role, file_signal.index, file_signal.label, scale, spec, program, borders)
+        )
     return Passage(
         recording, sha256, chain, facts.pieces, conditions, tuple(lanes), tuple(warnings)
     )

@@ -53,7 +53,7 @@ class _Resolver:
         steps: list[Step | None] = []
         for index, step in enumerate(read):
             steps.append(self._one(index, step))
-            if step.stage is None or self.outputs[index].given is None:
+            if step.stage is None or step.crowded or self.outputs[index].given is None:
                 self.uncertain = True
         return steps
 
@@ -187,7 +187,7 @@ class _Resolver:
         report, where = self.report, f"{self.chain}.{step.name}"
         if named is not None:
             kind = self.outputs[named].given
-            if kind is not None and kind not in kinds:
+            if kind is not None and (kind not in kinds or kind in SINKS):
                 place = next(p for n, p in step.on if n not in self.signals)
                 message = (
                     f"{self.read[named].name} gives {_kind(kind)}, "
@@ -226,7 +226,8 @@ class _Resolver:
 
 
 def _kind(kind: Kind) -> str:
-    return {Kind.AVERAGES: "averaged spectra"}.get(kind, str(kind))
+    names = {Kind.AVERAGES: "averaged spectra", Kind.TABLE: "a table", Kind.FIGURE: "a figure"}
+    return names.get(kind, str(kind))
 
 
 def _listed(names: Sequence[str], word: str) -> str:

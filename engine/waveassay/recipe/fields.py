@@ -117,7 +117,8 @@ class Leaf:
 
 def leaves(params: BaseModel) -> Iterator[Leaf]:
     """Yield every parameter, defaults included, in the order of the class."""
-    yield from _leaves(type(params), params, plain(params), ())
+    if shown := plain(params):
+        yield from _leaves(type(params), params, shown, ())
 
 
 def _leaves(owner: Any, value: Any, shown: Any, loc: Loc) -> Iterator[Leaf]:

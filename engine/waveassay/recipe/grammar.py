@@ -127,7 +127,7 @@ def read_signals(sections: Sections, report: Report) -> dict[str, SignalRule | N
                 require_known_unit(rule.unit)
             except UnitError as error:
                 place = places_below(node, report.path)["unit"]
-                report.error(place, "R205", f"{error} (found {rule.unit})", f"{where}.unit")
+                report.error(place, "R205", str(error), f"{where}.unit")
                 rule = None
         rules[name] = rule
     return rules

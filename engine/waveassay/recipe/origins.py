@@ -7,7 +7,7 @@ from typing import Any
 import yaml
 from pydantic import BaseModel
 
-from waveassay.recipe.fields import leaves, plain
+from waveassay.recipe.fields import Loc, leaves, plain
 from waveassay.recipe.model import ConditionRule, Origin, Place, SignalRule, Step
 from waveassay.recipe.plain_words import validated
 from waveassay.recipe.problems import Problem, Report, nearest
@@ -50,13 +50,13 @@ def split_address(address: str, steps: Mapping[str, Addressed]) -> tuple[str, st
     return step, address[len(step) + 1 :]
 
 
-def parameter_names(params: BaseModel) -> list[str]:
+def parameter_names(params: BaseModel) -> dict[str, Loc]:
     """Return every address within parameters: each leaf, and what holds it."""
-    names: dict[str, None] = {}
+    names: dict[str, Loc] = {}
     for leaf in leaves(params):
         for depth in range(1, len(leaf.loc) + 1):
-            names[".".join(map(str, leaf.loc[:depth]))] = None
-    return list(names)
+            names[".".join(map(str, leaf.loc[:depth]))] = leaf.loc[:depth]
+    return names
 
 
 def read_origins(
@@ -99,7 +99,7 @@ def read_origins(
             )
             report.error(at, "R107", message, where)
         elif origin is not None:
-            _check_alternatives(origin, node, parameter, params, where, report)
+            _check_alternatives(origin, node, known[parameter], params, where, report)
     return origins
 
 
@@ -115,7 +115,7 @@ def _everything(steps: Mapping[str, Addressed]) -> list[str]:
 def _check_alternatives(
     origin: Origin,
     node: yaml.Node,
-    parameter: str,
+    loc: Loc,
     params: BaseModel,
     where: str,
     report: Report,
@@ -131,24 +131,24 @@ def _check_alternatives(
             for item in value.value[index : index + 1]
         )
         tried = Report(report.path)
-        values = _replaced(plain(params), parameter.split("."), value_of(alternative))
+        values = _replaced(plain(params), loc, value_of(alternative))
         validated(type(params), _as_nodes(values, alternative), places[spot], "", tried)
         for problem in tried.problems:
             _pass_on(problem, places[spot], f"{where}.{spot}", report)
 
 
 def _pass_on(problem: Problem, place: Place, where: str, report: Report) -> None:
-    report.error(place, "R108", f"{problem.where}: {problem.message}", where)
+    about = f"{problem.where}: " if problem.where else ""
+    report.error(place, "R108", about + problem.message, where)
 
 
-def _replaced(values: Any, loc: Sequence[str], new: Any) -> Any:
+def _replaced(values: Any, loc: Loc, new: Any) -> Any:
     """Return nested values with another one at a place."""
     if not loc:
         return new
     head, rest = loc[0], loc[1:]
     if isinstance(values, list):
-        index = int(head)
-        return [_replaced(v, rest, new) if i == index else v for i, v in enumerate(values)]
+        return [_replaced(v, rest, new) if i == head else v for i, v in enumerate(values)]
     return {**values, head: _replaced(values[head], rest, new)}
 
 

@@ -75,7 +75,9 @@ def validated(
         message = f"a mapping of names to values is expected (found {found(node)})"
         report.error(place_of(node, report.path), "R203", message, where)
         return None
-    values = {} if node is None or is_null(node) else value_of(node)
+    if node is not None and is_null(node):
+        node = None  # nothing stands there, so that no place there can be named
+    values = {} if node is None else value_of(node)
     try:
         return model.model_validate_json(to_json(values))
     except ValidationError as error:
@@ -181,7 +183,7 @@ def _in_words(item: Any, loc: Loc, model: type[BaseModel]) -> str:
         "string_too_long": lambda: (
             f"a text of at most {context.get('max_length')} characters is expected"
         ),
-        "string_pattern_mismatch": lambda: f"must look like {context.get('pattern')}",
+        "string_pattern_mismatch": lambda: _ill_formed(loc, context, model),
         "value_error": lambda: str(context.get("error", item["msg"])),
         "assertion_error": lambda: str(context.get("error", item["msg"])),
     }.get(kind)
@@ -215,12 +217,23 @@ def _length(context: dict[str, Any], how: str, name: str) -> str:
 def _missing(loc: Loc, model: type[BaseModel]) -> str:
     if loc and isinstance(loc[-1], int):
         return f"value {loc[-1] + 1} of the list is missing"
-    for owner in types_at(model, loc[:-1]):
+    described = _description(loc, model)
+    return f"is missing: {described}" if described else "is missing"
+
+
+def _ill_formed(loc: Loc, context: dict[str, Any], model: type[BaseModel]) -> str:
+    described = _description(loc, model)
+    return f"not well formed: {described}" if described else f"must match {context.get('pattern')}"
+
+
+def _description(loc: Loc, model: type[BaseModel]) -> str:
+    """Return what a parameter says of itself, without its full stop."""
+    for owner in types_at(model, loc[:-1]) if loc else ():
         if isinstance(owner, type) and issubclass(owner, BaseModel):
             field = owner.model_fields.get(str(loc[-1]))
             if field is not None and field.description:
-                return f"is missing: {field.description.rstrip('.')}"
-    return "is missing"
+                return field.description.rstrip(".")
+    return ""
 
 
 def _extra(loc: Loc, model: type[BaseModel]) -> str:

@@ -1,7 +1,7 @@
 """Read one step of a chain: the stage, its parameters, and ``on``, ``as``, ``keep``."""
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import yaml
 
@@ -31,6 +31,7 @@ class ReadStep:
     stage, params : None where they are at fault.
     on : names given by ``on`` with their places.
     alias : the ``as`` name with its place.
+    crowded : it names more than one stage, so that its output may be another.
     """
 
     name: str
@@ -41,6 +42,7 @@ class ReadStep:
     keep: bool
     place: Place
     places: Mapping[str, Place]
+    crowded: bool = False
 
 
 class StepReader:
@@ -69,14 +71,22 @@ class StepReader:
             return ReadStep("", None, None, (), None, False, at, {"": at})
         known = [name for name in named if name in self.registry.stages]
         chosen = (known or named)[0]
+        key, body = keys[chosen]
+        misplaced = []
         for name in named:
-            if name != chosen:
-                self._too_many(name, keys[name][0], chosen)
-        return self._step(chosen, *keys[chosen], keys)
+            if name != chosen and self._too_many(name, keys[name][0], chosen):
+                misplaced.append(keys[name])
+        if misplaced and (is_null(body) or isinstance(body, yaml.MappingNode)):
+            # Read them where they were meant to be, so that nothing more is said of them.
+            own = body.value if isinstance(body, yaml.MappingNode) else []
+            body = yaml.MappingNode(node.tag, [*own, *misplaced], body.start_mark, body.end_mark)
+        return replace(self._step(chosen, key, body, keys), crowded=len(known) > 1)
 
-    def _too_many(self, name: str, key: yaml.Node, chosen: str) -> None:
+    def _too_many(self, name: str, key: yaml.Node, chosen: str) -> bool:
+        """Report a key beside the stage; tell whether it is a parameter not indented enough."""
         stage = self.registry.stages.get(chosen)
-        if stage is not None and name in stage.params.model_fields:
+        parameter = stage is not None and name in stage.params.model_fields
+        if parameter:
             message = (
                 f"'{name}' is a parameter of {chosen}; indent it further than '{chosen}', "
                 "or write it inside braces behind it"
@@ -89,6 +99,7 @@ class StepReader:
             message = f"unknown key '{name}' beside '{chosen}'{hint} (allowed: {allowed})"
         place = place_of(key, self.report.path)
         self.report.error(place, "R103", message, f"{self.chain}.{chosen}")
+        return parameter
 
     def _step(
         self,

@@ -108,7 +108,8 @@ class _Loader(yaml.SafeLoader):
         if isinstance(event, yaml.AliasEvent):
             return self._aliased(event)
         if event.tag is not None:
-            self.refuse(mark, "Y111", f"tags such as '{event.tag}' are not part of a recipe")
+            tag = event.tag.replace(_TAG, "!!")
+            self.refuse(mark, "Y111", f"tags such as '{tag}' are not part of a recipe")
         if self.depth >= MAX_DEPTH:
             self.refuse(mark, "Y112", f"nested more than {MAX_DEPTH} levels deep")
             raise _Stop
@@ -149,9 +150,9 @@ class _Loader(yaml.SafeLoader):
         first: dict[str, Any] = {}
         for key, _ in node.value:
             mark = key.start_mark
-            if not isinstance(key, yaml.ScalarNode) or len(key.value) > MAX_KEY or not key.value:
-                self.refuse(mark, "Y113", f"a key is a text of 1 to {MAX_KEY} characters")
-            elif key.value == "<<" and key.style is None:
+            if not isinstance(key, yaml.ScalarNode) or len(key.value) > MAX_KEY:
+                self.refuse(mark, "Y113", f"a key is a text of at most {MAX_KEY} characters")
+            elif _merges(key):
                 self.refuse(mark, "Y110", "merge keys ('<<') are refused; write the values out")
             elif key.value in first:
                 at = first[key.value]
@@ -169,6 +170,10 @@ class _Loader(yaml.SafeLoader):
             self.refuse(node.start_mark, "Y114", f"a number of more than {MAX_DIGITS} digits")
         if any("\ud800" <= char <= "\udfff" for char in node.value):
             self.refuse(node.start_mark, "Y101", "an escape stands for half a character")
+
+
+def _merges(key: yaml.ScalarNode) -> bool:
+    return key.value == "<<" and key.style is None
 
 
 def _resolver(kind: str, pattern: str, first: str) -> None:
@@ -282,7 +287,9 @@ def entries(node: yaml.Node | None) -> Iterator[tuple[str, yaml.Node, yaml.Node]
     seen: set[str] = set()
     if isinstance(node, yaml.MappingNode):
         for key, value in node.value:
-            if isinstance(key, yaml.ScalarNode) and key.value not in seen:
+            if not isinstance(key, yaml.ScalarNode) or _merges(key):
+                continue
+            if key.value not in seen:
                 seen.add(key.value)
                 yield key.value, key, value
 

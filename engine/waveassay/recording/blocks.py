@@ -49,7 +49,7 @@ class Records:
         """Yield every record's number and the bytes of its annotation signals."""
         header, size = self.header, self.record_bytes
         spans = [
-            (header.place(i), header.signals[i].samples_per_record * header.sample_bytes)
+            (header.places[i], header.signals[i].samples_per_record * header.sample_bytes)
             for i in header.annotated
         ]
         if size >= _SPARSE_RECORD_BYTES:
@@ -117,7 +117,7 @@ def _group(header: Header, run: list[int]) -> Group:
     return Group(
         signals=tuple(run),
         samples=signals[0].samples_per_record,
-        place=header.place(run[0]),
+        place=header.places[run[0]],
         gain=column([s.gain for s in signals]),
         offset=column([s.offset for s in signals]),
         limits=limits,

@@ -6,15 +6,19 @@ explains: onsets written with ``d`` decimals can only show a duration that needs
 one of its two neighbours in units of ``10**-d``. (A duration of 0.333333 s shows as 0.33 s and
 0.34 s where onsets have two decimals; one of 1 s always shows as 1 s.) The steps are compared,
 not their sum, so that a rounded duration in the header, which adds up to a drift, makes no gap.
+Only where rounding of onsets is allowed for, their sum must stay within one unit of it too, for
+rounding does not add up.
 """
 
 from dataclasses import dataclass
 from fractions import Fraction
 from math import ceil, floor
 
-from waveassay.recording.tal import TICKS_PER_S, seconds
+from waveassay.recording.tal import TICK_DECIMALS, TICKS_PER_S, seconds
 
 MAX_PIECES = 1_000_000
+# A duration with fewer decimals is taken to be exact: the header has room for more.
+_ROUNDED_DECIMALS = 3
 
 
 class ClockError(Exception):
@@ -29,7 +33,7 @@ class ClockFindings:
     ----------
     pieces : (first record, start in ticks after the first record's) of each piece.
     drift_s : largest distance of a record's stated start from where its samples are put.
-    drifts : whether that is more than the tolerance explains.
+    drifts : whether that is more than half a sample of the fastest signal.
     backward : how many records start before the one before them ends; ``first_backward`` is the
         first of them.
     """
@@ -56,21 +60,26 @@ class RecordClock:
         self, record_s: Fraction, fastest_hz: Fraction, decimals: int, may_overlap: bool
     ) -> None:
         self.decimals = decimals
-        self._record_ticks: Fraction = record_s * TICKS_PER_S
+        # Whole: the header's 8 characters hold at most 11 decimals of a time above a microsecond.
+        self._record_ticks = int(record_s * TICKS_PER_S)
         unit = Fraction(TICKS_PER_S, 10**decimals)
-        units = self._record_ticks / unit
+        units = Fraction(self._record_ticks) / unit
         #: More decimals would not change what belongs together.
         self.resolved = units.denominator == 1
         half = TICKS_PER_S / (2 * fastest_hz)
         self._shortest = ceil(floor(units) * unit - half)
         self._longest = floor(ceil(units) * unit + half)
-        self._drift_allowed = half + (0 if self.resolved else unit)
+        self._half = floor(half)
+        self._unit = floor(unit)
+        # What rounding of the stated duration itself may add up to, per record.
+        written = len(str(self._record_ticks)) - len(str(self._record_ticks).rstrip("0"))
+        self._creep = 10**written // 2 if written <= TICK_DECIMALS - _ROUNDED_DECIMALS else 0
         self._may_overlap = may_overlap
         self._pieces: list[tuple[int, int]] = []
         self._zero = 0
         self._records = 0
         self._last = 0
-        self._drift = Fraction(0)
+        self._drift = 0
         self._backward = 0
         self._first_backward = 0
 
@@ -91,9 +100,9 @@ class RecordClock:
         step = onset - self._last
         self._last = onset
         start = onset - self._zero
-        if step > self._longest:
+        if step > self._longest or self._beyond_rounding(record, start):
             # Drift may have put the end of the piece before later than this record's own time.
-            self._pieces.append((record, max(start, ceil(self._due(record)))))
+            self._pieces.append((record, max(start, self._due(record))))
             if len(self._pieces) > MAX_PIECES:
                 raise ClockError(f"the record clock jumps more than {MAX_PIECES} times")
         elif step < self._shortest:
@@ -112,13 +121,19 @@ class RecordClock:
         """Return what the clock showed."""
         return ClockFindings(
             pieces=tuple(self._pieces),
-            drift_s=self._drift / TICKS_PER_S,
-            drifts=self._drift > self._drift_allowed,
+            drift_s=seconds(self._drift),
+            drifts=self._drift > self._half,
             backward=self._backward,
             first_backward=self._first_backward,
         )
 
-    def _due(self, record: int) -> Fraction:
+    def _beyond_rounding(self, record: int, start: int) -> bool:
+        if self.resolved:
+            return False
+        since = record - self._pieces[-1][0]
+        return start - self._due(record) > self._unit + self._half + since * self._creep
+
+    def _due(self, record: int) -> int:
         """Return where the record's samples are put if it belongs to the last piece, ticks."""
         first, start = self._pieces[-1]
         return start + (record - first) * self._record_ticks

@@ -11,6 +11,8 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from datetime import datetime
 from fractions import Fraction
+from functools import cached_property
+from itertools import accumulate
 from typing import Literal
 
 from waveassay.recording.errors import RecordingError, recording_error
@@ -111,21 +113,23 @@ class Header:
         """Width of a stored sample."""
         return 2 if self.family == "EDF" else 3
 
+    @cached_property
+    def places(self) -> tuple[int, ...]:
+        """Where in a record each signal's samples start, bytes; last the record's size."""
+        sizes = (s.samples_per_record * self.sample_bytes for s in self.signals)
+        return (0, *accumulate(sizes))
+
     @property
     def record_bytes(self) -> int:
         """Size of one record."""
-        return self.sample_bytes * sum(s.samples_per_record for s in self.signals)
+        return self.places[-1]
 
-    def place(self, index: int) -> int:
-        """Return where in a record a signal's samples start, bytes."""
-        return self.sample_bytes * sum(s.samples_per_record for s in self.signals[:index])
-
-    @property
+    @cached_property
     def ordinary(self) -> tuple[int, ...]:
         """Indices of the signals that hold samples."""
         return tuple(i for i, s in enumerate(self.signals) if not s.is_annotations)
 
-    @property
+    @cached_property
     def annotated(self) -> tuple[int, ...]:
         """Indices of the signals that hold annotations."""
         return tuple(i for i, s in enumerate(self.signals) if s.is_annotations)

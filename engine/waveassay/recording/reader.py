@@ -127,10 +127,9 @@ class Recording:
             yield first, block
 
     def _require_samples(self, signals: Sequence[int]) -> None:
-        ordinary = self._records.header.ordinary
-        for index in signals:
-            if index not in ordinary:
-                raise IndexError(f"{self.facts.path}: no signal with samples has index {index}")
+        wrong = set(signals).difference(self._records.header.ordinary)
+        if wrong:
+            raise IndexError(f"{self.facts.path}: no signal with samples has index {min(wrong)}")
 
     def _read_spans(
         self, spans: dict[int, tuple[int, int]], piece_record: int
@@ -267,7 +266,7 @@ def _facts(records: Records, warnings: list[str]) -> Facts:
     if start is None and header.start is not None:
         warnings = [
             *warnings,
-            "the first record starts beyond the calendar; time of day is unknown",
+            "the first record starts beyond the calendar; no time of day is known",
         ]
     return Facts(
         path=records.file.path,

@@ -11,6 +11,7 @@ from functools import lru_cache
 from math import pi
 
 import numpy as np
+from numpy.typing import NDArray
 
 from waveassay.contract import Floats
 
@@ -18,6 +19,7 @@ from waveassay.contract import Floats
 OCTAVE_SHARE = 0.9
 _CELLS_A_LOBE = 8
 _HILL_STEPS = 60
+_ROUGH, _FINE = 1e-2, 1e-6
 
 
 @dataclass(frozen=True)
@@ -59,6 +61,18 @@ def _time(size: int) -> Floats:
     return time
 
 
+def _harmonics(angle: Floats, count: int) -> NDArray[np.complex128]:
+    """Return exp(i k angle) for k = 1 to ``count``, shape (count, n), by doubling k."""
+    turned = np.empty((count, angle.size), np.complex128)
+    turned[0] = np.exp(1j * angle)
+    known = 1
+    while known < count:
+        more = min(known, count - known)
+        np.multiply(turned[:more], turned[known - 1], out=turned[known : known + more])
+        known += more
+    return turned
+
+
 def _cosine_sum(omega: Floats, size: int) -> Floats:
     """Return the sum of cos(omega t) over the epoch: the Dirichlet kernel."""
     half = np.sin(omega / 2)
@@ -86,6 +100,11 @@ class EpochFitter:
         self.size = x.size
         self.plain_mean = float(np.mean(x))
         self.x = np.ascontiguousarray(x - self.plain_mean)
+        # Cosines meet only the even part of the epoch about its middle, sines only the odd part.
+        later, earlier = self.x[x.size // 2 :], self.x[::-1][x.size // 2 :]
+        self.folded_even, self.folded_odd = later + earlier, later - earlier
+        if x.size % 2:
+            self.folded_even[0] /= 2  # the middle sample is its own mirror image
         self.omega, even, odd = _trend_basis(x.size, terms)
         self.even = np.sum(even * self.x, axis=-1)
         self.odd = np.sum(odd * self.x, axis=-1)
@@ -103,13 +122,9 @@ class EpochFitter:
     def fit(self, cycles: float, count: int) -> HarmonicFit:
         """Fit ``count`` harmonics of a fundamental in cycles a sample, with the trend."""
         base = 2 * pi * cycles
-        turn = np.exp(1j * base * _time(self.size))
-        harmonic = turn.copy()
-        cosine, sine = np.empty(count), np.empty(count)
-        for k in range(count):
-            cosine[k] = np.sum(harmonic.real * self.x)
-            sine[k] = np.sum(harmonic.imag * self.x)
-            harmonic *= turn
+        harmonic = _harmonics(base * _time(self.size)[self.size // 2 :], count)
+        cosine = np.sum(harmonic.real * self.folded_even, axis=-1)
+        sine = np.sum(harmonic.imag * self.folded_odd, axis=-1)
         omega = base * np.arange(1, count + 1)
         even_right = np.concatenate((self.even, cosine))
         odd_right = np.concatenate((self.odd, sine))
@@ -155,7 +170,7 @@ def find_fundamental(fitter: EpochFitter, low: float, high: float, at_most: int)
     scores = _scores(fitter.without_trend, grid, min(at_most, counted(low)), ceiling)
     best = float(grid[int(np.argmax(scores))])
     count = counted(best)
-    best = _climb(fitter, best, count)
+    best = _climb(fitter, best, count, _ROUGH)
     reached = fitter.gain(best, count)
     if reached <= 0:
         return None
@@ -163,11 +178,12 @@ def find_fundamental(fitter: EpochFitter, low: float, high: float, at_most: int)
         fewer = count // multiple
         if fewer < 1:
             continue
-        other = _climb(fitter, best * multiple, fewer)
+        other = _climb(fitter, best * multiple, fewer, _ROUGH)
         if fitter.gain(other, fewer) >= OCTAVE_SHARE * reached:
             best = other
             break
-    best = _climb(fitter, best, max(1, harmonics_below_nyquist(best, fitter.size, at_most)))
+    count = max(1, harmonics_below_nyquist(best, fitter.size, at_most))
+    best = _climb(fitter, best, count, _FINE)
     return best if low * (1 - 1e-6) <= best <= high * (1 + 1e-6) else None
 
 
@@ -185,22 +201,26 @@ def _scores(x: Floats, grid: Floats, count: int, ceiling: float) -> Floats:
     return score
 
 
-def _climb(fitter: EpochFitter, start: float, count: int) -> float:
-    """Return the top of the explained sum of squares on the hill where ``start`` stands."""
+def _climb(fitter: EpochFitter, start: float, count: int, precision: float) -> float:
+    """Return the top of the explained sum of squares on the hill where ``start`` stands.
+
+    ``precision`` is a share of the step, which is an eighth of the hill's width or less.
+    """
     from scipy.optimize import minimize_scalar
 
     step = 1 / (_CELLS_A_LOBE * max(count, 4) * fitter.size)
     here, height = start, fitter.gain(start, count)
+    left, right = fitter.gain(start - step, count), fitter.gain(start + step, count)
+    stride, ahead = (step, right) if right >= left else (-step, left)
     for _ in range(_HILL_STEPS):
-        sides = [(fitter.gain(here + d, count), here + d) for d in (-step, step)]
-        top, where = max(sides)
-        if top <= height:
+        if ahead <= height:
             break
-        here, height = where, top
+        here, height = here + stride, ahead
+        ahead = fitter.gain(here + stride, count)
     found = minimize_scalar(
         lambda cycles: -fitter.gain(cycles, count),
         bounds=(here - step, here + step),
         method="bounded",
-        options={"xatol": 1e-7 * step},
+        options={"xatol": precision * step},
     )
     return float(found.x)

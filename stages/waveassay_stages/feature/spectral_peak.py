@@ -30,6 +30,8 @@ from waveassay_stages.feature._rows import density_unit, missing_reasons, of_wha
 Method = Literal["parabola", "bin"]
 Background = Literal["median", "power_law"]
 
+# A bin without power has no decibels: it is taken as this share of the highest.
+_FLOOR = 1e-30
 _LEAST_BINS = {"median": 3, "power_law": 9}
 
 
@@ -115,16 +117,16 @@ def spectral_peaks(
     inside = bins_inside(low_hz, high_hz, spacing(freq_hz), freq_hz.size)
     floor = 1 if background == "power_law" else 0
     first, stop = max(inside.start, floor), inside.stop
-    rows = np.flatnonzero(np.all(np.isfinite(density[:, first:stop]), axis=-1))
-    if stop - first < _LEAST_BINS[background] or rows.size == 0:
+    if stop - first < _LEAST_BINS[background]:
         return peaks
+    rows = np.flatnonzero(np.max(density[:, first:stop], axis=-1) > 0)
     # One bin more on either side, where there is one.
     left, right = max(first - 1, floor), min(stop + 1, freq_hz.size)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        level = 10 * np.log10(np.ascontiguousarray(density[rows, left:right]))
-        span = slice(first - left, stop - left)
-        under = _background_db(freq_hz[left:right], level, span, background)
-        above = level - under
+    power = np.ascontiguousarray(density[rows, left:right])
+    level = 10 * np.log10(np.maximum(power, np.max(power, axis=-1)[:, None] * _FLOOR))
+    span = slice(first - left, stop - left)
+    under = _background_db(freq_hz[left:right], level, span, background)
+    above = level - under
     best = span.start + np.argmax(above[:, span], axis=-1)
     row = np.arange(rows.size)
     inner = (best > 0) & (best < above.shape[1] - 1)
@@ -135,9 +137,8 @@ def spectral_peaks(
     found = (here > before) & (here >= after)
     shift = np.zeros(rows.size)
     if method == "parabola":
-        with np.errstate(invalid="ignore"):
-            curve = before - 2 * here + after
-            usable = found & np.isfinite(curve) & (curve < 0)
+        curve = before - 2 * here + after
+        usable = found & (curve < 0)
         np.divide(0.5 * (before - after), curve, out=shift, where=usable)
         here = np.where(usable, here - 0.25 * (before - after) * shift, here)
     peaks.frequency_hz[rows] = freq_hz[left + best] + shift * spacing(freq_hz)
@@ -206,7 +207,7 @@ def run(params: SpectralPeakParams, spectra: Spectra) -> Features:
     reasons = missing_reasons(
         spectra.rows,
         [
-            (slope, "no peak: highest at a limit of the range"),
+            (slope, "no peak in the range"),
             (low, "no peak of that prominence"),
         ],
     )

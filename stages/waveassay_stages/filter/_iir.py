@@ -64,7 +64,7 @@ def cascade(sections: Iterable[tuple[complex, complex, complex, complex]], at: c
         dc[i] = gain * ((1 - z1) * (1 - z2) / ((1 - p1) * (1 - p2))).real
     # A first-order section's spare pole and zero at 0 cancel, and are left out.
     used = [((p1, z1), (p2, z2)) for p1, p2, z1, z2 in pairs]
-    kept = [pair for both in used for pair in both if pair != (0, 0)]
+    kept = [pair for both in used for pair in both if any(pair)]
     poles = np.array([pole for pole, _ in kept], np.complex128)
     zeros = np.array([zero for _, zero in kept], np.complex128)
     return Cascade(sos, zeros, poles, dc)
@@ -114,7 +114,6 @@ def reach_samples(filters: Cascade, passes: Passes, share: float) -> int:
     The smallest n with :math:`\sum_k |c_k| |p_k|^n / (1 - |p_k|) \le` ``share``, which bounds
     :math:`\sum_{m > n} |h[m]|`, for one pass and for both.
     """
-
     kinds: tuple[Passes, ...] = ("forward", "both_ways")
     sizes = []
     for kind in kinds if passes == "both_ways" else kinds[:1]:
@@ -137,7 +136,7 @@ def reach_samples(filters: Cascade, passes: Passes, share: float) -> int:
 def response_samples(filters: Cascade, passes: Passes) -> int:
     r"""Return how long the response stays above 1 %, in samples.
 
-    The smallest n with :math:`\sum_{m > n} |h[m]| \le 0.01`: an artefact of any shape and length
+    The smallest n with :math:`\sum_{m > n} |h[m]| \le 0.01` (or a thousandth more): an artefact of any shape and length
     and of size A, that lies n samples away or more, leaves at most A / 100. (An artefact of the
     worst shape leaves just that; a step leaves less.) Measured on the impulse response of all
     passes, to one side.

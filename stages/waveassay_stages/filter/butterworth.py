@@ -25,7 +25,6 @@ from waveassay.contract import (
 from waveassay_stages._finite import require_finite
 from waveassay_stages.filter import _iir
 
-
 #: Cut-offs below this share of the Nyquist frequency are refused: there, the coefficients' own
 #: rounding moves the gain at the cut-off by more than a ten-thousandth.
 SLOWEST = 1e-6

@@ -1,13 +1,13 @@
 """What the estimators share: detrending, transforms in blocks, one-sided density, specs."""
 
-from collections.abc import Iterable
+from collections.abc import Sequence
 from fractions import Fraction
 from functools import lru_cache
 from typing import Literal
 
 import numpy as np
 
-from waveassay.contract import Epochs, EpochsSpec, Findings, Floats, Spectra, SpectraSpec, exact
+from waveassay.contract import Epochs, EpochsSpec, Findings, Floats, Ints, Spectra, SpectraSpec, exact
 
 Detrend = Literal["none", "constant", "linear"]
 ZeroPadding = Literal["none", "next_power_of_two", "twice", "four_times"]
@@ -19,8 +19,9 @@ PADDING_TEXT = (
 
 #: Fewer samples make no spectrum worth the name.
 FEWEST_SAMPLES = 8
-#: Samples worked on at once: small enough for a processor's cache. No number depends on it.
-BLOCK_SAMPLES = 32768
+#: Samples worked on at once: they fit a processor's cache, and what a transform returns stays
+#: below the 128 KiB from which on memory is fetched from the system anew. No number depends on it.
+BLOCK_SAMPLES = 12288
 
 
 def samples_in(length_s: float, rate_hz: Fraction) -> int:
@@ -75,13 +76,20 @@ def _remove_trend(x: Floats, how: Detrend) -> None:
         x -= slope * t
 
 
-def density(x: Floats, tapers: Iterable[Floats], n_fft: int, detrend: Detrend) -> Floats:
+def density(
+    x: Floats,
+    tapers: Sequence[Floats],
+    n_fft: int,
+    detrend: Detrend,
+    places: Ints | None = None,
+) -> Floats:
     r"""Return the one-sided density of each row, shape (rows, n_fft // 2 + 1).
 
     .. math:: P[r, q] = c_q \sum_k \Bigl| \sum_n h_{k,n} x_{r,n} e^{-2 \pi i q n / N} \Bigr|^2
 
     with tapers ``h`` from `scaled`; ``c`` is 1, but 1/2 at 0 Hz and, for even N, at the Nyquist
-    frequency, which have no mirror image. Tapers are summed in their order.
+    frequency, which have no mirror image. Squares are summed over tapers in their order, real and
+    imaginary parts apart, which are added last.
 
     Every row is worked on alone, so neither the other rows nor the block size change a bit of it.
 
@@ -91,31 +99,44 @@ def density(x: Floats, tapers: Iterable[Floats], n_fft: int, detrend: Detrend) -
     tapers : each of shape (n,).
     n_fft : N, at least n; zeros make up the difference.
     detrend : what is taken out of each row first.
+    places : which rows of x, in this order; all of them where None. With x a sliding view of a
+        signal, its epochs are gathered block by block and never copied as a whole.
     """
     from scipy import fft
 
-    rows, n = x.shape
+    n = x.shape[1]
+    rows = x.shape[0] if places is None else places.size
     out = np.empty((rows, n_fft // 2 + 1))
     step = max(1, BLOCK_SAMPLES // n_fft)
     plain = np.empty((step, n))
     tapered = np.zeros((step, n_fft))
+    total = np.empty((step, 2 * out.shape[1]))
     for first in range(0, rows, step):
-        total = out[first : first + step]
-        count = total.shape[0]
-        part = plain[:count]
-        part[...] = x[first : first + step]
+        stop = min(first + step, rows)
+        count = stop - first
+        part, sums = plain[:count], total[:count]
+        part[...] = x[first:stop] if places is None else x[places[first:stop]]
         _remove_trend(part, detrend)
         for k, taper in enumerate(tapers):
             np.multiply(part, taper, out=tapered[:count, :n])
-            squares = fft.rfft(tapered[:count], axis=-1).view(np.float64)
-            np.square(squares, out=squares)
-            power = np.add(squares[:, 0::2], squares[:, 1::2], out=None if k else total)
-            if k:
-                total += power
+            parts = fft.rfft(tapered[:count], axis=-1).view(np.float64)
+            if k == 0:
+                np.square(parts, out=sums)
+            else:
+                np.square(parts, out=parts)
+                sums += parts
+        np.add(sums[:, 0::2], sums[:, 1::2], out=out[first:stop])
     out[:, 0] *= 0.5
     if n_fft % 2 == 0:
         out[:, -1] *= 0.5
     return out
+
+
+def sliding(x: Floats, length: int) -> Floats:
+    """Return every stretch of ``length`` samples as a row of a view; none where x is shorter."""
+    if x.size < length:
+        return np.empty((0, length))
+    return np.lib.stride_tricks.sliding_window_view(x, length)
 
 
 def as_spectra(
@@ -123,8 +144,10 @@ def as_spectra(
 ) -> Spectra:
     """Put the densities of the kept epochs among the others, which are NaN."""
     rows = epochs.rows
-    full = np.full((len(rows), freq_hz.size), np.nan)
-    full[rows.kept] = kept_density
+    full = kept_density
+    if not np.all(rows.kept):
+        full = np.full((len(rows), freq_hz.size), np.nan)
+        full[rows.kept] = kept_density
     return Spectra(
         signal=epochs.signal.name,
         unit=epochs.signal.unit,

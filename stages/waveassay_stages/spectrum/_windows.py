@@ -53,7 +53,8 @@ def cosine_sum(coefficients: tuple[float, ...], length: int) -> Floats:
     F. J. Harris, Proc. IEEE 66(1), 51-83, 1978; A. H. Nuttall, IEEE Trans. ASSP 29(1), 84-91, 1981.
     """
     # One scalar cosine a place: vectorised ones differ in the last bit between processors.
-    turn = [cos(2 * pi * n / length) for n in range(length)]
+    # Both halves from the same angles, so that the window is symmetric to the bit.
+    turn = [cos(2 * pi * min(n, length - n) / length) for n in range(length)]
     total = np.full(length, coefficients[0], np.float64)
     for k, a in enumerate(coefficients[1:], start=1):
         total += (-1) ** k * a * np.array([turn[k * n % length] for n in range(length)])

@@ -14,6 +14,7 @@ from waveassay.contract import (
     Findings,
     Floats,
     Hertz,
+    Ints,
     Kind,
     Params,
     Spectra,
@@ -78,6 +79,7 @@ def multitaper(
     weights: Weights = "equal",
     detrend: _density.Detrend = "constant",
     zero_padding: _density.ZeroPadding = "none",
+    places: Ints | None = None,
 ) -> tuple[Floats, Floats]:
     r"""Return bin centres (Hz) and the one-sided density of each row (unit squared per Hz).
 
@@ -98,6 +100,7 @@ def multitaper(
     half_bandwidth_hz : W, Hz.
     tapers : K; floor(2 NW) - 1 where None.
     weights, detrend, zero_padding : as in `MultitaperParams`.
+    places : which rows of x to take, in this order; all where None.
 
     Returns
     -------
@@ -120,7 +123,8 @@ def multitaper(
     weight = taper_weights(concentrations, weights)
     scaled = [_density.scaled(v[k], rate, float(weight[k])) for k in range(count)]
     n_fft = _density.transform_length(samples, zero_padding)
-    return _density.bin_centres_hz(rate, n_fft), _density.density(x, scaled, n_fft, detrend)
+    freq_hz = _density.bin_centres_hz(rate, n_fft)
+    return freq_hz, _density.density(x, scaled, n_fft, detrend, places)
 
 
 def spec(params: MultitaperParams, given: EpochsSpec, findings: Findings) -> SpectraSpec:
@@ -161,13 +165,14 @@ def run(params: MultitaperParams, epochs: Epochs) -> Spectra:
     time_bandwidth = half_bandwidth * epochs.length / rate_hz
     count = taper_count(time_bandwidth) if params.tapers is None else params.tapers
     freq_hz, kept = multitaper(
-        epochs.samples(),
+        _density.sliding(epochs.signal.x, epochs.length),
         rate_hz,
         half_bandwidth_hz=half_bandwidth,
         tapers=count,
         weights=params.weights,
         detrend=params.detrend,
         zero_padding=params.zero_padding,
+        places=epochs.first[epochs.kept],
     )
     _, concentrations = slepian_tapers(epochs.length, time_bandwidth, count)
     dof = degrees_of_freedom(taper_weights(concentrations, params.weights))

@@ -10,6 +10,7 @@ from waveassay.contract import (
     EpochsSpec,
     Findings,
     Floats,
+    Ints,
     Kind,
     Params,
     Spectra,
@@ -35,6 +36,7 @@ def periodogram(
     window_name: WindowName = "hann",
     detrend: _density.Detrend = "constant",
     zero_padding: _density.ZeroPadding = "none",
+    places: Ints | None = None,
 ) -> tuple[Floats, Floats]:
     r"""Return bin centres (Hz) and the one-sided density of each row (unit squared per Hz).
 
@@ -51,6 +53,7 @@ def periodogram(
     x : shape (rows, n).
     rate_hz : fs, Hz.
     window_name, detrend, zero_padding : as in `PeriodogramParams`.
+    places : which rows of x to take, in this order; all where None.
 
     Returns
     -------
@@ -65,7 +68,8 @@ def periodogram(
     samples = x.shape[-1]
     n_fft = _density.transform_length(samples, zero_padding)
     taper = _density.scaled(window(window_name, samples), rate)
-    return _density.bin_centres_hz(rate, n_fft), _density.density(x, (taper,), n_fft, detrend)
+    freq_hz = _density.bin_centres_hz(rate, n_fft)
+    return freq_hz, _density.density(x, (taper,), n_fft, detrend, places)
 
 
 def resolution_hz(window_name: WindowName, samples: int, rate_hz: Fraction) -> float:
@@ -88,11 +92,12 @@ def run(params: PeriodogramParams, epochs: Epochs) -> Spectra:
     """Return the periodogram of each kept epoch."""
     rate_hz = epochs.signal.rate_hz
     freq_hz, kept = periodogram(
-        epochs.samples(),
+        _density.sliding(epochs.signal.x, epochs.length),
         rate_hz,
         window_name=params.window,
         detrend=params.detrend,
         zero_padding=params.zero_padding,
+        places=epochs.first[epochs.kept],
     )
     resolution = resolution_hz(params.window, epochs.length, rate_hz)
     return _density.as_spectra(epochs, freq_hz, kept, resolution, dof=2.0)

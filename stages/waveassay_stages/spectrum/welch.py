@@ -155,16 +155,16 @@ def _of_rows(
     inside = np.array(segment_starts(samples, segment, overlap), np.int64)
     starts, place = np.unique(first[:, None] + inside, return_inverse=True)
     place = place.reshape(first.size, inside.size)
-    segments = np.lib.stride_tricks.sliding_window_view(x, segment)[starts]
     taper = _density.scaled(window(window_name, segment), rate_hz)
-    each = _density.density(segments, (taper,), n_fft, detrend)
+    each = _density.density(_density.sliding(x, segment), (taper,), n_fft, detrend, starts)
     if average == "median":
         bias, _ = exponential_median(inside.size)
         return freq_hz, np.median(each[place], axis=1) / bias
     total = each[place[:, 0]]
     for s in range(1, inside.size):  # in the order of time, whatever the number of rows
         total += each[place[:, s]]
-    return freq_hz, total / inside.size
+    total /= inside.size
+    return freq_hz, total
 
 
 @lru_cache(maxsize=64)

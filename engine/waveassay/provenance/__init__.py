@@ -1,0 +1,1 @@
+"""What proves a run: its folder, its log, its environment, its manifest."""

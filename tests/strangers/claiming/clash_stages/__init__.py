@@ -1,0 +1,1 @@
+"""A package that claims a name that is taken."""

@@ -1,0 +1,143 @@
+"""Packages of stages from outside: one that works, one that fails, one that claims a taken name.
+
+They are found by entry point, as installed packages are; nothing about them is told to the engine.
+"""
+
+import csv
+import os
+import subprocess
+import sys
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from running import only_run, rows, write_eeg
+
+HERE = Path(__file__).parent
+
+RECIPE = """\
+recipe: with-strangers
+edition: 1
+title: Stages from outside
+purpose: To show that they get everything the shipped ones get
+signals:
+  frontal: {labels: ["EEG Fp1-F7"], unit: uV, modality: eeg}
+chains:
+  one:
+    - load: {signals: [frontal]}
+    - acme.smooth: {length: 50 ms}
+    - acme.peaks: {above: 90 %}
+    - epoch.consecutive: {length: 10 s}
+    - acme.range: {}
+    - export.table: {}
+  two:
+    - load: {signals: [frontal]}
+    - acme.centre: {}
+    - epoch.consecutive: {length: 10 s}
+    - acme.range: {}
+    - export.table: {}
+"""
+
+
+def waveassay(*arguments: object, packages: str) -> subprocess.CompletedProcess[str]:
+    path = os.pathsep.join(str(HERE / name) for name in packages.split())
+    return subprocess.run(
+        [sys.executable, "-m", "waveassay", *map(str, arguments)],
+        env={**os.environ, "PYTHONPATH": path},
+        capture_output=True,
+        text=True,
+        timeout=300,
+    )
+
+
+@pytest.fixture(scope="module")
+def made(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """Write a recipe and 25 minutes at 100 Hz: three stretches, large values in two of them."""
+    folder = tmp_path_factory.mktemp("strangers")
+    (folder / "recipe.yaml").write_text(RECIPE)
+    rng = np.random.default_rng(20310405)
+    x = np.round(rng.uniform(-100, 100, 25 * 60 * 100) + 40, 1)
+    x[140_000:140_010] = 3000.0
+    x[700:705] = 2990.0
+    write_eeg(folder / "recordings" / "a.edf", x, 100)
+    np.save(folder / "x.npy", x)
+    return folder
+
+
+@pytest.fixture(scope="module")
+def run_folder(made: Path) -> Path:
+    done = waveassay("run", made, packages="working")
+    assert done.returncode == 0, done.stderr + done.stdout
+    return only_run(made)
+
+
+def test_a_step_that_needs_the_whole_recording_is_right_in_every_stretch(
+    made: Path, run_folder: Path
+) -> None:
+    x = np.load(made / "x.npy")
+    smooth = np.convolve(np.pad(x, 2, mode="edge"), np.ones(5) / 5, mode="valid")
+    near = np.flatnonzero(np.abs(smooth) > 0.9 * np.abs(smooth).max()) // 1000
+    table = rows(run_folder, "epochs/one")
+    lost = {int(row["epoch"]) for row in table if row["kept"] == "false"}
+    assert lost == set(near.tolist())
+    assert len(lost) == 2  # the large values are in the first and in the last stretch
+    for row in table:
+        if row["kept"] == "true":
+            start = int(row["epoch"]) * 1000
+            expected = np.ptp(smooth[start : start + 1000])
+            assert float(row["range"]) == pytest.approx(expected, abs=0.11)  # 0.1 uV a step
+
+
+def test_a_step_that_declares_nothing_is_given_whole_pieces(made: Path, run_folder: Path) -> None:
+    table = rows(run_folder, "epochs/two")
+    assert len(table) == 150
+    x = np.load(made / "x.npy")
+    for row in table:
+        start = int(row["epoch"]) * 1000
+        expected = np.ptp(x[start : start + 1000])
+        assert float(row["range"]) == pytest.approx(expected, abs=0.11)
+
+
+def test_provenance_comes_without_a_line_of_its_author(run_folder: Path) -> None:
+    parameters = (run_folder / "parameters.csv").read_text()
+    assert "one.acme.smooth,length,0.05,s,recipe," in parameters
+    steps = {row["step"] for row in rows(run_folder, "steps")}
+    assert {"acme.smooth", "acme.peaks", "acme.range", "acme.centre"} <= steps
+    with (run_folder / "columns.csv").open(newline="") as file:
+        columns = {(row["table"], row["column"]): row for row in csv.DictReader(file)}
+    assert columns["epochs/one", "range"]["unit"] == "uV"
+    assert "acme" in (run_folder / "environment.json").read_text()
+
+
+def test_check_schema_and_help_know_it(made: Path) -> None:
+    wrong = made / "wrong.yaml"
+    wrong.write_text(RECIPE.replace("length: 50 ms", "length: 50 Hz"))
+    checked = waveassay("check", wrong, packages="working")
+    assert checked.returncode == 2
+    assert "wrong.yaml:10:29:" in checked.stderr
+    assert "acme.smooth" in waveassay("schema", packages="working").stdout
+    shown = waveassay("stages", "acme.smooth", packages="working").stdout
+    assert "Length of the average." in shown
+    assert "acme 1.2" in shown
+
+
+def test_a_package_that_fails_is_named_and_stops_no_other(made: Path) -> None:
+    listed = waveassay("stages", packages="failing working")
+    assert listed.returncode == 0
+    assert "broken 0.3" in listed.stdout
+    assert "the library it needs is not installed" in listed.stdout
+    assert "acme.smooth" in listed.stdout
+    wrong = made / "missing.yaml"
+    wrong.write_text(RECIPE.replace("acme.smooth", "broken.smooth"))
+    checked = waveassay("check", wrong, packages="failing working")
+    assert checked.returncode == 2
+    assert "broken 0.3" in checked.stderr
+
+
+def test_a_taken_name_stays_with_its_owner_and_the_claim_is_told() -> None:
+    listed = waveassay("stages", packages="claiming").stdout
+    assert "clash 2.0" in listed
+    assert "filter.notch" in listed
+    shown = waveassay("stages", "filter.notch", packages="claiming").stdout
+    assert "waveassay" in shown.splitlines()[0]

@@ -1,0 +1,1 @@
+"""Stages of a stranger: a package that is not part of waveassay."""
