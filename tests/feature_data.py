@@ -21,31 +21,36 @@ from waveassay.contract import (
 )
 
 
+def bins(count: int, bin_hz: float) -> Floats:
+    """Return bin centres from 0."""
+    return np.arange(count, dtype=np.float64) * bin_hz
+
+
 def spectra(
     density: ArrayLike,
     bin_hz: float = 0.25,
     *,
-    kept: Sequence[bool] | None = None,
+    kept: ArrayLike | None = None,
     condition: Sequence[str] | None = None,
-    start_s: Sequence[float] | None = None,
+    start_s: ArrayLike | None = None,
     duration_s: float = 4.0,
     unit: str = "uV",
     dof: float = 10.0,
 ) -> Spectra:
     """Return spectra with a bin every ``bin_hz`` from 0; rows that are not kept are NaN."""
     values = np.array(density, np.float64, ndmin=2)
-    count, bins = values.shape
+    count = values.shape[0]
     keep = np.ones(count, np.bool_) if kept is None else np.array(kept, np.bool_)
     values[~keep] = np.nan
     rows = Rows(
-        start_s=np.arange(count) * duration_s if start_s is None else np.array(start_s, np.float64),
+        start_s=bins(count, duration_s) if start_s is None else np.array(start_s, np.float64),
         duration_s=np.full(count, duration_s),
         condition=("all",) * count if condition is None else tuple(condition),
         kept=keep,
         reason=tuple("" if k else "amplitude" for k in keep),
         epochs=np.ones(count, np.int64),
     )
-    freq = np.arange(bins) * bin_hz
+    freq = bins(values.shape[1], bin_hz)
     return Spectra("frontal", unit, rows, freq, values, 2 * bin_hz, np.full(count, dof))
 
 

@@ -67,7 +67,7 @@ def spectra_of(
     keep = np.ones(n, np.bool_) if kept is None else np.array(kept, np.bool_)
     values = np.where(keep[:, None], density, np.nan)
     rows = Rows(
-        start_s=10 + hop_s * np.arange(n),
+        start_s=np.arange(n, dtype=np.float64) * hop_s + 10,
         duration_s=np.full(n, length_s),
         condition=("all",) * n if condition is None else tuple(condition),
         kept=keep,
@@ -85,7 +85,7 @@ def spectra_of(
     )
 
 
-def epochs_spec(length_s: float = 4.0, rate_hz: int | None = 128) -> EpochsSpec:
+def epochs_spec(length_s: float = 4.0, rate_hz: int | Fraction | None = 128) -> EpochsSpec:
     """Return the spec of epochs."""
     rate = None if rate_hz is None else Fraction(rate_hz)
     return EpochsSpec(SignalSpec("frontal", "uV", "eeg", rate), length_s, length_s / 2)

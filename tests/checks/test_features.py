@@ -4,12 +4,13 @@ import numpy as np
 import pytest
 
 from check_values import entry
-from feature_data import Collected, spectra, spectra_spec
+from feature_data import Collected, bins, spectra, spectra_spec
 from waveassay.contract import Floats, Rows, Spectra
-from waveassay_stages.feature.band_power import STAGE as BAND_POWER
 from waveassay_stages.feature.band_power import BandPowerParams, band_power
-from waveassay_stages.feature.spectral_edge import STAGE as SPECTRAL_EDGE
+from waveassay_stages.feature.band_power import run as power_run
+from waveassay_stages.feature.band_power import spec as power_spec
 from waveassay_stages.feature.spectral_edge import SpectralEdgeParams, spectral_edges
+from waveassay_stages.feature.spectral_edge import run as edge_run
 from waveassay_stages.feature.spectral_entropy import SpectralEntropyParams, spectral_entropy
 from waveassay_stages.feature.spectral_entropy import run as entropy_run
 from waveassay_stages.feature.spectral_peak import SpectralPeakParams
@@ -24,8 +25,7 @@ def periodogram(x: Floats, rate_hz: float) -> Spectra:
 
 
 def powers(data: Spectra, **given: object) -> dict[str, float]:
-    assert BAND_POWER.run is not None
-    features = BAND_POWER.run(BandPowerParams.model_validate(given), data)
+    features = power_run(BandPowerParams.model_validate(given), data)
     return {name: float(values[0]) for name, values in features.columns.items()}
 
 
@@ -99,7 +99,7 @@ def test_g05_edges_of_closed_form_densities(shape: str, integration: str, share:
 def test_g05_the_bin_rule_differs_by_up_to_one_bin(share: str) -> None:
     # Of a flat density: whole bins take half a bin too much at either limit, which a steep one
     # feels at the lower limit by more than a bin.
-    freq = np.arange(641) * 0.05
+    freq = bins(641, 0.05)
     edge = spectral_edges(freq, np.ones((1, 641)), 0.5, 30.0, float(share), interpolation="bin")
     assert 0 <= edge[0] - entry("G05").expected["flat"][share] + 0.025 <= 0.05 + 1e-9
 
@@ -108,13 +108,12 @@ def test_g04_95_and_50_percent_of_the_power_lie_below_the_edge_and_the_median() 
     definition = entry("G04").expected
     rng = np.random.default_rng(4)
     data = spectra(rng.gamma(1.0, size=257) / (1 + np.arange(257)))
-    assert SPECTRAL_EDGE.run is not None
     for key, share in (("SEF95", "95 %"), ("MF", "50 %")):
         assert share in definition[key]
         params = SpectralEdgeParams.model_validate(
             {"fraction": share, "within": ("0.5 Hz", "30 Hz")}
         )
-        edge = float(SPECTRAL_EDGE.run(params, data).columns[""][0])
+        edge = float(edge_run(params, data).columns[""][0])
         below = band_power(data.freq_hz, data.density, 0.5, edge, edges="partial")
         whole = band_power(data.freq_hz, data.density, 0.5, 30.0, edges="partial")
         assert below[0] / whole[0] == pytest.approx(params.fraction, rel=1e-9)
@@ -159,9 +158,7 @@ def test_g11_bands_of_the_anaesthesia_literature() -> None:
     for gap_hz in (4.5, 8.5, 12.5, 25.5):
         assert _bands_with_a_line_at(gap_hz, bands, "lower_in") == []
     found = Collected()
-    BAND_POWER.spec(
-        BandPowerParams.model_validate({"bands": bands}), spectra_spec(), found.findings
-    )
+    power_spec(BandPowerParams.model_validate({"bands": bands}), spectra_spec(), found.findings)
     assert found.refused_at == ["bands.gamma"]  # 80 Hz is above Nyquist at 128 samples a second
     assert "bands.slow" in found.warned_at  # 0.1 Hz is below one cycle in 4 s
 
@@ -194,7 +191,7 @@ def test_c05_power_over_all_bins_is_the_mean_square(size: int) -> None:
     x = np.random.default_rng(9).normal(3, 20, size)
     data = periodogram(x, 250)
     for edges in ("lower_in", "both_in", "partial"):
-        params = {"bands": {"all": ("0 Hz", f"{data.freq_hz[-1]!r} Hz")}, "edges": edges}
+        params = {"bands": {"all": ("0 Hz", f"{float(data.freq_hz[-1])!r} Hz")}, "edges": edges}
         power = powers(data, **params)["all"]
         assert power / np.mean(x**2) == pytest.approx(check.expected, abs=check.tolerance)
 
@@ -213,7 +210,7 @@ def test_c08_power_of_white_noise_is_its_density_times_the_width() -> None:
 def test_c09_averaging_over_a_resonance_lowers_its_peak(ratio: str) -> None:
     check = entry("C09")
     half_power_width_hz, centre_hz = 1.0, 10.0
-    freq = np.arange(40_001) * 0.0005
+    freq = bins(40_001, 0.0005)
     density = 1 / (1 + (2 * (freq - centre_hz) / half_power_width_hz) ** 2)
     width = float(ratio) * half_power_width_hz
     for rule in ("rectangle", "trapezoid"):
@@ -222,7 +219,7 @@ def test_c09_averaging_over_a_resonance_lowers_its_peak(ratio: str) -> None:
             density[None],
             centre_hz - width / 2,
             centre_hz + width / 2,
-            integration=rule,  # type: ignore[arg-type]
+            integration=rule,
             edges="partial",
         )
         assert power[0] / width - 1 == pytest.approx(check.expected[ratio], abs=check.tolerance)
@@ -264,9 +261,8 @@ def test_features_of_an_average_are_not_averages_of_features() -> None:
     mean = np.mean(density, axis=0, keepdims=True)
     average = Spectra("frontal", "uV", rows, single.freq_hz, mean, 0.5, np.array([4.0]))
     params = SpectralEdgeParams.model_validate({"fraction": "50 %", "within": ("0.5 Hz", "30 Hz")})
-    assert SPECTRAL_EDGE.run is not None
-    assert SPECTRAL_EDGE.run(params, single).columns[""].tolist() == pytest.approx([2.0, 20.0])
-    edge = float(SPECTRAL_EDGE.run(params, average).columns[""][0])
+    assert edge_run(params, single).columns[""].tolist() == pytest.approx([2.0, 20.0])
+    edge = float(edge_run(params, average).columns[""][0])
     assert edge == pytest.approx(2.0 + 0.25 * (2 / 3 - 0.5), abs=1e-9)
     bands = {"low": ("0.5 Hz", "4 Hz")}
     each = [powers(spectra(row), bands=bands)["low"] for row in density]

@@ -26,7 +26,8 @@ def arterial(rate_per_min: float, length_s: float = 10.0, ventilated_mmhg: float
     rise = 40 * np.sin(np.pi * np.minimum(beat / 0.35, 1.0)) ** 1.5
     runoff = 12 * np.exp(-3 * beat) * np.minimum(beat / 0.08, 1.0)
     notch = 6 * np.exp(-0.5 * ((beat - 0.42) / 0.04) ** 2)
-    return 75 + rise + runoff + notch + ventilated_mmhg * np.sin(2 * np.pi * 0.2 * t + 0.7)
+    breath = ventilated_mmhg * np.sin(2 * np.pi * 0.2 * t + 0.7)
+    return np.asarray(75 + rise + runoff + notch + breath, np.float64)
 
 
 # Whole cycles in an epoch, sampled so finely that what lies above the harmonics fitted does not

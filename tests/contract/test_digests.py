@@ -10,7 +10,7 @@ from typing import Any
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from waveassay.contract.digests import canonical_json, digest
@@ -40,16 +40,19 @@ def typed(value: Any) -> Any:
     return (type(value).__name__, repr(value))
 
 
+@settings(deadline=None)
 @given(VALUES)
 def test_the_text_reads_back_to_the_same_value_and_type(value: Any) -> None:
     assert typed(json.loads(canonical_json(value))) == typed(value)
 
 
+@settings(deadline=None)
 @given(VALUES, st.randoms(use_true_random=False))
 def test_the_order_of_keys_is_irrelevant(value: Any, order: random.Random) -> None:
     assert canonical_json(shuffled(value, order)) == canonical_json(value)
 
 
+@settings(deadline=None)
 @given(VALUES, VALUES)
 def test_two_values_share_a_digest_only_if_they_are_the_same(one: Any, other: Any) -> None:
     assert (digest(one) == digest(other)) == (typed(one) == typed(other))

@@ -5,7 +5,7 @@ from itertools import pairwise
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from waveassay.contract import Condition, Epochs, Exclusion, Interval, Signal, merged
@@ -35,11 +35,13 @@ def masked(masks: object, reason: str, time: Fraction) -> bool:
     return any(m.reason == reason and m.start_s <= time < m.stop_s for m in masks)
 
 
+@settings(deadline=None)
 @given(MASKS, TIMES, REASONS)
 def test_merging_changes_no_moment(masks: list[Exclusion], time: Fraction, reason: str) -> None:
     assert masked(merged(masks), reason, time) == masked(masks, reason, time)
 
 
+@settings(deadline=None)
 @given(MASKS, st.randoms(use_true_random=False))
 def test_merging_knows_no_order_and_is_done_once(masks: list[Exclusion], random: object) -> None:
     once = merged(masks)
@@ -47,6 +49,7 @@ def test_merging_knows_no_order_and_is_done_once(masks: list[Exclusion], random:
     assert merged(reversed(masks)) == once
 
 
+@settings(deadline=None)
 @given(MASKS)
 def test_merged_masks_of_one_reason_lie_apart(masks: list[Exclusion]) -> None:
     for reason in ("a", "b"):
@@ -55,6 +58,7 @@ def test_merged_masks_of_one_reason_lie_apart(masks: list[Exclusion]) -> None:
         assert all(one.stop_s < other.start_s for one, other in pairwise(found))
 
 
+@settings(deadline=None)
 @given(MASKS, TIMES, TIMES)
 def test_cut_takes_what_starts_inside_and_its_masks(
     masks: list[Exclusion], start: Fraction, stop: Fraction
@@ -72,6 +76,7 @@ def test_cut_takes_what_starts_inside_and_its_masks(
             assert masked(part.excluded, reason, time) == masked(whole.excluded, reason, time)
 
 
+@settings(deadline=None)
 @given(MASKS, TIMES)
 def test_parts_that_touch_make_the_whole(masks: list[Exclusion], border: Fraction) -> None:
     whole = signal(masks)
@@ -83,6 +88,7 @@ def test_parts_that_touch_make_the_whole(masks: list[Exclusion], border: Fractio
     assert joined == whole.cut(start, stop).excluded
 
 
+@settings(deadline=None)
 @given(MASKS, st.fractions(0, 3, max_denominator=8), st.fractions(0, 3, max_denominator=8))
 def test_widening_reaches_as_far_as_asked_and_not_beyond_the_piece(
     masks: list[Exclusion], before: Fraction, after: Fraction
@@ -132,6 +138,7 @@ def test_epochs_are_places_and_only_the_kept_are_copied() -> None:
     assert epochs.rows.duration_s.tolist() == [1.0, 1.0, 1.0]
 
 
+@settings(deadline=None)
 @given(TIMES, TIMES)
 def test_epochs_starting_in_an_interval(start: Fraction, stop: Fraction) -> None:
     first = np.arange(0, 150, 7)

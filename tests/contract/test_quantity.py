@@ -4,7 +4,7 @@ from fractions import Fraction
 from typing import Annotated
 
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from pydantic import Field, ValidationError
 
@@ -75,6 +75,7 @@ def test_wrong_quantities_say_what_is_wrong(field: str, value: object, said: str
         Everything.model_validate({field: value})
 
 
+@settings(deadline=None)
 @given(FINITE)
 def test_exact_is_the_decimal_that_a_person_reads(value: float) -> None:
     assert float(exact(value)) == value
@@ -85,12 +86,14 @@ def test_exact_is_not_the_nearest_double() -> None:
     assert exact(0.1) == Fraction(1, 10) != Fraction(0.1)
 
 
+@settings(deadline=None)
 @given(FINITE, st.sampled_from(["uV", "mmHg", "Hz", "s"]))
 def test_a_quantity_reads_back_from_its_text(value: float, unit: str) -> None:
     quantity = Quantity(value, unit)
     assert parse_quantity(str(quantity)) == quantity
 
 
+@settings(deadline=None)
 @given(
     st.floats(1e-3, 1e6), st.floats(-1e6, 1e6), st.decimals(0, 100, places=2), st.floats(-99, 99)
 )

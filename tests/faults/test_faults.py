@@ -120,7 +120,7 @@ def test_workers_do_not_outlive_a_killed_parent(made: Path, tmp_path: Path) -> N
     process = start(made, tmp_path)
     wait_until(results_stored(tmp_path, 1))
     os.kill(process.pid, signal.SIGKILL)
-    process.wait(timeout=30)
+    process.communicate(timeout=30)
     for _ in range(100):
         before = stored(tmp_path)
         time.sleep(0.2)

@@ -9,6 +9,7 @@ import sys
 import time
 from fractions import Fraction
 from pathlib import Path
+from types import SimpleNamespace
 from typing import Any
 
 import pytest
@@ -22,20 +23,23 @@ HASHER = "waveassay.provenance.recording_digests.sha256_of"
 
 
 class Clock:
-    """The wall clock, which a test can put ahead so that files look as if they had settled."""
+    """The wall clock, set by hand: at first so late that every file has settled."""
 
     def __init__(self) -> None:
-        self.ahead_s = 0.0
-        self._true = time.time_ns
+        self.now_ns = time.time_ns() + 3600 * 10**9
 
     def __call__(self) -> int:
-        return self._true() + int(self.ahead_s * 1e9)
+        return self.now_ns
+
+    def set_after(self, path: Path, seconds: float) -> None:
+        """Set it to so long after the last change of a file."""
+        stat = path.stat()
+        self.now_ns = max(stat.st_mtime_ns, stat.st_ctime_ns) + int(seconds * 1e9)
 
 
 @pytest.fixture
 def clock(monkeypatch: pytest.MonkeyPatch) -> Clock:
     clock = Clock()
-    clock.ahead_s = 3600
     monkeypatch.setattr(time, "time_ns", clock)
     return clock
 
@@ -144,9 +148,10 @@ def test_a_changed_file_is_read_again(
 
 
 def test_a_file_that_changed_just_now_is_not_trusted_by_its_times(
-    store: Path, recording: Path, reads: list[Path]
+    store: Path, recording: Path, reads: list[Path], clock: Clock
 ) -> None:
     # Two changes within one step of a file system's clock leave equal times (steps are up to 2 s).
+    clock.set_after(recording, 2)
     with RecordingDigests(store) as digests:
         digests.digest(recording)
         digests.digest(recording)
@@ -158,45 +163,52 @@ def test_a_file_that_changed_just_now_is_not_trusted_by_its_times(
     assert reads == [recording] * 3
 
 
+def test_a_file_dated_in_the_future_is_not_trusted(
+    store: Path, recording: Path, reads: list[Path], clock: Clock
+) -> None:
+    clock.set_after(recording, -3600)
+    with RecordingDigests(store) as digests:
+        digests.digest(recording)
+        digests.digest(recording)
+    assert reads == [recording, recording]
+
+
 def test_whether_it_settled_counts_from_the_start_of_the_reading(
     store: Path, recording: Path, clock: Clock, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     # A long reading that began just after a change may have missed a second one.
-    clock.ahead_s = 0
+    reads = []
 
     def slow(path: Path) -> str:
-        clock.ahead_s += 60
+        reads.append(path)
+        clock.set_after(path, 60)
         return sha256_of(path)
 
     monkeypatch.setattr(HASHER, slow)
     with RecordingDigests(store) as digests:
+        clock.set_after(recording, 1)
         digests.digest(recording)
-        assert clock.ahead_s == 60
-        clock.ahead_s = 0
         digests.digest(recording)
-        assert clock.ahead_s == 60  # it was read again
+        assert len(reads) == 2  # the second reading began late enough
         digests.digest(recording)
-        assert clock.ahead_s == 120  # and again, this time settled
-        digests.digest(recording)
-        assert clock.ahead_s == 120
+        assert len(reads) == 2
 
 
-def test_the_edge_of_being_settled(store: Path, recording: Path, clock: Clock) -> None:
-    stat = recording.stat()
-    age_s = (time.time_ns() - 3600e9 - max(stat.st_mtime_ns, stat.st_ctime_ns)) / 1e9
+@pytest.mark.parametrize(("age_s", "count"), [(UNSETTLED_S - 0.01, 2), (UNSETTLED_S + 0.01, 1)])
+def test_the_edge_of_being_settled(
+    store: Path, recording: Path, clock: Clock, age_s: float, count: int
+) -> None:
     made = []
 
     def make() -> dict[str, Any]:
         made.append(1)
         return {}
 
+    clock.set_after(recording, age_s)
     with RecordingDigests(store) as digests:
-        for ahead_s, count in ((UNSETTLED_S - age_s - 1, 2), (UNSETTLED_S - age_s + 0.1, 1)):
-            made.clear()
-            clock.ahead_s = ahead_s
-            digests.facts(recording, make)
-            digests.facts(recording, make)
-            assert len(made) == count
+        digests.facts(recording, make)
+        digests.facts(recording, make)
+    assert len(made) == count
 
 
 @pytest.mark.usefixtures("clock")
@@ -299,6 +311,24 @@ def test_a_name_that_is_not_utf8(store: Path, tmp_path: Path, reads: list[Path])
         with RecordingDigests(store) as digests:
             digests.digest(path)
     assert reads == [path]
+
+
+@pytest.mark.usefixtures("clock")
+def test_inodes_of_64_bits(
+    store: Path, recording: Path, reads: list[Path], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    true_stat = os.stat
+
+    def large(path: Any, **more: Any) -> Any:
+        stat = true_stat(path, **more)
+        names = ("st_size", "st_mtime_ns", "st_ctime_ns", "st_mode")
+        return SimpleNamespace(st_ino=2**64 - 1, **{name: getattr(stat, name) for name in names})
+
+    monkeypatch.setattr(os, "stat", large)
+    for _ in range(2):
+        with RecordingDigests(store) as digests:
+            digests.digest(recording)
+    assert reads == [recording]
 
 
 @pytest.mark.usefixtures("clock")

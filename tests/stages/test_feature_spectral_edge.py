@@ -3,7 +3,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from feature_data import Collected, some_rows, spectra, spectra_spec
+from feature_data import Collected, bins, some_rows, spectra, spectra_spec
 from waveassay_stages.feature.spectral_edge import (
     SpectralEdgeParams,
     cumulative_power,
@@ -12,7 +12,7 @@ from waveassay_stages.feature.spectral_edge import (
     spectral_edges,
 )
 
-FREQ = np.arange(257) * 0.25
+FREQ = bins(257, 0.25)
 RULES = st.sampled_from(["rectangle", "trapezoid"])
 
 
@@ -65,7 +65,7 @@ def test_the_bin_rule_takes_the_first_bin_that_reaches_the_share() -> None:
     # Bins at 1, 2, ..., 10 Hz with equal power: half is reached with the fifth.
     density = np.zeros((1, 65))
     density[0, 1:11] = 0.1
-    freq = np.arange(65.0)
+    freq = bins(65, 1.0)
     assert spectral_edges(freq, density, 1.0, 10.0, 0.5, interpolation="bin")[0] == 5.0
     assert spectral_edges(freq, density, 1.0, 10.0, 0.51, interpolation="bin")[0] == 6.0
 
@@ -83,7 +83,7 @@ def test_the_median_of_one_line_is_the_line() -> None:
     density = np.zeros((1, 257))
     density[0, 40] = 7.0
     for rule in ("rectangle", "trapezoid"):
-        edge = spectral_edges(FREQ, density, 0.5, 30.0, 0.5, integration=rule)  # type: ignore[arg-type]
+        edge = spectral_edges(FREQ, density, 0.5, 30.0, 0.5, integration=rule)
         assert edge[0] == pytest.approx(10.0, abs=1e-12)
 
 

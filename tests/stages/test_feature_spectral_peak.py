@@ -3,7 +3,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from feature_data import Collected, some_rows, spectra, spectra_spec
+from feature_data import Collected, bins, some_rows, spectra, spectra_spec
 from waveassay_stages.feature.spectral_peak import (
     SpectralPeakParams,
     run,
@@ -11,7 +11,7 @@ from waveassay_stages.feature.spectral_peak import (
     spectral_peaks,
 )
 
-FREQ = np.arange(257) * 0.25
+FREQ = bins(257, 0.25)
 
 
 def params(**given: object) -> SpectralPeakParams:

@@ -62,8 +62,8 @@ def test_line_and_harmonics_are_gone_and_the_rest_stays(passes: str) -> None:
     assert notched_hz(asked, rate) == tuple(50.0 * k for k in range(1, 10))
     middle = slice(count // 3, -count // 3)
     assert np.max(np.abs(notch(hum, rate, asked)[middle])) < 1e-9
-    wave = tone(10, rate, count)
-    assert notch(wave, rate, asked)[middle] == pytest.approx(wave[middle], abs=0.01)
+    wave = tone(10, rate, count)  # forward, nine notches delay it by a little
+    assert notch(wave, rate, asked)[middle] == pytest.approx(wave[middle], abs=0.02)
 
 
 @pytest.mark.parametrize(

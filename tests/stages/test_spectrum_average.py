@@ -220,7 +220,9 @@ def test_overlap_of_single_transforms_is_welchs_formula(name: WindowName, overla
     n, count = 1000, 25
     w, hop = window(name, n), round(n * (1 - overlap))
     shared = sum((1 - m / count) * overlap_correlation(w, m * hop) ** 2 for m in range(1, count))
-    found = independent_share(np.arange(25) * float(hop), n, 2.0, noise_bandwidth_bins(w))
+    found = independent_share(
+        np.arange(25, dtype=np.float64) * hop, n, 2.0, noise_bandwidth_bins(w)
+    )
     assert found == pytest.approx(1 / (1 + 2 * shared), rel=1e-3)
 
 

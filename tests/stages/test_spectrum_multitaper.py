@@ -148,6 +148,16 @@ def test_exact_fractions_keep_the_last_taper() -> None:
     assert found.errors == []
 
 
+def test_a_length_that_no_float_holds_keeps_its_last_taper() -> None:
+    """8 samples at 3 Hz are 8/3 s; 1.125 Hz times that is NW = 3 exactly: 5 tapers."""
+    params = params_of(stage.MultitaperParams, half_bandwidth="1.125 Hz", tapers=5)
+    length_s = 8 / 3
+    assert Fraction(repr(length_s)) < Fraction(8, 3)
+    found = Found()
+    stage.spec(params, epochs_spec(length_s, 3), found.findings)
+    assert found.errors == []
+
+
 def test_eigenvalue_weights_count_for_fewer_degrees_of_freedom() -> None:
     _, concentrations = slepian_tapers(512, Fraction(2), 3)
     weight = stage.taper_weights(concentrations, "eigenvalue")

@@ -1,5 +1,8 @@
 """Welch's estimate."""
 
+from fractions import Fraction
+from typing import Any
+
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -40,6 +43,7 @@ def test_agrees_with_scipy(
     from scipy import signal
 
     x = np.random.default_rng(seed).normal(0, 20, (3, segment + more))
+    without: Any = False if detrend == "none" else detrend  # the stubs misspell "linear"
     freq_hz, found = stage.welch(
         x,
         250,
@@ -57,7 +61,7 @@ def test_agrees_with_scipy(
         nperseg=segment,
         noverlap=segment - stage.segment_starts(segment, segment, overlap).step,
         nfft=transform_length(segment, padding),
-        detrend=False if detrend == "none" else detrend,
+        detrend=without,
         average=average,
     )
     np.testing.assert_allclose(freq_hz, expected_hz, rtol=1e-15)
@@ -133,9 +137,8 @@ def test_a_row_shorter_than_a_segment_is_an_error() -> None:
 
 def refused(parameters: dict[str, str], length_s: float, rate_hz: int | None) -> list[str]:
     found = Found()
-    stage.spec(
-        params_of(stage.WelchParams, **parameters), epochs_spec(length_s, rate_hz), found.findings
-    )
+    params = params_of(stage.WelchParams, **parameters)
+    stage.spec(params, epochs_spec(length_s, rate_hz), found.findings)
     assert all(at == "segment" for at, _ in found.errors)
     return [message for _, message in found.errors]
 
@@ -146,6 +149,14 @@ def test_a_segment_longer_than_the_epoch_is_refused(rate_hz: int | None) -> None
     assert "5 s" in message
     assert "4 s" in message
     assert refused({"segment": "4 s"}, 4.0, rate_hz) == []
+
+
+def test_a_segment_as_long_as_the_epoch_fits_after_rounding() -> None:
+    """1 s at 1000/3 Hz is 333 samples, 0.999 s, for the epoch and the segment alike."""
+    found = Found()
+    params = params_of(stage.WelchParams, segment="1 s")
+    stage.spec(params, epochs_spec(0.999, Fraction(1000, 3)), found.findings)
+    assert found.errors == []
 
 
 def test_a_segment_of_few_samples_is_refused() -> None:

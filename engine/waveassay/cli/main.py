@@ -134,9 +134,6 @@ def main() -> None:
     except WaveassayError as error:
         sys.stderr.write(f"{error}\n")
         sys.exit(error.exit_code)
-    except KeyboardInterrupt:
-        sys.stderr.write("\nStopped. Give the same command again to go on.\n")
-        sys.exit(130)
     except BrokenPipeError:  # the reader of our output has gone, as `head` does
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         sys.exit(0)

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 from waveassay.cli.loading import load_recipe
 from waveassay.cli.screen import NOTICE, console, plural
 from waveassay.contract.errors import UsageError
-from waveassay.execute.run import RunOutcome, Watcher, run_recipe
+from waveassay.execute.run import InterruptedRunError, RunOutcome, Watcher, run_recipe
 from waveassay.plan.recordings import find_recordings
 
 if TYPE_CHECKING:
@@ -35,16 +35,19 @@ def run(
     )
     from waveassay.execute.snakemake.backend import run_with_snakemake
 
-    with _Bar() as bar:
-        outcome = run_recipe(
-            recipe,
-            found,
-            folder,
-            store_folder=store,
-            workers=workers or _usable_cores(),
-            runner=run_with_snakemake,
-            watcher=bar.watcher,
-        )
+    try:
+        with _Bar() as bar:
+            outcome = run_recipe(
+                recipe,
+                found,
+                folder,
+                store_folder=store,
+                workers=workers or _usable_cores(),
+                runner=run_with_snakemake,
+                watcher=bar.watcher,
+            )
+    except KeyboardInterrupt:
+        raise InterruptedRunError from None
     return _report(outcome)
 
 

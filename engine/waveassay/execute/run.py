@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import Any
 
 from waveassay.contract import SignalError
-from waveassay.contract.errors import MachineError
+from waveassay.contract.errors import MachineError, WaveassayError
 from waveassay.execute.bundles import installed_bundles
 from waveassay.execute.handover import read_recording, write_work
 from waveassay.execute.lock import one_run_in
@@ -63,8 +63,13 @@ class RunOutcome:
     timings_s: Mapping[str, float] = field(default_factory=dict)
 
 
-class Interrupted(KeyboardInterrupt):
+class InterruptedRunError(WaveassayError):
     """The user stopped the run; what was finished is kept in the store."""
+
+    exit_code = 130
+
+    def __init__(self) -> None:
+        super().__init__("Stopped. What was finished is kept: give the same command again.")
 
 
 def run_recipe(
@@ -85,7 +90,7 @@ def run_recipe(
         When another run uses the folder.
     MachineError
         When the disk or the memory declines; what was finished is kept.
-    Interrupted
+    InterruptedRunError
         When the user stops it, likewise.
     """
     watcher = watcher or Watcher()
@@ -93,7 +98,8 @@ def run_recipe(
     into = into.resolve()
     with one_run_in(into / "runs"):
         store = Store((store_folder or into / "store").resolve())
-        read = _read_all(found, RecordingDigests(store.root), watcher)
+        with RecordingDigests(store.root) as digests:
+            read = _read_all(found, digests, watcher)
         sha256 = {
             name: item.sha256 for name, item in read.items() if isinstance(item, ReadRecording)
         }
@@ -167,7 +173,7 @@ class _Run:
             whole = self.runner(work, self.workers, on_event)
         if stopped:
             folder.log.append("run_interrupted")
-            raise Interrupted
+            raise InterruptedRunError
         machine = machine_problem(ended)
         if machine is not None:
             folder.log.append("run_stopped", why=machine)

@@ -9,6 +9,7 @@ import hashlib
 import json
 import os
 import shutil
+import socket
 import tempfile
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -64,7 +65,7 @@ class Store:
         place = self._place(key)
         try:
             place.parent.mkdir(parents=True, exist_ok=True)
-            part = Path(tempfile.mkdtemp(prefix=PART_PREFIX, dir=place.parent))
+            part = Path(tempfile.mkdtemp(prefix=_own_prefix(), dir=place.parent))
             try:
                 yield part
                 self._put(key, environment, part)
@@ -129,9 +130,33 @@ class Store:
         return facts["digest"], facts["environment"]
 
     def sweep(self) -> None:
-        """Remove what killed processes left half written."""
+        """Remove what killed processes of this machine left half written.
+
+        A store may be shared: what a live process, or another machine, is writing stays.
+        """
         for part in self.root.glob(f"objects/*/{PART_PREFIX}*"):
-            shutil.rmtree(part, ignore_errors=True)
+            host, _, process = part.name.removeprefix(PART_PREFIX).rpartition(".")
+            number = process.split("-")[0]
+            if host == _host() and number.isdigit() and not _lives(int(number)):
+                shutil.rmtree(part, ignore_errors=True)
+
+
+def _own_prefix() -> str:
+    return f"{PART_PREFIX}{_host()}.{os.getpid()}-"
+
+
+def _host() -> str:
+    return socket.gethostname().replace("/", "_")
+
+
+def _lives(process: int) -> bool:
+    try:
+        os.kill(process, 0)
+    except ProcessLookupError:
+        return False
+    except PermissionError:  # it lives, and is somebody else's
+        return True
+    return True
 
 
 def _sha256(path: Path) -> str:

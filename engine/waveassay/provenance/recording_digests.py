@@ -29,6 +29,8 @@ UNSETTLED_S = 2.5
 _SAVE_EVERY_S = 1.0
 _WAIT_S = 10.0
 _EDITION = 1
+# Network folders without file locks: nothing can be remembered there, and the run goes on.
+_NO_LOCKS = (sqlite3.SQLITE_PROTOCOL, sqlite3.SQLITE_NOLFS, sqlite3.SQLITE_IOERR_LOCK)
 _TABLE = """
 CREATE TABLE IF NOT EXISTS recordings (
     path BLOB PRIMARY KEY, size INTEGER, modified_ns INTEGER, changed_ns INTEGER, inode INTEGER,
@@ -217,16 +219,20 @@ class RecordingDigests:
     def _with_database(self, use: Callable[[sqlite3.Connection], None]) -> bool:
         """Run one transaction; tell whether it was done.
 
-        Not done when another process kept the database busy. A damaged one is begun afresh.
+        Not done when another process kept the database busy, or where files cannot be locked. A
+        damaged database is begun afresh.
         """
         for last in (False, True):
             try:
-                with closing(sqlite3.connect(self.path, timeout=_WAIT_S)) as database, database:
+                with closing(sqlite3.connect(self.path, _WAIT_S, isolation_level=None)) as database:
+                    database.execute("BEGIN IMMEDIATE")  # closing without COMMIT undoes all
                     _prepare(database)
                     use(database)
+                    database.execute("COMMIT")
                 return True
             except sqlite3.OperationalError as error:
-                if error.sqlite_errorcode in (sqlite3.SQLITE_BUSY, sqlite3.SQLITE_LOCKED):
+                code = error.sqlite_errorcode
+                if code in _NO_LOCKS or code & 0xFF in (sqlite3.SQLITE_BUSY, sqlite3.SQLITE_LOCKED):
                     return False
                 raise MachineError(
                     f"{self.path}: cannot be used: {error}; see that the disk is not full and that "
@@ -275,7 +281,8 @@ def _read_steady(path: Path, read: Callable[[], str]) -> tuple[_Read, str]:
 
 
 def _stamp(stat: os.stat_result) -> _Stamp:
-    return stat.st_size, stat.st_mtime_ns, stat.st_ctime_ns, stat.st_ino
+    inode = stat.st_ino & (2**63 - 1)  # some file systems use all 64 bits, the database 63
+    return stat.st_size, stat.st_mtime_ns, stat.st_ctime_ns, inode
 
 
 def _key(path: Path) -> bytes:

@@ -70,7 +70,7 @@ def read_top(root: yaml.MappingNode, report: Report) -> Sections:
             report.error(start, "R101", f"is missing: {SECTIONS[name].rstrip('.')}", name)
     head = yaml.MappingNode(
         root.tag,
-        [pair for pair in root.value if pair[0].value in Head.model_fields],
+        [pair for name, pair in nodes.items() if name in Head.model_fields],
         root.start_mark,
         root.end_mark,
     )

@@ -9,10 +9,7 @@ from waveassay.recipe.yaml_nodes import MAX_BYTES, decode
 
 
 def folder() -> Path:
-    """Return the shipped recipes' folder: within the package (a wheel) or beside it (a checkout).
-
-    It is there in both; a package that was taken apart gives a folder that is not.
-    """
+    """Return the shipped recipes' folder: in the package (a wheel) or beside it (a checkout)."""
     package = Path(str(files("waveassay")))
     shipped = package / "recipes"
     return shipped if shipped.is_dir() else package.parents[1] / "recipes"

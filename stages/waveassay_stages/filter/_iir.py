@@ -136,10 +136,10 @@ def reach_samples(filters: Cascade, passes: Passes, share: float) -> int:
 def response_samples(filters: Cascade, passes: Passes) -> int:
     r"""Return how long the response stays above 1 %, in samples.
 
-    The smallest n with :math:`\sum_{m > n} |h[m]| \le 0.01` (or a thousandth more): an artefact of any shape and length
-    and of size A, that lies n samples away or more, leaves at most A / 100. (An artefact of the
-    worst shape leaves just that; a step leaves less.) Measured on the impulse response of all
-    passes, to one side.
+    The smallest n (or a thousandth more) with :math:`\sum_{m > n} |h[m]| \le 0.01`: an artefact of
+    any shape and length and of size A, that lies more than n samples away, leaves at most A / 100.
+    (That of the worst shape leaves just as much; a step leaves less.) Measured on the impulse
+    response of all passes, to one side.
     """
     rest = RESPONSE_SHARE / 1000  # what lies beyond the part that is looked at
     length = reach_samples(filters, passes, rest)

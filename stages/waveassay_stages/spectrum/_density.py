@@ -7,7 +7,16 @@ from typing import Literal
 
 import numpy as np
 
-from waveassay.contract import Epochs, EpochsSpec, Findings, Floats, Ints, Spectra, SpectraSpec, exact
+from waveassay.contract import (
+    Epochs,
+    EpochsSpec,
+    Findings,
+    Floats,
+    Ints,
+    Spectra,
+    SpectraSpec,
+    exact,
+)
 
 Detrend = Literal["none", "constant", "linear"]
 ZeroPadding = Literal["none", "next_power_of_two", "twice", "four_times"]
@@ -27,6 +36,14 @@ BLOCK_SAMPLES = 12288
 def samples_in(length_s: float, rate_hz: Fraction) -> int:
     """Return the nearest whole number of samples in a time."""
     return round(exact(length_s) * rate_hz)
+
+
+def length_of(given: EpochsSpec) -> Fraction:
+    """Return the exact length of an epoch, s: a whole number of samples where the rate is known."""
+    rate_hz = given.signal.rate_hz
+    if rate_hz is None:
+        return exact(given.length_s)
+    return samples_in(given.length_s, rate_hz) / rate_hz
 
 
 def transform_length(samples: int, padding: ZeroPadding) -> int:

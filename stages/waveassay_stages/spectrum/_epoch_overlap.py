@@ -22,10 +22,14 @@ def repeat_correlation(shared: Floats, dof: float, bandwidth_time: float) -> Flo
                     - \tfrac{1}{\pi} (a - \tfrac{a^2}{4}) \sin 2 \pi s}{1 + a^2 / 2};
 
       this is exact for the rectangle, Hamming's and Hann's window (Welch's formula);
-    - anything else is taken to correlate as :math:`s^{1 + 2/\nu}`: exact for one rectangle, tending
-      to s for estimates that use all of an epoch alike. Against the exact correlation of
-      multitaper estimates (NW 1 to 8, 2 NW - 1 tapers, s from 0.25 to 0.9) it is too high by at
-      most 0.11 and too low by at most 0.05 (both at NW = 1, elsewhere by 0.07 and 0.03).
+    - anything else is taken to correlate as :math:`s^{1 + 2/\nu}`: exact for one rectangle, and
+      tending to s for estimates that use all of an epoch alike.
+
+    What this makes of the degrees of freedom of a mean over 40 epochs that overlap by 25 to 90 %,
+    against the exact formula for the estimator at hand: 0.95 to 1.05 times for windows no narrower
+    than Hann's, 0.87 to 1 for multitaper (NW 1 to 8), 0.67 to 1.02 for Welch with segments
+    overlapping by 50 or 75 %, 0.40 to 1.17 for Welch without overlap, 0.33 to 1 for windows
+    narrower than Hann's. Where it errs, it errs nearly always to fewer: a wider band.
 
     Parameters
     ----------

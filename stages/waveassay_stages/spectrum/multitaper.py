@@ -129,7 +129,7 @@ def multitaper(
 
 def spec(params: MultitaperParams, given: EpochsSpec, findings: Findings) -> SpectraSpec:
     """Refuse a half bandwidth or a number of tapers that the epoch cannot carry."""
-    length = exact(given.length_s)
+    length = _density.length_of(given)
     time_bandwidth = exact(params.half_bandwidth) * length
     if time_bandwidth < 1:
         findings.refuse(

@@ -202,18 +202,21 @@ def degrees_of_freedom(
 
 def spec(params: WelchParams, given: EpochsSpec, findings: Findings) -> SpectraSpec:
     """Refuse segments that do not fit; say bins and resolution, and what is left unused."""
-    length, segment = exact(given.length_s), exact(params.segment)
-    if segment > length:
+    rate_hz = given.signal.rate_hz
+    if rate_hz is None:
+        too_long = params.segment > given.length_s
+    else:  # both are rounded to samples
+        samples = _density.samples_in(given.length_s, rate_hz)
+        too_long = _density.samples_in(params.segment, rate_hz) > samples
+    if too_long:
         findings.refuse(
             f"a segment of {params.segment:g} s does not fit an epoch of {given.length_s:g} s; "
             "shorten the segment or lengthen the epochs",
             "segment",
         )
     _density.refuse_too_short("a segment", params.segment, given, findings, "segment")
-    rate_hz = given.signal.rate_hz
     resolution = None
     if rate_hz is not None:
-        samples = _density.samples_in(given.length_s, rate_hz)
         count = max(1, _density.samples_in(params.segment, rate_hz))
         w = window(params.window, count)
         resolution = noise_bandwidth_bins(w) * float(rate_hz / count)

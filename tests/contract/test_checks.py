@@ -1,0 +1,333 @@
+"""The checks for authors catch a stage that does not keep its word, each by its own check."""
+
+from collections.abc import Callable, Sequence
+from dataclasses import replace
+from fractions import Fraction
+from typing import Any
+
+import numpy as np
+import pytest
+from pydantic import ConfigDict, Field
+
+from waveassay.contract import (
+    ColumnSpec,
+    EachRow,
+    Epochs,
+    EpochsSpec,
+    Exclusion,
+    Features,
+    FeaturesSpec,
+    Findings,
+    Kind,
+    Params,
+    Part,
+    Reach,
+    Signal,
+    SignalSpec,
+    Stage,
+    Whole,
+    checks,
+)
+from waveassay.contract.checks import CHECKS
+
+LENGTH = 11
+
+
+class SmoothParams(Params):
+    """Parameters of a moving average."""
+
+    weight: float = Field(default=1.0, description="What every sample is multiplied by.")
+
+
+def smooth_spec(params: Any, given: SignalSpec, findings: Findings) -> SignalSpec:
+    return given
+
+
+def smooth(params: Any, signal: Signal) -> Signal:
+    """Average eleven samples, five on either side; ends are repeated."""
+    padded = np.pad(signal.x, LENGTH // 2, mode="edge")
+    windows = np.lib.stride_tricks.sliding_window_view(padded, LENGTH)
+    half_s = LENGTH // 2 / signal.rate_hz
+    out = signal.with_samples(params.weight * np.mean(np.ascontiguousarray(windows), axis=-1))
+    return out.widened(half_s, half_s)
+
+
+def smooth_context(params: Any, given: SignalSpec) -> Reach:
+    assert given.rate_hz is not None
+    return Reach(LENGTH // 2 / given.rate_hz, LENGTH // 2 / given.rate_hz)
+
+
+HONEST = Stage(
+    name="filter.smooth",
+    version=1,
+    params=SmoothParams,
+    takes=(Kind.SIGNALS,),
+    gives=Kind.SIGNALS,
+    spec=smooth_spec,
+    run=smooth,
+    context=smooth_context,
+    example={"weight": 2.0},
+)
+
+
+def size_spec(params: Any, given: EpochsSpec, findings: Findings) -> FeaturesSpec:
+    columns = (ColumnSpec("rms", given.signal.unit, "size"), ColumnSpec("top", "", "largest"))
+    return FeaturesSpec(given.signal, columns)
+
+
+def size(params: Any, epochs: Epochs) -> Features:
+    found = np.full((2, len(epochs)), np.nan)
+    samples = epochs.samples()
+    found[0, epochs.kept] = np.sqrt(np.mean(samples**2, axis=-1))
+    found[1, epochs.kept] = np.max(samples, axis=-1)
+    columns = {"rms": found[0], "top": found[1]}
+    return Features(epochs.signal.name, epochs.rows, columns, ("",) * len(epochs))
+
+
+HONEST_ROWS = replace(
+    HONEST,
+    name="feature.size",
+    takes=(Kind.EPOCHS,),
+    gives=Kind.FEATURES,
+    spec=size_spec,
+    run=size,
+    context=EachRow(),
+)
+
+
+def levels(params: Any, signal: Signal) -> Part:
+    return {"sum": np.array([np.sum(signal.x)]), "count": np.array([signal.x.size])}
+
+
+def mean_level(params: Any, parts: Sequence[Part]) -> Part:
+    total = sum(float(part["sum"][0]) for part in parts)
+    return {"mean": np.array([total / sum(int(part["count"][0]) for part in parts)])}
+
+
+def less_mean(params: Any, signal: Signal, state: Part) -> Signal:
+    return signal.with_samples(signal.x - state["mean"][0])
+
+
+HONEST_WHOLE = replace(HONEST, run=None, context=Whole(levels, mean_level, less_mean))
+
+
+@pytest.mark.parametrize("check", CHECKS, ids=lambda check: check.__name__)
+@pytest.mark.parametrize("stage", [HONEST, HONEST_ROWS, HONEST_WHOLE], ids=["reach", "rows", "all"])
+def test_an_honest_stage_passes(stage: Stage, check: Callable[[Stage], None]) -> None:
+    check(stage)
+
+
+def caught(check: Callable[[Stage], None], said: str, stage: Stage) -> None:
+    with pytest.raises(AssertionError, match=said):
+        check(stage)
+
+
+class Loose(SmoothParams):
+    """Takes anything."""
+
+    model_config = ConfigDict(extra="ignore")
+
+
+class Bare(Params):
+    """Says nothing of its parameter."""
+
+    weight: float = 1.0
+
+
+class Forgetful(SmoothParams):
+    """Writes out something else than it read."""
+
+    def model_dump(self, **options: Any) -> dict[str, Any]:
+        """Lose the value."""
+        return {"weight": 1.0}
+
+
+@pytest.mark.parametrize(
+    ("check", "said", "changes"),
+    [
+        (checks.check_name, "lower case", {"name": "Filter Smooth"}),
+        (checks.check_name, "starts at 1", {"version": 0}),
+        (checks.check_is_described, "no source", {"source": " "}),
+        (checks.check_parameters_are_described, "weight", {"params": Bare}),
+        (checks.check_refuses_unknown_parameters, "silently", {"params": Loose}),
+        (checks.check_example, "its example is refused", {"example": {"weight": "heavy"}}),
+        (checks.check_example, "reads back", {"params": Forgetful}),
+    ],
+)
+def test_what_it_says_of_itself(
+    check: Callable[[Stage], None], said: str, changes: dict[str, Any]
+) -> None:
+    caught(check, said, replace(HONEST, **changes))
+
+
+@pytest.mark.parametrize("short", [1, 5])
+@pytest.mark.parametrize("side", ["before_s", "after_s"])
+def test_a_reach_that_is_too_short(short: int, side: str) -> None:
+    def context(params: Any, given: SignalSpec) -> Reach:
+        assert given.rate_hz is not None
+        reach = smooth_context(params, given)
+        return replace(reach, **{side: (LENGTH // 2 - short) / given.rate_hz})
+
+    caught(checks.check_context, "too short", replace(HONEST, context=context))
+
+
+def test_a_reach_too_short_for_the_masks_alone() -> None:
+    def run(params: Any, signal: Signal) -> Signal:
+        return smooth(params, signal).widened(Fraction(1), Fraction(0))
+
+    caught(checks.check_context, "excluded", replace(HONEST, run=run))
+
+
+def test_a_reach_on_a_stage_that_needs_the_whole() -> None:
+    def run(params: Any, signal: Signal) -> Signal:
+        return signal.with_samples(signal.x - np.mean(signal.x))
+
+    caught(checks.check_context, "too short", replace(HONEST, run=run))
+
+
+def test_a_grid_that_begins_with_what_is_given() -> None:
+    def run(params: Any, signal: Signal) -> Signal:
+        x = signal.x.copy()
+        x[::100] = 0.0
+        return signal.with_samples(x)
+
+    caught(checks.check_context, "where its input begins", replace(HONEST, run=run))
+
+
+def test_an_input_that_is_written() -> None:
+    def through_the_view(params: Any, signal: Signal) -> Signal:
+        signal.x[0] = 1.0
+        return signal
+
+    def by_force(params: Any, signal: Signal) -> Signal:
+        signal.x.flags.writeable = True
+        signal.x[0] += 1.0
+        return smooth(params, signal)
+
+    for run in (through_the_view, by_force):
+        caught(checks.check_input_is_not_written, "writes its input", replace(HONEST, run=run))
+
+
+def test_a_state_between_calls() -> None:
+    calls: list[int] = []
+
+    def run(params: Any, signal: Signal) -> Signal:
+        calls.append(1)
+        return signal.with_samples(signal.x + 1e-15 * len(calls) * signal.x)
+
+    caught(checks.check_same_twice, "run twice", replace(HONEST, run=run))
+
+
+def test_a_spec_that_says_something_else() -> None:
+    def other_rate(params: Any, given: SignalSpec, findings: Findings) -> SignalSpec:
+        return replace(given, rate_hz=Fraction(100))
+
+    def other_unit(params: Any, given: SignalSpec, findings: Findings) -> SignalSpec:
+        return replace(given, unit="V")
+
+    def epochs(params: Any, given: SignalSpec, findings: Findings) -> EpochsSpec:
+        return EpochsSpec(given, 4.0, 4.0)
+
+    check = checks.check_spec_agrees_with_data
+    caught(check, "rate 100", replace(HONEST, spec=other_rate))
+    caught(check, "unit V", replace(HONEST, spec=other_unit))
+    caught(check, "Signal comes", replace(HONEST, spec=epochs))
+
+
+def test_a_spec_that_wants_the_rate() -> None:
+    def spec(params: Any, given: SignalSpec, findings: Findings) -> SignalSpec:
+        assert given.rate_hz is not None, "no rate"
+        return given
+
+    caught(checks.check_spec_without_rate, "no rate", replace(HONEST, spec=spec))
+
+
+def test_an_example_that_is_refused() -> None:
+    def spec(params: Any, given: SignalSpec, findings: Findings) -> SignalSpec:
+        findings.refuse("never", "weight")
+        return given
+
+    caught(checks.check_context, "never", replace(HONEST, spec=spec))
+
+
+def test_columns_that_were_not_announced() -> None:
+    def run(params: Any, epochs: Epochs) -> Features:
+        out = size(params, epochs)
+        return replace(out, columns={"top": out.columns["top"], "rms": out.columns["rms"]})
+
+    caught(checks.check_spec_agrees_with_data, "columns", replace(HONEST_ROWS, run=run))
+
+
+def test_values_that_are_missing_without_a_reason_or_there_without_an_epoch() -> None:
+    def silent(params: Any, epochs: Epochs) -> Features:
+        out = size(params, epochs)
+        gaps = {part: np.where(values > 30, np.nan, values) for part, values in out.columns.items()}
+        return replace(out, columns=gaps)
+
+    def filled(params: Any, epochs: Epochs) -> Features:
+        out = size(params, epochs)
+        return replace(out, columns={k: np.nan_to_num(v) for k, v in out.columns.items()})
+
+    check = checks.check_spec_agrees_with_data
+    caught(check, "says no reason", replace(HONEST_ROWS, run=silent))
+    caught(check, "where none is kept", replace(HONEST_ROWS, run=filled))
+
+
+def test_a_row_that_depends_on_another() -> None:
+    def run(params: Any, epochs: Epochs) -> Features:
+        out = size(params, epochs)
+        rms = out.columns["rms"]
+        top = np.nanmax(rms, initial=0)
+        return replace(out, columns={**out.columns, "rms": rms * (1 + 1e-15 * top)})
+
+    caught(checks.check_context, "no other row", replace(HONEST_ROWS, run=run))
+
+
+def test_what_depends_on_the_cuts() -> None:
+    def unweighted(params: Any, parts: Sequence[Part]) -> Part:
+        means = [float(p["sum"][0]) / max(1, int(p["count"][0])) for p in parts]
+        return {"mean": np.array([sum(means) / len(means) * (1 + 1e-6 * len(means))])}
+
+    def per_part(params: Any, signal: Signal, state: Part) -> Signal:
+        return signal.with_samples(signal.x - signal.x[0])
+
+    lying = replace(HONEST_WHOLE, context=Whole(levels, unweighted, less_mean))
+    caught(checks.check_context, "combined from", lying)
+    lying = replace(HONEST_WHOLE, context=Whole(levels, mean_level, per_part))
+    caught(checks.check_context, "applied to one", lying)
+
+
+def test_heavy_imports(tmp_path: Any, monkeypatch: pytest.MonkeyPatch) -> None:
+    import importlib
+    import sys
+
+    text = (
+        '"""A stage that is slow to list."""\n'
+        "import scipy\n"
+        "from waveassay.contract import Params\n"
+        "class SlowParams(Params):\n"
+        "    pass\n"
+    )
+    (tmp_path / "slow_to_list.py").write_text(text, encoding="utf-8")
+    monkeypatch.syspath_prepend(tmp_path)
+    monkeypatch.setenv("PYTHONPATH", str(tmp_path))
+    module = importlib.import_module("slow_to_list")
+    try:
+        stage = replace(HONEST, params=module.SlowParams)
+        caught(checks.check_is_light_to_import, "imports scipy", stage)
+    finally:
+        del sys.modules["slow_to_list"]
+
+
+def test_by_stretches_is_whole_to_the_letter_of_the_masks() -> None:
+    from waveassay.contract.checks_data import random_signal
+
+    signal = random_signal("uV", Fraction(250), 100)
+    params = checks.example_params(HONEST)
+    spec = SignalSpec("random", "uV", "eeg", Fraction(250))
+    joined = checks.run_by_stretches(HONEST, params, signal, Fraction(9), spec)
+    whole = checks.run_whole(HONEST, params, signal)
+    assert isinstance(joined, Signal)
+    assert joined.excluded == whole.excluded
+    assert any(isinstance(item, Exclusion) for item in joined.excluded)
+    assert np.array_equal(joined.x, whole.x)

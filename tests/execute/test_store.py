@@ -1,0 +1,71 @@
+"""The store: whole results or none, found by key, checked when read."""
+
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+from waveassay.contract import SignalError
+from waveassay.execute.store import MissingArtefactError, Store
+
+KEY = "ab" + "0" * 62
+
+
+def put(store: Store, text: str = "number") -> None:
+    with store.writing(KEY, "environment-1") as folder:
+        (folder / "value.txt").write_text(text)
+
+
+def test_a_result_is_found_again_with_its_environment(tmp_path: Path) -> None:
+    store = Store(tmp_path)
+    assert not store.has(KEY)
+    put(store)
+    assert store.has(KEY)
+    artefact = store.read(KEY)
+    assert artefact.path("value.txt").read_text() == "number"
+    assert store.facts(KEY) == (artefact.digest, "environment-1")
+
+
+def test_the_digest_is_of_the_content_alone(tmp_path: Path) -> None:
+    stores = [Store(tmp_path / name) for name in ("one", "two", "three")]
+    for store, text in zip(stores, ("same", "same", "other"), strict=True):
+        put(store, text)
+    digests = [store.read(KEY).digest for store in stores]
+    assert digests[0] == digests[1] != digests[2]
+
+
+def test_work_that_fails_leaves_nothing(tmp_path: Path) -> None:
+    store = Store(tmp_path)
+    with pytest.raises(SignalError), store.writing(KEY, "e") as folder:  # noqa: PT012
+        (folder / "value.txt").write_text("half")
+        raise SignalError("the step failed")
+    assert not store.has(KEY)
+    assert not [path for path in tmp_path.rglob("*") if path.is_file()]
+
+
+def test_what_is_not_there_is_missing(tmp_path: Path) -> None:
+    with pytest.raises(MissingArtefactError):
+        Store(tmp_path).read(KEY)
+
+
+def test_the_second_of_two_writers_does_no_harm(tmp_path: Path) -> None:
+    store = Store(tmp_path)
+    with store.writing(KEY, "e") as folder:
+        (folder / "value.txt").write_text("late")
+        put(store, "early")
+    assert store.read(KEY).path("value.txt").read_text() == "early"
+
+
+def test_a_sweep_takes_what_the_dead_left_and_nothing_of_the_living(tmp_path: Path) -> None:
+    store = Store(tmp_path)
+    code = (
+        "import os, sys; from pathlib import Path; from waveassay.execute.store import Store\n"
+        f"with Store(Path(sys.argv[1])).writing({KEY!r}, 'e'): os.kill(os.getpid(), 9)"
+    )
+    subprocess.run([sys.executable, "-c", code, str(tmp_path)], check=False)
+    assert len(list(tmp_path.rglob(".part-*"))) == 1
+    with store.writing(KEY, "e") as folder:
+        store.sweep()
+        assert list(tmp_path.rglob(".part-*")) == [folder]
+        (folder / "value.txt").write_text("alive")
+    assert store.read(KEY).path("value.txt").read_text() == "alive"
