@@ -24,6 +24,8 @@ _RECTANGLE = "spectrum.periodogram: {window: rectangle, detrend: none}"
 _HANN = "spectrum.periodogram: {window: hann, detrend: none}"
 _AVERAGE = "spectrum.average: {of: mean, over: power}"
 _TABLE = "export.table: {}"
+#: Averaged spectra come as CSV where their chain has a table.
+_AVERAGE_TABLE = [_AVERAGE, "feature.band_power: {bands: {low: [1 Hz, 25 Hz]}}", _TABLE]
 _ALL = "feature.band_power: {bands: {all: [0 Hz, 125 Hz]}}\n      as: power"
 
 
@@ -88,7 +90,7 @@ def _estimator_chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
         ),
         "dof": (
             ["tone"],
-            ["epoch.consecutive: {length: 1 s, overlap: 50 %}", _HANN, _AVERAGE],
+            ["epoch.consecutive: {length: 1 s, overlap: 50 %}", _HANN, *_AVERAGE_TABLE],
         ),
         **{
             f"tapers_{length}": (
@@ -112,7 +114,7 @@ def _noise_chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
     return {
         "white": (
             ["white_3"],
-            [_TWENTY_S, "spectrum.welch: {segment: 2 s, detrend: none}", _AVERAGE],
+            [_TWENTY_S, "spectrum.welch: {segment: 2 s, detrend: none}", *_AVERAGE_TABLE],
         ),
         "tapered_noise": (
             ["white_1"],
@@ -133,7 +135,7 @@ def _noise_chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
                 _TABLE,
             ],
         ),
-        "coarse": (["coarse"], ["epoch.consecutive: {length: 4 s}", _HANN, _AVERAGE]),
+        "coarse": (["coarse"], ["epoch.consecutive: {length: 4 s}", _HANN, *_AVERAGE_TABLE]),
     }
 
 
@@ -184,7 +186,7 @@ def _feature_chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
 
 def _filter_chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
     # Bands above a filter's cut-off are refused, rightly: the averaged spectra have them.
-    measured = [_TEN_S, _HANN, _AVERAGE]
+    measured = [_TEN_S, _HANN, *_AVERAGE_TABLE]
     tones = list(filter_tones())
     chains: dict[str, tuple[Sequence[str], Sequence[str]]] = {
         "unfiltered": ([*tones, "steady"], measured)

@@ -5,7 +5,7 @@ from hypothesis import strategies as st
 
 from feature_data import Collected, epochs, epochs_spec
 from waveassay.contract import Floats
-from waveassay_stages.feature._harmonic_fit import EpochFitter
+from waveassay_stages.feature._harmonic_fit import EpochFitter, solved
 from waveassay_stages.feature.harmonics import (
     ABOVE,
     ABSENT,
@@ -129,6 +129,22 @@ def test_the_fit_agrees_with_an_independent_least_squares(
     left = np.sum((x - trend @ trend_only) ** 2)
     assert fit.left == pytest.approx(left, rel=1e-9)
     assert fit.left - fit.gained == pytest.approx(np.sum((x - design @ solution) ** 2), rel=1e-8)
+
+
+@given(size=st.integers(1, 30), seed=st.integers(0, 2**31))
+def test_elimination_agrees_with_an_independent_solver_and_leaves_its_input(
+    size: int, seed: int
+) -> None:
+    rng = np.random.default_rng(seed)
+    factor = rng.normal(size=(2, size, size))
+    matrix = factor @ factor.transpose(0, 2, 1) + size * np.eye(size)
+    right = rng.normal(size=(2, size, 1))
+    systems = np.concatenate((matrix, right), axis=2)
+    before = systems.copy()
+    np.testing.assert_allclose(
+        solved(systems), np.linalg.solve(matrix, right)[:, :, 0], rtol=1e-9, atol=1e-12
+    )
+    assert np.array_equal(systems, before)
 
 
 def test_needed_counts_the_first_harmonics_that_reach_the_share() -> None:

@@ -2,8 +2,8 @@
 
 Time is counted from the epoch's middle, so that cosines and sines are orthogonal and the normal
 equations fall into two small systems whose elements are sums of cosines in closed form. Everything
-is done epoch by epoch with elementwise operations, and each system goes to `numpy.linalg.solve` by
-itself: an epoch's numbers do not depend on its neighbours.
+is done epoch by epoch with elementwise operations and sums along rows: an epoch's numbers depend
+neither on its neighbours nor on the number of threads.
 """
 
 from dataclasses import dataclass
@@ -81,10 +81,26 @@ def _cosine_sum(omega: Floats, size: int) -> Floats:
     return total
 
 
-def _solve(omega: Floats, right: Floats, size: int, sign: float) -> Floats:
+def _system(omega: Floats, right: Floats, size: int, sign: float) -> Floats:
+    """Return the normal equations of cosines (sign 1) or sines (-1), with their right side."""
     difference = _cosine_sum(omega[:, None] - omega[None, :], size)
     total = _cosine_sum(omega[:, None] + omega[None, :], size)
-    return np.asarray(np.linalg.solve((difference + sign * total) / 2, right), np.float64)
+    return np.concatenate(((difference + sign * total) / 2, right[:, None]), axis=1)
+
+
+def solved(systems: Floats) -> Floats:
+    """Solve positive definite systems, shape (s, m, m + 1), by elimination; shape (s, m).
+
+    Elementwise, since a library's solver gives other last bits on another number of threads.
+    """
+    left = systems.copy()
+    for i in range(left.shape[1]):
+        left[:, i, i:] /= left[:, i, i, None]
+        factor = left[:, :, i].copy()
+        factor[:, i] = 0.0
+        left[:, :, i:] -= factor[:, :, None] * left[:, i, None, i:]
+    solution: Floats = left[:, :, -1]
+    return solution
 
 
 class EpochFitter:
@@ -128,8 +144,16 @@ class EpochFitter:
         omega = base * np.arange(1, count + 1)
         even_right = np.concatenate((self.even, cosine))
         odd_right = np.concatenate((self.odd, sine))
-        even = _solve(np.concatenate((self.omega[0::2], omega)), even_right, self.size, 1.0)
-        odd = _solve(np.concatenate((self.omega[1::2], omega)), odd_right, self.size, -1.0)
+        even_system = _system(np.concatenate((self.omega[0::2], omega)), even_right, self.size, 1.0)
+        odd_system = _system(np.concatenate((self.omega[1::2], omega)), odd_right, self.size, -1.0)
+        # The odd system is one smaller or equal: an equation of its own, 1 x = 0, fills it up.
+        both = np.zeros((2, *even_system.shape))
+        both[:, np.arange(len(even_right)), np.arange(len(even_right))] = 1.0
+        short = len(even_right) - len(odd_right)
+        both[0] = even_system
+        both[1, short:, short:] = odd_system
+        even, odd = solved(both)
+        odd = odd[short:]
         explained = float(np.sum(even * even_right) + np.sum(odd * odd_right))
         return HarmonicFit(
             mean=self.plain_mean + float(even[0]),
