@@ -61,7 +61,9 @@ def eeg() -> list[Made]:
         "tone": tone(10),
         "halfway": tone(HALFWAY_HZ),
         "two_lines": tone(10) + tone(30),
-        "levels": np.sum([tone(f, amplitude=(2 * p) ** 0.5) for f, p in LEVELS_UV2.items()], axis=0),
+        "levels": np.sum(
+            [tone(f, amplitude=(2 * p) ** 0.5) for f, p in LEVELS_UV2.items()], axis=0
+        ),
         "offset_noise": _white(3, 5, SHORT_S) + 2,
         "impulses": np.tile(np.where(np.arange(EPOCH) == 7, 30.0, 0.0), SHORT_S // 2),
         "steady": np.full(RATE_HZ * SHORT_S, 5.0),

@@ -41,7 +41,9 @@ def recipe_text(units: Mapping[str, str]) -> str:
     lines.append("chains:")
     for name, (signals, steps) in _chains().items():
         lines.append(f"  {name}:")
-        lines += [f"    - {step}" for step in (f"load: {{signals: [{', '.join(signals)}]}}", *steps)]
+        lines += [
+            f"    - {step}" for step in (f"load: {{signals: [{', '.join(signals)}]}}", *steps)
+        ]
     return "\n".join([*lines, ""])
 
 
@@ -65,7 +67,9 @@ def _at(frequencies_hz: Iterable[int], more: str = "") -> str:
 def _estimator_chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
     peak = "feature.spectral_peak: {within: [5 Hz, 15 Hz], method: bin}"
     inside = "feature.band_power: {bands: {inside: [%s Hz, %s Hz]}, integration: simpson, edges: both_in}"
-    whole = "feature.band_power: {bands: {all: [0 Hz, 125 Hz]}, integration: simpson, edges: both_in}"
+    whole = (
+        "feature.band_power: {bands: {all: [0 Hz, 125 Hz]}, integration: simpson, edges: both_in}"
+    )
     return {
         "rectangle": (
             ["tone", "levels", "ar2", "offset_noise"],
@@ -141,7 +145,9 @@ def _noise_chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
 
 def _feature_chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
     low, high = QUANTILES_HZ
-    entropy = "feature.spectral_entropy: {within: [0.5 Hz, 124.5 Hz], edges: both_in, normalised: %s}"
+    entropy = (
+        "feature.spectral_entropy: {within: [0.5 Hz, 124.5 Hz], edges: both_in, normalised: %s}"
+    )
     by_rate: dict[int, list[str]] = {}
     for key in ALIASES:
         by_rate.setdefault(int(key.split("@")[1]), []).append(alias_name(key))
@@ -216,14 +222,16 @@ def _filter_chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
 
 
 def _pressure_chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
-    harmonics = "feature.harmonics: {fundamental_within: [%s Hz, %s Hz], harmonics: %d}"
+    harmonics = (
+        "feature.harmonics: {fundamental_within: [%s Hz, %s Hz], harmonics: %d, trend_below: %s Hz}"
+    )
     direct = "feature.band_power: {bands: {mean: [0 Hz, 0.05 Hz], swing: [0.45 Hz, 0.55 Hz]}}"
     return {
         "pulse": (
             [f"pulse_{rate}" for rate in PULSES],
             [
                 _TWENTY_S,
-                harmonics % (0.7, 3.5, 10),
+                harmonics % (0.7, 3.5, 10, 0.4),
                 "spectrum.welch: {segment: 20 s}",
                 "feature.spectral_peak: {within: [0.1 Hz, 0.5 Hz], prominence: 3 dB}"
                 "\n      as: ventilator",
@@ -233,7 +241,7 @@ def _pressure_chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
         ),
         "standard": (
             ["half_rectified", "square", "triangle"],
-            [_TEN_S, harmonics % (0.7, 1.5, 5), _TABLE],
+            [_TEN_S, harmonics % (0.7, 1.5, 5, 0), _TABLE],
         ),
         "units": (list(OTHER_UNITS), [_TEN_S, _RECTANGLE, direct, _TABLE]),
         "converter": (["zero", "one", "limits"], [_TEN_S, _RECTANGLE, direct, _TABLE]),

@@ -1,6 +1,6 @@
 """Reads the named signals of a recording, where a chain begins."""
 
-from typing import Annotated
+from typing import Annotated, Literal
 
 from pydantic import AfterValidator, Field
 
@@ -20,6 +20,11 @@ class LoadParams(Params):
     signals: Annotated[tuple[str, ...], AfterValidator(_each_once)] = Field(
         min_length=1, description="Names of the signals to read, from the recipe's 'signals'."
     )
+    truncated: Literal["refuse", "read"] = Field(
+        default="refuse",
+        description="What becomes of a file that ends before its header says. refuse: it fails; "
+        "read: the whole records that are there are used, with a warning.",
+    )
 
 
 def spec(params: LoadParams, given: SignalSpec, findings: Findings) -> SignalSpec:
@@ -32,6 +37,11 @@ def needs(params: LoadParams) -> tuple[str, ...]:
     return params.signals
 
 
+def reads_truncated(params: LoadParams) -> bool:
+    """Tell whether a file that ends early is read as far as it goes."""
+    return params.truncated == "read"
+
+
 STAGE = Stage(
     name="load",
     version=1,
@@ -41,4 +51,5 @@ STAGE = Stage(
     spec=spec,
     example={"signals": ["frontal_left"]},
     needs=needs,
+    reads_truncated=reads_truncated,
 )

@@ -11,6 +11,7 @@ from pydantic import Field
 
 from waveassay.contract import (
     Decibel,
+    Derived,
     Findings,
     Floats,
     Hertz,
@@ -255,6 +256,19 @@ def run(params: ResampleParams, signal: Signal) -> Signal:
     return wide.excluding_edges(half_s, half_s)
 
 
+def derive(params: ResampleParams, given: SignalSpec) -> list[Derived]:
+    """Return the ratio that is carried out, the kernel's length and the true new rate."""
+    if given.rate_hz is None:
+        return []
+    factor = ratio(params, given.rate_hz)
+    length_s = float(2 * half_length_s(params, given.rate_hz))
+    return [
+        Derived("ratio", f"{factor.numerator}/{factor.denominator}"),
+        Derived("rate", float(given.rate_hz * factor), "Hz"),
+        Derived("kernel length", length_s, "s"),
+    ]
+
+
 STAGE = Stage(
     name="resample",
     version=1,
@@ -264,6 +278,7 @@ STAGE = Stage(
     spec=spec,
     run=run,
     context=context,
+    derive=derive,
     example={"rate": "128 Hz"},
     source="J. F. Kaiser, Nonrecursive digital filter design using the I0-sinh window function, "
     "Proc. IEEE ISCAS, 20-23, 1974",

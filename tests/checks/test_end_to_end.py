@@ -190,7 +190,9 @@ def test_decibels(published: PublishedRun) -> None:
 
     def above(freq_hz: int, other_hz: int) -> tuple[float, float]:
         """Return how many decibels one tone lies above another, and how far off by rounding."""
-        found = (published.value("rectangle", "levels", f"level.at_{f}") for f in (freq_hz, other_hz))
+        found = (
+            published.value("rectangle", "levels", f"level.at_{f}") for f in (freq_hz, other_hz)
+        )
         off = check.tolerance
         for power in (LEVELS_UV2[freq_hz], LEVELS_UV2[other_hz]):
             off += 10 / np.log(10) * rounding_of_power(sqrt(power), Q_UV, TONE_ROUNDINGS) / power
@@ -244,9 +246,7 @@ def test_quantile_frequencies(published: PublishedRun, name: str, share: int) ->
     half_bin = 0.5 / SHORT_S
     slopes = sum(SLOPES[name](f - half_bin) for f in (low, expected, high))
     moved = (2 * half_bin) ** 2 / 8 * slopes
-    power_off = rounding_of_power(
-        QUANTILES_UV, QUANTILES_Q_UV, QUANTILES_RATE_HZ * SHORT_S
-    )
+    power_off = rounding_of_power(QUANTILES_UV, QUANTILES_Q_UV, QUANTILES_RATE_HZ * SHORT_S)
     rounded = power_off / QUANTILES_UV**2 * INTEGRALS[name](low, high)
     off = check.tolerance + (moved + rounded) / DENSITIES[name](expected)
     found = published.value("quantiles", name, f"below_{share}")

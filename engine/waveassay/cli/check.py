@@ -36,7 +36,7 @@ def _would_run(recipe: Recipe, name: str, path: Path) -> bool:
 
     screen = console()
     try:
-        _, warnings = passages(recipe, name, "", read_facts(path))
+        _, warnings = passages(recipe, name, "", read_facts(path, truncated=recipe.truncated))
     except SignalError as error:
         screen.print(f"would fail  {name}: {error}")
         return False

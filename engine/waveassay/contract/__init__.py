@@ -34,6 +34,7 @@ from waveassay.contract.quantity import (
 )
 from waveassay.contract.spec import (
     ColumnSpec,
+    Derived,
     EpochsSpec,
     FeaturesSpec,
     Findings,
@@ -60,6 +61,7 @@ __all__ = [
     "Condition",
     "Data",
     "Decibel",
+    "Derived",
     "EachRow",
     "Epochs",
     "EpochsSpec",

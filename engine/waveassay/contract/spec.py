@@ -98,6 +98,15 @@ class SinkSpec:
     signal: SignalSpec
 
 
+@dataclass(frozen=True)
+class Derived:
+    """What follows from parameters and rate, and must be known to repeat or report a step."""
+
+    quantity: str
+    value: float | int | str
+    unit: str = ""
+
+
 Spec = SignalSpec | EpochsSpec | SpectraSpec | FeaturesSpec | SinkSpec
 
 

@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from waveassay.contract.kinds import Data, Kind
 from waveassay.contract.params import Params
-from waveassay.contract.spec import Findings, Spec
+from waveassay.contract.spec import Derived, Findings, Spec
 
 #: A moment of a filter's output may depend on samples outside its reach by at most this share.
 REACH_TOLERANCE = 1e-10
@@ -73,7 +73,11 @@ class Stage:
         always right but not bounded in memory.
     example : parameters as a recipe writes them, for help, schema and the contract's checks.
     source : the published source of the method, or 'common practice, no source'.
+    derive : ``derive(params, given)``: numbers that the parameters leave to the data's rate, such
+        as the gain measured at a cut-off or the number of tapers. They go into the run folder.
     needs : for a source: ``needs(params)`` names the signals to read.
+    reads_truncated : for a source: whether a file that ends before its header says is read as far
+        as it goes.
     """
 
     name: str
@@ -86,7 +90,9 @@ class Stage:
     context: Context | None = None
     example: Mapping[str, Any] = field(default_factory=dict)
     source: str = "common practice, no source"
+    derive: Callable[[Any, Any], Sequence[Derived]] | None = None
     needs: Callable[[Any], tuple[str, ...]] | None = None
+    reads_truncated: Callable[[Any], bool] | None = None
 
     def kinds_taken(self, params: Params) -> tuple[Kind, ...]:
         """Return the kinds it accepts with these parameters."""

@@ -47,6 +47,7 @@ class Gathered:
 
     arrays: Sequence[Arrays]
     masks: Sequence[Mapping[str, Mapping[str, list[list[str]]]]]
+    outside: frozenset[int]
 
     def named(self, prefix: str) -> dict[str, list[Any]]:
         """Return the arrays below a prefix, each name with its parts."""
@@ -78,7 +79,11 @@ class Gathered:
 def gather(store: Store, keys: Sequence[str]) -> Gathered:
     """Read the rows of all stretches."""
     read = [load_arrays(store.read(key).path(ROWS_FILE)) for key in keys]
-    return Gathered([arrays for arrays, _ in read], [facts for _, facts in read])
+    return Gathered(
+        [arrays for arrays, _ in read],
+        [facts["masks"] for _, facts in read],
+        frozenset(lane for _, facts in read for lane in facts["outside"]),
+    )
 
 
 def combine(passage: Passage, pass_no: int, gathered: Gathered, folder: Path) -> None:
@@ -130,6 +135,11 @@ def finish(
             passage.conditions,
         )  # fmt: skip
     facts: dict[str, Any] = {
+        "warnings": [
+            f"{passage.lanes[lane].label}: some samples lie outside the digital limits of the "
+            "header; they are used as they are"
+            for lane in sorted(gathered.outside)
+        ],
         "excluded": excluded,
         "figures": figures,
         "summary": [],

@@ -3,8 +3,9 @@
 import json
 import shutil
 from collections.abc import Sequence
+from importlib.metadata import version
 from pathlib import Path
-from typing import Any
+from typing import Any, Literal
 
 from waveassay.contract import SignalError
 from waveassay.execute.store import Store
@@ -18,8 +19,14 @@ from waveassay.provenance.recording_digests import RecordingDigests
 from waveassay.recording import Facts, read_facts
 
 
-def read_recording(found: Found, digests: RecordingDigests) -> ReadRecording:
+def read_recording(
+    found: Found, digests: RecordingDigests, truncated: Literal["refuse", "read"]
+) -> ReadRecording:
     """Return a recording's digest and header facts, computed only when the file has changed.
+
+    Parameters
+    ----------
+    truncated : what becomes of a file that ends before its header says.
 
     Raises
     ------
@@ -27,7 +34,11 @@ def read_recording(found: Found, digests: RecordingDigests) -> ReadRecording:
         When it cannot be read, or is not what it should be.
     """
     try:
-        facts = digests.facts(found.path, lambda: read_facts(found.path).to_json())
+        facts = digests.facts(
+            found.path,
+            lambda: read_facts(found.path, truncated=truncated).to_json(),
+            version=f"{version('waveassay')} {truncated}",
+        )
         return ReadRecording(digests.digest(found.path), Facts.from_json(facts))
     except OSError as error:
         raise SignalError(

@@ -45,4 +45,4 @@ def prepare(
         bounds = lane.bounds_s(stretch)
         for index in lane.program.kept_signals(pass_no):
             prepared[lane_no, index] = values[index].cut(*bounds)
-    save_prepared(folder, prepared)
+    save_prepared(folder, prepared, source.outside)

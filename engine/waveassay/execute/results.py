@@ -5,6 +5,7 @@ from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
+from waveassay.contract import number_text
 from waveassay.contract.digests import digest
 from waveassay.execute.finish import FACTS_FILE
 from waveassay.execute.store import Store
@@ -89,10 +90,12 @@ def _result(item: PlannedRecording, store: Store, failures: Mapping[str, Failure
         artefact = store.read(key)
         text = artefact.path(FACTS_FILE).read_text(encoding="utf-8")
         outputs.append(Output(chain, artefact.folder, json.loads(text)))
+    told = [warning for output in outputs for warning in output.facts["warnings"]]
+    warnings = list(dict.fromkeys((*item.warnings, *told)))
     return Result(
         **known,
-        status="done_with_warnings" if item.warnings else "done",
-        message="; ".join(item.warnings),
+        status="done_with_warnings" if warnings else "done",
+        message="; ".join(warnings),
         outputs=tuple(outputs),
     )
 
@@ -121,6 +124,33 @@ def step_rows(
                     held = _holding(passage, moves[0], tasks)
                     row = _step_row(held, store, computed)
                     yield [item.found.name, passage.chain.name, step.name, *row]
+
+
+def derived_rows(plan: Plan, results: Sequence[Result]) -> Iterator[list[Any]]:
+    """Yield what follows from parameters and rates.
+
+    A row is: recording, chain, step, signal, quantity, value, unit.
+    """
+    done = {result.recording for result in results if result.status != "failed"}
+    for item in plan.recordings:
+        if item.found.name not in done:
+            continue
+        for passage in item.passages:
+            for lane in passage.lanes:
+                for move in lane.program.moves.values():
+                    derive = move.step.stage.derive
+                    for known in derive(move.step.params, move.spec_in) if derive else ():
+                        value = known.value
+                        text = value if isinstance(value, str) else number_text(value)
+                        yield [
+                            item.found.name,
+                            passage.chain.name,
+                            move.step.name,
+                            lane.signal,
+                            known.quantity,
+                            text,
+                            known.unit,
+                        ]
 
 
 def _holding(passage: Passage, move: Move, tasks: Sequence[Task]) -> list[Task]:

@@ -52,7 +52,7 @@ def make_rows(
             part = collect_move(move, data)
             arrays |= {f"{lane_no}.{move.index}.part.{name}": x for name, x in part.items()}
         facts[str(lane_no)] = masks
-    save_arrays(folder / FILE, arrays, facts)
+    save_arrays(folder / FILE, arrays, {"masks": facts, "outside": sorted(source.outside)})
 
 
 def _wanted(

@@ -17,6 +17,7 @@ from waveassay.execute.handover import read_recording, write_work
 from waveassay.execute.lock import one_run_in
 from waveassay.execute.results import (
     collect_results,
+    derived_rows,
     failures_by_recording,
     machine_problem,
     step_rows,
@@ -99,7 +100,7 @@ def run_recipe(
     with one_run_in(into / "runs"):
         store = Store((store_folder or into / "store").resolve())
         with RecordingDigests(store.root) as digests:
-            read = _read_all(found, digests, watcher)
+            read = _read_all(recipe, found, digests, watcher)
         sha256 = {
             name: item.sha256 for name, item in read.items() if isinstance(item, ReadRecording)
         }
@@ -144,8 +145,12 @@ class _Run:
         clock.lap("jobs")
         computed = {task.key for tasks in todo for task in tasks}
         results = collect_results(plan, self.store, failures)
-        steps = step_rows(plan, self.store, computed, results)
-        results_digest = folder.complete(self.recipe, results, steps)
+        results_digest = folder.complete(
+            self.recipe,
+            results,
+            step_rows(plan, self.store, computed, results),
+            derived_rows(plan, results),
+        )
         clock.lap("tables")
         return RunOutcome(
             folder.path,
@@ -199,13 +204,13 @@ class _Clock:
 
 
 def _read_all(
-    found: Sequence[Found], digests: RecordingDigests, watcher: Watcher
+    recipe: Recipe, found: Sequence[Found], digests: RecordingDigests, watcher: Watcher
 ) -> dict[str, ReadRecording | SignalError]:
     """Read every header and digest, from the store's memory where the file is unchanged."""
     read: dict[str, ReadRecording | SignalError] = {}
     for number, item in enumerate(found):
         try:
-            read[item.name] = read_recording(item, digests)
+            read[item.name] = read_recording(item, digests, recipe.truncated)
         except SignalError as error:
             read[item.name] = error
         watcher.reading(number + 1, len(found))

@@ -5,6 +5,7 @@ from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from math import ceil
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
@@ -28,8 +29,10 @@ Window = tuple[Fraction, Fraction]
 
 def read_from_file(
     passage: Passage, path: Path, facts: Facts, piece_no: int, windows: Mapping[int, Window]
-) -> dict[int, Signal]:
+) -> tuple[dict[int, Signal], set[int]]:
     """Read lanes from the recording, each over its own window, in one pass for equal windows.
+
+    Returns the signals, and the lanes with samples outside the digital limits of their header.
 
     Parameters
     ----------
@@ -40,13 +43,14 @@ def read_from_file(
     for index, window in windows.items():
         groups.setdefault(window, []).append(index)
     read: dict[int, Signal] = {}
-    with open_recording(path, facts=facts) as recording:
+    with open_recording(path, facts=facts, truncated="read") as recording:
         for (start_s, stop_s), lanes in groups.items():
             channels = [passage.lanes[index].channel for index in lanes]
             arrays = recording.read(channels, piece_no, start_s, stop_s)
             for index, x in zip(lanes, arrays, strict=True):
                 read[index] = _as_signal(passage.lanes[index], piece, start_s, x)
-    return read
+        outside = {i for i in read if recording.out_of_range.get(passage.lanes[i].channel)}
+    return read, outside
 
 
 def _as_signal(lane: Lane, piece: Interval, start_s: Fraction, x: Floats) -> Signal:
@@ -61,10 +65,12 @@ def _as_signal(lane: Lane, piece: Interval, start_s: Fraction, x: Floats) -> Sig
     )
 
 
-def save_prepared(folder: Path, prepared: Mapping[tuple[int, int], Signal]) -> None:
-    """Write prepared signals, by lane and move."""
+def save_prepared(
+    folder: Path, prepared: Mapping[tuple[int, int], Signal], outside: set[int]
+) -> None:
+    """Write prepared signals, by lane and move, and the lanes outside their digital limits."""
     arrays: Arrays = {}
-    facts = {}
+    facts: dict[str, Any] = {"outside": sorted(outside)}
     for (lane, move), signal in prepared.items():
         arrays[f"{lane}.{move}"] = signal.x
         facts[f"{lane}.{move}"] = {
@@ -83,6 +89,7 @@ class SignalSource:
     Attributes
     ----------
     prepared : (pass, stretch number) -> the key of the result that holds it, within ``piece_no``.
+    outside : lanes in which what was read has samples outside the digital limits.
     """
 
     passage: Passage
@@ -91,7 +98,8 @@ class SignalSource:
     store: Store
     piece_no: int
     prepared: Mapping[tuple[int, int], str]
-    _loaded: dict[str, tuple[Arrays, dict[str, dict[str, object]]]] = field(default_factory=dict)
+    outside: set[int] = field(default_factory=set)
+    _loaded: dict[str, tuple[Arrays, dict[str, Any]]] = field(default_factory=dict)
 
     def over(self, wanted: Mapping[tuple[int, int], Window]) -> dict[tuple[int, int], Signal]:
         """Return signals by (lane, move), each over its own window."""
@@ -104,7 +112,10 @@ class SignalSource:
             else:
                 from_file[lane_no] = self._within(window)
         if from_file:
-            read = read_from_file(self.passage, self.path, self.facts, self.piece_no, from_file)
+            read, outside = read_from_file(
+                self.passage, self.path, self.facts, self.piece_no, from_file
+            )
+            self.outside |= outside
             for lane_no, move_no in wanted:
                 if (lane_no, move_no) not in found:
                     found[lane_no, move_no] = read[lane_no]
@@ -128,7 +139,7 @@ class SignalSource:
                     Fraction(str(known["start_s"])),
                     arrays[name],
                     piece,
-                    exclusions_from_json(known["excluded"]),  # type: ignore[arg-type]
+                    exclusions_from_json(known["excluded"]),
                 )
             )
         return _joined(parts).cut(start_s, stop_s)
@@ -137,9 +148,10 @@ class SignalSource:
         piece = self.passage.pieces[self.piece_no]
         return max(window[0], piece.start_s), min(window[1], piece.stop_s)
 
-    def _load(self, key: str) -> tuple[Arrays, dict[str, dict[str, object]]]:
+    def _load(self, key: str) -> tuple[Arrays, dict[str, Any]]:
         if key not in self._loaded:
             self._loaded[key] = load_arrays(self.store.read(key).path(FILE))
+            self.outside |= set(self._loaded[key][1]["outside"])
         return self._loaded[key]
 
 

@@ -36,6 +36,10 @@ _RECORDING_COLUMNS = (
 _PARAMETER_COLUMNS = tuple(
     Column(name, "text") for name in ("step", "parameter", "value", "unit", "origin", "where")
 )
+_DERIVED_COLUMNS = tuple(
+    Column(name, "text")
+    for name in ("recording", "chain", "step", "signal", "quantity", "value", "unit")
+)
 _STEP_COLUMNS = (
     Column("recording", "text"),
     Column("chain", "text"),
@@ -85,13 +89,18 @@ class RunFolder:
         )
 
     def complete(
-        self, recipe: Recipe, results: Sequence[Result], steps: Iterable[Sequence[Any]]
+        self,
+        recipe: Recipe,
+        results: Sequence[Result],
+        steps: Iterable[Sequence[Any]],
+        derived: Iterable[Sequence[Any]],
     ) -> str:
         """Write every table and figure, then the manifest; return the results digest."""
         write_text(self.path / RESOLVED, resolved_yaml(recipe))
         self._write_parameters(recipe)
         self._write_recordings(results)
         write_csv(self.path / "steps.csv", _STEP_COLUMNS, list(steps))
+        write_csv(self.path / "derived.csv", _DERIVED_COLUMNS, list(derived))
         columns = {c.name: feature_columns(c, recipe.signals) for c in recipe.chains.values()}
         with machine_errors(self.path):
             write_result_tables(self.path, columns, results)

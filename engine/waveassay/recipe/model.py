@@ -159,6 +159,13 @@ class Recipe:
     origins: Mapping[str, Origin]
     digest: str
 
+    @property
+    def truncated(self) -> Literal["refuse", "read"]:
+        """What becomes of a file that ends before its header says, as its sources ask."""
+        sources = (step for _, _, step in self.steps() if step.stage.reads_truncated is not None)
+        reads = any(s.stage.reads_truncated and s.stage.reads_truncated(s.params) for s in sources)
+        return "read" if reads else "refuse"
+
     def steps(self) -> Iterator[tuple[Chain, int, Step]]:
         """Yield every step with its chain and its place in it."""
         for chain in self.chains.values():

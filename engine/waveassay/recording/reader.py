@@ -239,8 +239,8 @@ def _count_records(
                 file.path,
                 f"the header states {stated} records of {header.record_bytes} bytes, but the file "
                 f"ends after {whole} whole records and {rest} bytes",
-                "Copy it again from its original, or choose to read what is there "
-                '(truncated="read")',
+                "Copy it again from its original, or have the recipe read what is there "
+                "(load: {truncated: read})",
             )
         warnings.append(
             f"the header states {stated} records, but the file ends after {whole}; what is there "

@@ -11,6 +11,7 @@ from pydantic import Field
 
 from waveassay.contract import (
     Bools,
+    Derived,
     Epochs,
     EpochsSpec,
     Exclusion,
@@ -216,6 +217,14 @@ def _touched(item: Exclusion, origin_s: Fraction, rate_hz: Fraction) -> Span:
     )
 
 
+def derive(params: ConsecutiveParams, given: SignalSpec) -> list[Derived]:
+    """Return length and step of the epochs in samples."""
+    if given.rate_hz is None:
+        return []
+    length, step = _samples(params, given.rate_hz)
+    return [Derived("length", length, "samples"), Derived("step", step, "samples")]
+
+
 STAGE = Stage(
     name="epoch.consecutive",
     version=1,
@@ -225,5 +234,6 @@ STAGE = Stage(
     spec=spec,
     run=run,
     context=context,
+    derive=derive,
     example={"length": "4 s", "overlap": "50 %"},
 )

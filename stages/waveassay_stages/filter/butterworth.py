@@ -10,6 +10,7 @@ from pydantic import Field, model_validator
 
 from waveassay.contract import (
     REACH_TOLERANCE,
+    Derived,
     Findings,
     Floats,
     Hertz,
@@ -260,6 +261,20 @@ def run(params: ButterworthParams, signal: Signal) -> Signal:
     return _iir.masked(signal, filtered, params.passes, _widen_s(params, signal.rate_hz))
 
 
+def derive(params: ButterworthParams, given: SignalSpec) -> list[Derived]:
+    """Return the gains measured at the cut-offs after all passes, and how long it rings."""
+    if given.rate_hz is None:
+        return []
+    known = []
+    for name in ("high_pass", "low_pass"):
+        cutoff_hz = getattr(params, name)
+        if cutoff_hz is not None:
+            gain = float(gain_at(params, float(given.rate_hz), cutoff_hz))
+            known.append(Derived(f"gain at {name}", 20 * float(np.log10(gain)), "dB"))
+    length_s = float(response_s(params, given.rate_hz))
+    return [*known, Derived("response above 1 %", length_s, "s")]
+
+
 STAGE = Stage(
     name="filter.butterworth",
     version=1,
@@ -269,6 +284,7 @@ STAGE = Stage(
     spec=spec,
     run=run,
     context=context,
+    derive=derive,
     example={"high_pass": "0.5 Hz", "low_pass": "40 Hz"},
     source="S. Butterworth, On the theory of filter amplifiers, Wireless Engineer 7, 536-541, 1930",
 )

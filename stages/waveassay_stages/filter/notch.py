@@ -10,6 +10,7 @@ from pydantic import Field, model_validator
 
 from waveassay.contract import (
     REACH_TOLERANCE,
+    Derived,
     Findings,
     Floats,
     Hertz,
@@ -198,6 +199,15 @@ def run(params: NotchParams, signal: Signal) -> Signal:
     return _iir.masked(signal, filtered, params.passes, _widen_s(params, signal.rate_hz))
 
 
+def derive(params: NotchParams, given: SignalSpec) -> list[Derived]:
+    """Return the frequencies removed, and how long the filter rings."""
+    if given.rate_hz is None:
+        return []
+    lines = ", ".join(f"{line_hz:g}" for line_hz in notched_hz(params, float(given.rate_hz)))
+    length_s = float(response_s(params, given.rate_hz))
+    return [Derived("notches", lines, "Hz"), Derived("response above 1 %", length_s, "s")]
+
+
 STAGE = Stage(
     name="filter.notch",
     version=1,
@@ -207,6 +217,7 @@ STAGE = Stage(
     spec=spec,
     run=run,
     context=context,
+    derive=derive,
     example={"line": "50 Hz"},
     source="S. J. Orfanidis, Introduction to Signal Processing, section 11.3, 1996",
 )

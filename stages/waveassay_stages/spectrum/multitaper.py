@@ -8,6 +8,7 @@ import numpy as np
 from pydantic import Field
 
 from waveassay.contract import (
+    Derived,
     EachRow,
     Epochs,
     EpochsSpec,
@@ -179,6 +180,24 @@ def run(params: MultitaperParams, epochs: Epochs) -> Spectra:
     return _density.as_spectra(epochs, freq_hz, kept, float(2 * half_bandwidth), dof)
 
 
+def derive(params: MultitaperParams, given: EpochsSpec) -> list[Derived]:
+    """Return the time-bandwidth product, the number of tapers and what they make of noise."""
+    rate_hz = given.signal.rate_hz
+    if rate_hz is None:
+        return []
+    samples = _density.samples_in(given.length_s, rate_hz)
+    time_bandwidth = exact(params.half_bandwidth) * samples / rate_hz
+    count = taper_count(time_bandwidth) if params.tapers is None else params.tapers
+    _, concentrations = slepian_tapers(samples, time_bandwidth, count)
+    dof = degrees_of_freedom(taper_weights(concentrations, params.weights))
+    return [
+        Derived("time-bandwidth product NW", float(time_bandwidth)),
+        Derived("tapers", count),
+        Derived("resolution 2W", float(2 * exact(params.half_bandwidth)), "Hz"),
+        Derived("degrees of freedom", dof),
+    ]
+
+
 STAGE = Stage(
     name="spectrum.multitaper",
     version=1,
@@ -188,6 +207,7 @@ STAGE = Stage(
     spec=spec,
     run=run,
     context=EachRow(),
+    derive=derive,
     example={"half_bandwidth": "0.75 Hz"},
     source="D. J. Thomson, Proc. IEEE 70(9), 1055-1096, 1982",
 )

@@ -5,6 +5,7 @@ from fractions import Fraction
 from pydantic import Field
 
 from waveassay.contract import (
+    Derived,
     EachRow,
     Epochs,
     EpochsSpec,
@@ -103,6 +104,19 @@ def run(params: PeriodogramParams, epochs: Epochs) -> Spectra:
     return _density.as_spectra(epochs, freq_hz, kept, resolution, dof=2.0)
 
 
+def derive(params: PeriodogramParams, given: EpochsSpec) -> list[Derived]:
+    """Return what the window makes of noise, and the resolution."""
+    rate_hz = given.signal.rate_hz
+    if rate_hz is None:
+        return []
+    samples = _density.samples_in(given.length_s, rate_hz)
+    noise_bandwidth = noise_bandwidth_bins(window(params.window, samples))
+    return [
+        Derived("equivalent noise bandwidth", noise_bandwidth, "bins"),
+        Derived("resolution", noise_bandwidth * float(rate_hz / samples), "Hz"),
+    ]
+
+
 STAGE = Stage(
     name="spectrum.periodogram",
     version=1,
@@ -112,6 +126,7 @@ STAGE = Stage(
     spec=spec,
     run=run,
     context=EachRow(),
+    derive=derive,
     example={"window": "hann"},
     source="A. Schuster, Terrestrial Magnetism 3, 13-41, 1898",
 )

@@ -13,6 +13,7 @@ import numpy as np
 from pydantic import Field
 
 from waveassay.contract import (
+    Derived,
     EachRow,
     Epochs,
     EpochsSpec,
@@ -253,6 +254,23 @@ def run(params: WelchParams, epochs: Epochs) -> Spectra:
     return _density.as_spectra(epochs, freq_hz, kept, resolution, dof)
 
 
+def derive(params: WelchParams, given: EpochsSpec) -> list[Derived]:
+    """Return segments, resolution and degrees of freedom of each epoch's estimate."""
+    rate_hz = given.signal.rate_hz
+    if rate_hz is None:
+        return []
+    samples = _density.samples_in(given.length_s, rate_hz)
+    segment = _density.samples_in(params.segment, rate_hz)
+    noise_bandwidth = noise_bandwidth_bins(window(params.window, segment))
+    dof = degrees_of_freedom(samples, segment, params.overlap, params.window, params.average)
+    return [
+        Derived("segments in an epoch", len(segment_starts(samples, segment, params.overlap))),
+        Derived("equivalent noise bandwidth", noise_bandwidth, "bins"),
+        Derived("resolution", noise_bandwidth * float(rate_hz / segment), "Hz"),
+        Derived("degrees of freedom", dof),
+    ]
+
+
 STAGE = Stage(
     name="spectrum.welch",
     version=1,
@@ -262,6 +280,7 @@ STAGE = Stage(
     spec=spec,
     run=run,
     context=EachRow(),
+    derive=derive,
     example={"segment": "2 s"},
     source="P. D. Welch, IEEE Trans. Audio Electroacoust. 15(2), 70-73, 1967",
 )
