@@ -1,10 +1,10 @@
 """The recordings of the published run: signals by file."""
 
-from collections.abc import Callable
 from fractions import Fraction
 from pathlib import Path
 
 import numpy as np
+
 from check_values import entry
 from made_recordings import (
     ALIASES,
@@ -40,7 +40,6 @@ from made_recordings import (
     with_powers,
     write_edf,
 )
-
 from waveassay.contract import Floats
 from waveassay.recording.write import WrittenSignal, write_recording
 

@@ -4,18 +4,21 @@ Every signal is written on a grid of steps q that begins at -32768 q, so that 0 
 sample x is held as round(x / q). What that rounding does to a power is in `rounding_of_power`.
 """
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
 from datetime import datetime
 from fractions import Fraction
-from math import atan, pi, sqrt, tan
+from math import atan, log, pi, sqrt, tan
 from pathlib import Path
 
 import numpy as np
-from check_values import entry
+from numpy.typing import NDArray
 
+from check_values import entry
 from waveassay.contract import Floats
 from waveassay.recording.write import WrittenSignal, write_recording
+
+Complexes = NDArray[np.complex128]
 
 START = datetime(2031, 4, 5, 9, 30)
 #: Two second epochs at 250 Hz, as most entries have it.
@@ -103,9 +106,9 @@ def ar2_powers(phi: tuple[float, float], sigma2: float, period: int) -> dict[int
 
 
 #: Integrals of the densities of G05 between two frequencies.
-INTEGRALS = {
+INTEGRALS: dict[str, Callable[[float, float], float]] = {
     "flat": lambda a, b: b - a,
-    "one_over_f": lambda a, b: np.log(b / a),
+    "one_over_f": lambda a, b: log(b / a),
     "one_over_f2": lambda a, b: 1 / a - 1 / b,
 }
 QUANTILES_RATE_HZ = 100
@@ -167,7 +170,7 @@ BREATHS_HZ, BREATHS_MMHG = 0.2, 1.5
 _RISE, _FALL = 0.05, 0.3  # time constants of a beat, as shares of its length
 
 
-def pulse_amplitudes(harmonics: int) -> np.ndarray[tuple[int], np.dtype[np.complex128]]:
+def pulse_amplitudes(harmonics: int) -> Complexes:
     """Return the complex amplitudes of a beat that rises and falls by exponentials, mmHg.
 
     Of exp(-u / fall) - exp(-u / b), u from 0 to 1 over a beat and 1 / b = 1 / fall + 1 / rise:
@@ -175,10 +178,10 @@ def pulse_amplitudes(harmonics: int) -> np.ndarray[tuple[int], np.dtype[np.compl
     """
     k = np.arange(1, harmonics + 1)
 
-    def decay(rate: float) -> np.ndarray[tuple[int], np.dtype[np.complex128]]:
-        return 2 * (1 - np.exp(-rate)) / (rate + 2j * pi * k)
+    def decay(rate: float) -> Complexes:
+        return np.asarray(2 * (1 - np.exp(-rate)) / (rate + 2j * pi * k))
 
-    return PULSE_MMHG * (decay(1 / _FALL) - decay(1 / _FALL + 1 / _RISE))
+    return np.asarray(PULSE_MMHG * (decay(1 / _FALL) - decay(1 / _FALL + 1 / _RISE)))
 
 
 def pulse_wave(per_minute: float, *, ventilated: bool = False) -> Floats:

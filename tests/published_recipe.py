@@ -60,16 +60,16 @@ def _chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
 
 def _at(frequencies_hz: Iterable[int], more: str = "") -> str:
     """Return a step that gives the power of single bins of half a Hz and more."""
-    bands = ", ".join(f"at_{f}: [{f - 0.2} Hz, {f + 0.2} Hz]" for f in frequencies_hz)
+    return _power(", ".join(f"at_{f}: [{f - 0.2} Hz, {f + 0.2} Hz]" for f in frequencies_hz), more)
+
+
+def _power(bands: str, more: str = "") -> str:
     return f"feature.band_power: {{bands: {{{bands}}}{more}}}"
 
 
 def _estimator_chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
     peak = "feature.spectral_peak: {within: [5 Hz, 15 Hz], method: bin}"
-    inside = "feature.band_power: {bands: {inside: [%s Hz, %s Hz]}, integration: simpson, edges: both_in}"
-    whole = (
-        "feature.band_power: {bands: {all: [0 Hz, 125 Hz]}, integration: simpson, edges: both_in}"
-    )
+    exact = ", integration: simpson, edges: both_in"
     return {
         "rectangle": (
             ["tone", "levels", "ar2", "offset_noise"],
@@ -88,7 +88,7 @@ def _estimator_chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
             [
                 "epoch.consecutive: {length: 2 s, overlap: 50 %}",
                 _RECTANGLE,
-                "feature.band_power: {bands: {below: [62.4 Hz, 62.6 Hz], above: [62.9 Hz, 63.1 Hz]}}",
+                _power("below: [62.4 Hz, 62.6 Hz], above: [62.9 Hz, 63.1 Hz]"),
                 _TABLE,
             ],
         ),
@@ -103,8 +103,8 @@ def _estimator_chains() -> dict[str, tuple[Sequence[str], Sequence[str]]]:
                     f"epoch.consecutive: {{length: {length} s}}",
                     f"spectrum.multitaper: {{half_bandwidth: {half} Hz, detrend: none, "
                     "zero_padding: four_times}",
-                    inside % (10 - half, 10 + half) + "\n      as: power",
-                    whole + "\n      as: whole",
+                    _power(f"inside: [{10 - half} Hz, {10 + half} Hz]", exact),
+                    _power("all: [0 Hz, 125 Hz]", exact) + "\n      as: whole",
                     _TABLE,
                     _AVERAGE,
                 ],

@@ -5,13 +5,11 @@ from dataclasses import dataclass, field
 from pathlib import Path
 
 import numpy as np
+
 from made_files import write_all
 from published_recipe import recipe_text
 from running import command, numbers, only_run, rows
-
 from waveassay.contract import Floats
-
-_NAN = float("nan")
 
 
 @dataclass

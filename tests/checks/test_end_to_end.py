@@ -5,10 +5,12 @@ error of variance q^2/12 (W. R. Bennett, Bell Syst. Tech. J. 27, 446-472, 1948; 
 Trans. Circuit Theory 3, 266-276, 1956), carried on to a power in `rounding_of_power`.
 """
 
+from collections.abc import Callable
 from math import log2, log10, sqrt
 
 import numpy as np
 import pytest
+
 from check_values import entry
 from made_files import autoregressive, eeg
 from made_recordings import (
@@ -150,7 +152,7 @@ def test_energy_within_the_half_bandwidth(
     check = entry("B03")
     chain = f"tapers_{length_s}"
     name = f"T{length_s}_NW{time_bandwidth}_K{tapers}"
-    share = published.value(chain, "tone", "power.inside") / published.value(
+    share = published.value(chain, "tone", "band_power.inside") / published.value(
         chain, "tone", "whole.all"
     )
     off = check.tolerance[f"energy_within_W_{name}"] + TONE_ROUNDING / TONE_RMS**2
@@ -227,8 +229,16 @@ def test_noise_of_rounding(published: PublishedRun) -> None:
     assert floor * RATE_HZ / 2 == pytest.approx(check.expected, abs=check.tolerance)
 
 
-DENSITIES = {"flat": lambda f: 1.0, "one_over_f": lambda f: 1 / f, "one_over_f2": lambda f: f**-2}
-SLOPES = {"flat": lambda f: 0.0, "one_over_f": lambda f: f**-2, "one_over_f2": lambda f: 2 * f**-3}
+DENSITIES: dict[str, Callable[[float], float]] = {
+    "flat": lambda f: 1.0,
+    "one_over_f": lambda f: 1 / f,
+    "one_over_f2": lambda f: f**-2,
+}
+SLOPES: dict[str, Callable[[float], float]] = {
+    "flat": lambda f: 0.0,
+    "one_over_f": lambda f: f**-2,
+    "one_over_f2": lambda f: 2 * f**-3,
+}
 
 
 @pytest.mark.parametrize("share", [50, 90, 95])

@@ -10,8 +10,9 @@ from math import pi, sqrt
 
 import numpy as np
 import pytest
+
 from check_values import entry
-from made_files import pressures, write_converter
+from made_files import pressures
 from made_recordings import (
     BREATHS_HZ,
     BREATHS_MMHG,
@@ -48,7 +49,7 @@ def fundamental_off(rate: int) -> float:
     sqrt(6) s / (pi A T sqrt(n)) for errors of variance s^2 (Rife & Boorstyn, IEEE Trans. Inf.
     Theory 20, 591-598, 1974; from memory); the pulse's other harmonics only make it smaller.
     """
-    first = abs(pulse_amplitudes(1)[0])
+    first = float(np.abs(pulse_amplitudes(1)[0]))
     return 5 * PULSE_Q / sqrt(2 * roundings(rate)) / (pi * first * EPOCH_S)
 
 

@@ -13,8 +13,8 @@ from typing import Any
 
 import numpy as np
 import pytest
-from running import command, numbers, only_run, rows
 
+from running import command, numbers, only_run, rows
 from waveassay.contract import Floats
 from waveassay.recording import open_recording
 from waveassay.recording.write import WrittenSignal, write_recording
@@ -51,7 +51,7 @@ chains:
 
 @pytest.fixture(scope="module")
 def eeg(tmp_path_factory: pytest.TempPathFactory) -> Path:
-    """The run folder of the real EEG."""
+    """Return the run folder of the real EEG."""
     # No x86-64 Linux wheel of it above Python 3.12; there this file is not to be had.
     package = pytest.importorskip("pyedflib")
     recording = Path(package.__file__).parent / "tests" / "data" / "test_subsecond.edf"
@@ -169,7 +169,7 @@ def _notes(data: Any, name: str) -> list[Any]:
 
 @pytest.fixture(scope="module")
 def ecg_file(tmp_path_factory: pytest.TempPathFactory) -> Path:
-    """The three limb leads as EDF+, on the grid of steps that the ECG was sampled on."""
+    """Write the limb leads as EDF+, on the grid of steps that the ECG was sampled on."""
     ecg = read_ecg()
     limits = -32768 * ecg.step_uv, 32767 * ecg.step_uv
     signals = [

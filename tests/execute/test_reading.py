@@ -4,6 +4,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+
 from edf_bytes import Sig, build
 from running import rows, run, write_eeg
 

@@ -5,6 +5,7 @@ import sys
 from pathlib import Path
 
 import pytest
+
 from waveassay.contract import SignalError
 from waveassay.execute.store import MissingArtefactError, Store
 

@@ -1,0 +1,82 @@
+"""The docs say what is there: commands, exit codes, folders, and commands that work."""
+
+import re
+from pathlib import Path
+
+import pytest
+
+from waveassay.contract import errors
+from waveassay.recipe import check_recipe
+
+ROOT = Path(__file__).parents[1]
+README = (ROOT / "README.md").read_text(encoding="utf-8")
+DEVELOPERS = (ROOT / "DEVELOPERS.md").read_text(encoding="utf-8")
+
+
+def blocks(text: str, language: str) -> list[str]:
+    return re.findall(rf"^```{language}\n(.*?)^```$", text, re.MULTILINE | re.DOTALL)
+
+
+def test_the_first_two_shell_blocks_are_the_two_commands_of_one_line_each() -> None:
+    run, tests = blocks(README, "sh")[:2]
+    for block in (run, tests):
+        assert len(block.strip().splitlines()) == 1
+        assert "-m venv" in block
+    assert run.strip().endswith("waveassay run workdir_example")
+    assert "pytest" in tests
+
+
+@pytest.mark.parametrize("command", ["run", "check", "describe", "stages", "recipes", "schema"])
+def test_the_readme_names_every_command(command: str) -> None:
+    assert f"waveassay {command}" in README
+
+
+def test_the_readme_lists_the_exit_codes() -> None:
+    listed = set(re.findall(r"^\| (\d+) \|", README, re.MULTILINE))
+    classes = [c for c in vars(errors).values() if isinstance(c, type)]
+    assert {str(c.exit_code) for c in classes} <= listed
+
+
+def test_the_readme_recipe_is_sound() -> None:
+    (text,) = blocks(README, "yaml")
+    checked = check_recipe(text, "README.md")
+    assert not checked.errors, [str(problem) for problem in checked.errors]
+
+
+def test_developers_names_every_room_of_the_house() -> None:
+    rooms = [p.name for p in (ROOT / "engine" / "waveassay").iterdir() if p.is_dir()]
+    for room in rooms:
+        if not room.startswith("__"):
+            assert f"{room}/" in DEVELOPERS, room
+
+
+def test_the_stage_of_the_guide_works_as_printed(tmp_path: Path) -> None:
+    """The walk of DEVELOPERS.md: its stage and its test, copied out and run."""
+    import os
+    import subprocess
+    import sys
+
+    stage, test = blocks(DEVELOPERS, "python")
+    (tmp_path / "my_stages").mkdir()
+    (tmp_path / "my_stages" / "__init__.py").write_text('"""My stages."""\n')
+    (tmp_path / "my_stages" / "line_length.py").write_text(stage)
+    (tmp_path / "test_line_length.py").write_text(test)
+    info = tmp_path / "my_stages-0.1.dist-info"
+    info.mkdir()
+    (info / "METADATA").write_text("Metadata-Version: 2.1\nName: my-stages\nVersion: 0.1\n")
+    (project,) = blocks(DEVELOPERS, "toml")
+    group = re.search(r'\[project.entry-points."(.*)"\]\n(.*) = "(.*)"', project)
+    assert group
+    (info / "entry_points.txt").write_text(f"[{group[1]}]\n{group[2]} = {group[3]}\n")
+    env = {**os.environ, "PYTHONPATH": str(tmp_path)}
+    done = subprocess.run(
+        [sys.executable, "-m", "pytest", "-q", "-p", "no:cacheprovider", str(tmp_path)],
+        capture_output=True, text=True, env=env, cwd=tmp_path,
+    )  # fmt: skip
+    assert done.returncode == 0, done.stdout + done.stderr
+    shown = subprocess.run(
+        [sys.executable, "-m", "waveassay", "stages", "my.line_length"],
+        capture_output=True, text=True, env=env,
+    )  # fmt: skip
+    assert "Line length of each epoch" in shown.stdout
+    assert "my-stages 0.1" in shown.stdout
