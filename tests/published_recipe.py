@@ -64,6 +64,7 @@ def _at(frequencies_hz: Iterable[int], more: str = "") -> str:
 
 
 def _power(bands: str, more: str = "") -> str:
+    """Return a step that gives the power in bands written as YAML."""
     return f"feature.band_power: {{bands: {{{bands}}}{more}}}"
 
 

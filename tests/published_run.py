@@ -24,7 +24,7 @@ class PublishedRun:
 
     folder: Path
     recordings: Path
-    _tables: dict[str, list[dict[str, str]]] = field(default_factory=dict)
+    _tables: dict[str, list[dict[str, str]]] = field(default_factory=dict, repr=False)
 
     def table(self, name: str) -> list[dict[str, str]]:
         """Return the rows of a CSV, such as ``epochs/hann``."""

@@ -169,7 +169,7 @@ def test_units_of_pressure(published: PublishedRun, name: str) -> None:
     }
     (made,) = (signal for signal in pressures() if signal.name == name)
     held = np.mean(made.held.reshape(-1, 10 * RATE_HZ), axis=-1) * pascals[name]
-    mean = np.sqrt(published.epochs("units", name, "band_power.mean") * 1.0)
+    mean = np.sqrt(published.epochs("units", name, "band_power.mean"))
     assert mean == pytest.approx(held, rel=check.tolerance)
     whole = check.expected["100_mmHg_in_kPa"] if name == "in_mmhg" else 100.0
     # Roundings repeat themselves after the swing's period of 500 samples.

@@ -71,7 +71,7 @@ def stored(into: Path) -> int:
     return len(list((into / "store").glob("objects/*/*/artefact.json")))
 
 
-def wait_until(met: "Iterator[bool]", seconds: float = 60) -> None:
+def wait_until(met: "Iterator[bool]", seconds: float = 240) -> None:
     end = time.monotonic() + seconds
     while not next(met):
         assert time.monotonic() < end, "it never came to that"

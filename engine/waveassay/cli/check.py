@@ -31,12 +31,15 @@ def check(argument: str, arguments: Sequence[Path]) -> int:
 
 
 def _would_run(recipe: Recipe, name: str, path: Path) -> bool:
+    from waveassay.plan.columns import columns_by_chain
     from waveassay.plan.passage import passages
     from waveassay.recording import read_facts
 
     screen = console()
     try:
-        _, warnings = passages(recipe, name, "", read_facts(path, truncated=recipe.truncated))
+        _, warnings = passages(
+            recipe, columns_by_chain(recipe), name, "", read_facts(path, truncated=recipe.truncated)
+        )
     except SignalError as error:
         screen.print(f"would fail  {name}: {error}")
         return False

@@ -31,7 +31,7 @@ from waveassay.execute.tables import (
     spectra_table,
     summary_rows,
 )
-from waveassay.plan.columns import FeatureColumn, column_name
+from waveassay.plan.columns import column_name
 from waveassay.plan.passage import Lane, Passage
 from waveassay.plan.program import Level
 from waveassay.plan.tasks import barriers
@@ -108,9 +108,7 @@ def read_states(store: Store, keys: Sequence[str]) -> dict[tuple[int, int], Part
     return dict(states)
 
 
-def finish(
-    passage: Passage, columns: Sequence[FeatureColumn], gathered: Gathered, folder: Path
-) -> None:
+def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
     """Write a passage's tables, figures, summary and excluded time."""
     blocks: list[Block] = []
     average_blocks: list[Block] = []
@@ -147,13 +145,13 @@ def finish(
     }
     tables = [s for s in passage.chain.steps if s.given is Kind.TABLE]
     if tables:
-        own = [c for c in columns if not c.averaged]
+        own = [c for c in passage.columns if not c.averaged]
         facts["csv"] = _csv_choice(passage)
         for averaged, name, some in (
             (False, "epochs.parquet", blocks),
             (True, "averages.parquet", average_blocks),
         ):
-            wanted = [c for c in columns if c.averaged is averaged]
+            wanted = [c for c in passage.columns if c.averaged is averaged]
             if wanted:
                 table = feature_table(
                     passage.recording, some, wanted, passage.conditions, averaged=averaged

@@ -62,7 +62,7 @@ def _wanted(
     wanted = {}
     for lane_no, lane in enumerate(source.passage.lanes):
         start_s, stop_s = lane.bounds_s(stretch)
-        reach = lane.program.rows_reach()
+        reach = lane.program.rows_reach
         for index in _signals_taken(lane, pass_no):
             wanted[lane_no, index] = (start_s - reach.before_s, stop_s + reach.after_s)
     return wanted

@@ -127,7 +127,7 @@ class SignalSource:
         piece = self.passage.pieces[self.piece_no]
         start_s, stop_s = self._within(window)
         parts: list[Signal] = []
-        for stretch in overlapping(self.passage, lane, self.piece_no, start_s, stop_s):
+        for stretch in overlapping(lane, self.piece_no, start_s, stop_s):
             arrays, facts = self._load(self.prepared[pass_no, stretch.number])
             name = f"{lane_no}.{move_no}"
             known = facts[name]

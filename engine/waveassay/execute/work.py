@@ -18,7 +18,7 @@ from waveassay.execute.prepare import prepare
 from waveassay.execute.rows import make_rows
 from waveassay.execute.signals import SignalSource, prepared_keys
 from waveassay.execute.store import MissingArtefactError, Store
-from waveassay.plan.columns import FeatureColumn, feature_columns
+from waveassay.plan.columns import FeatureColumn, columns_by_chain
 from waveassay.plan.passage import Passage, passages
 from waveassay.plan.tasks import Task, tasks_of
 from waveassay.provenance.files import write_text
@@ -73,8 +73,7 @@ class Bench:
     @cached_property
     def columns(self) -> dict[str, tuple[FeatureColumn, ...]]:
         """Columns of every chain's tables."""
-        recipe = self.recipe
-        return {c.name: feature_columns(c, recipe.signals) for c in recipe.chains.values()}
+        return columns_by_chain(self.recipe)
 
     def tasks_of_job(self, job: str) -> list[tuple[str, str]]:
         """Return a job's tasks: (recording, key)."""
@@ -85,7 +84,7 @@ class Bench:
         if recording not in self._ready:
             known = self._plan["recordings"][recording]
             facts = Facts.from_json(known["facts"])
-            ways, _ = passages(self.recipe, recording, known["sha256"], facts)
+            ways, _ = passages(self.recipe, self.columns, recording, known["sha256"], facts)
             tasks = {task.key: task for way in ways for task in tasks_of(way)}
             self._ready.clear()  # jobs take recordings one after another
             self._ready[recording] = Ready(
@@ -152,7 +151,7 @@ def _do(bench: Bench, recording: str, task: Task) -> None:
         by_action[ready.tasks[need].action].append(need)
     with store.writing(task.key, bench.environment) as folder:
         if task.action == "finish":
-            finish(passage, bench.columns[task.chain], gather(store, by_action["rows"]), folder)
+            finish(passage, gather(store, by_action["rows"]), folder)
         elif task.action == "combine":
             combine(passage, task.pass_no, gather(store, by_action["rows"]), folder)
         else:

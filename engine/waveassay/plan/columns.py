@@ -5,7 +5,7 @@ from dataclasses import dataclass
 
 from waveassay.contract import FeaturesSpec, Kind, SignalSpec
 from waveassay.recipe.fold import fold
-from waveassay.recipe.model import Chain, SignalRule
+from waveassay.recipe.model import Chain, Recipe, SignalRule
 
 
 @dataclass(frozen=True)
@@ -52,6 +52,11 @@ def feature_columns(chain: Chain, rules: Mapping[str, SignalRule]) -> tuple[Feat
                     meaning=column.meaning,
                 )
     return tuple(sorted(found.values(), key=lambda c: c.step_index))
+
+
+def columns_by_chain(recipe: Recipe) -> dict[str, tuple[FeatureColumn, ...]]:
+    """Return the columns of every chain's features."""
+    return {chain.name: feature_columns(chain, recipe.signals) for chain in recipe.chains.values()}
 
 
 def column_name(step: str, part: str) -> str:

@@ -6,6 +6,7 @@ from fractions import Fraction
 from functools import cached_property
 
 from waveassay.contract import Condition, Interval, SignalError, SignalSpec
+from waveassay.plan.columns import FeatureColumn
 from waveassay.plan.conditions import resolve_conditions
 from waveassay.plan.labels import match_signals, unit_scale
 from waveassay.plan.program import Program, compile_program
@@ -54,6 +55,7 @@ class Passage:
     pieces: tuple[Interval, ...]
     conditions: tuple[Condition, ...]
     lanes: tuple[Lane, ...]
+    columns: tuple[FeatureColumn, ...]
     warnings: tuple[str, ...]
 
     @cached_property
@@ -74,9 +76,15 @@ class Passage:
 
 
 def passages(
-    recipe: Recipe, recording: str, sha256: str, facts: Facts
+    recipe: Recipe,
+    columns: Mapping[str, tuple[FeatureColumn, ...]],
+    recording: str,
+    sha256: str,
+    facts: Facts,
 ) -> tuple[tuple[Passage, ...], tuple[str, ...]]:
     """Return the recording's passage through every chain, and warnings about the recording.
+
+    ``columns`` are those of the recipe, see `columns_by_chain`.
 
     Raises
     ------
@@ -95,7 +103,9 @@ def passages(
     warnings = list(facts.warnings)
     found: list[Passage] = []
     for chain in recipe.chains.values():
-        passage = _passage(recipe, chain, recording, sha256, facts, conditions, matched)
+        passage = _passage(
+            recipe, chain, columns[chain.name], recording, sha256, facts, conditions, matched
+        )
         if not passage.lanes:
             warnings.append(f"chain {chain.name}: none of its signals is in this recording")
         warnings.extend(passage.warnings)
@@ -106,6 +116,7 @@ def passages(
 def _passage(
     recipe: Recipe,
     chain: Chain,
+    columns: tuple[FeatureColumn, ...],
     recording: str,
     sha256: str,
     facts: Facts,
@@ -134,13 +145,13 @@ def _passage(
     lanes = []
     for name, role, file_signal, scale, spec, program in planned:
         warnings.extend(_short_pieces(chain, name, program, facts.pieces))
-        step_s = program.grid_step_s()
+        step_s = program.grid_step_s
         borders = tuple(bounds_s(piece, step_s, whole=whole) for piece in facts.pieces)
         lanes.append(
             Lane(name, role, file_signal.index, file_signal.label, scale, spec, program, borders)
         )
     return Passage(
-        recording, sha256, chain, facts.pieces, conditions, tuple(lanes), tuple(warnings)
+        recording, sha256, chain, facts.pieces, conditions, tuple(lanes), columns, tuple(warnings)
     )
 
 

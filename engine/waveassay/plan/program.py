@@ -10,6 +10,7 @@ at or before it.
 from dataclasses import dataclass
 from enum import StrEnum
 from fractions import Fraction
+from functools import cached_property
 
 from waveassay.contract import Kind, Reach, SignalSpec, Spec, Whole
 from waveassay.plan.stretches import common_step_s
@@ -111,6 +112,13 @@ class Program:
 
     def samples_reach(self, pass_no: int) -> Reach:
         """Return the summed reach of a pass's steps on samples, along the longest path."""
+        return self._samples_reaches[pass_no]
+
+    @cached_property
+    def _samples_reaches(self) -> list[Reach]:
+        return [self._longest_path(pass_no) for pass_no in range(self.passes)]
+
+    def _longest_path(self, pass_no: int) -> Reach:
         before: dict[int, Fraction] = {}
         after: dict[int, Fraction] = {}
         for move in self.samples_moves(pass_no):
@@ -121,6 +129,7 @@ class Program:
         zero = Fraction(0)
         return Reach(max(before.values(), default=zero), max(after.values(), default=zero))
 
+    @cached_property
     def rows_reach(self) -> Reach:
         """Return the longest reach of the steps that cut rows from samples."""
         reaches = [
@@ -136,6 +145,7 @@ class Program:
             max((r.after_s for r in reaches), default=zero),
         )
 
+    @cached_property
     def grid_step_s(self) -> Fraction:
         """Return the step of the grid on which stretches of this signal begin."""
         rates = [

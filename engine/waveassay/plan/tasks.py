@@ -8,7 +8,8 @@
 A key is the digest of all that can change a byte of what a task makes, and of nothing else.
 """
 
-from collections.abc import Iterable, Iterator
+from bisect import bisect_left, bisect_right
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, field
 from fractions import Fraction
 from functools import lru_cache
@@ -26,6 +27,7 @@ Action = Literal["prepare", "rows", "combine", "finish"]
 _PREPARE_COST_S = 1.5e-7  # a sample and step
 _ROWS_COST_S = 1.0e-7  # a sample and step
 _TASK_COST_S = 0.01
+_FINISH_COST_S = 0.5
 
 
 @dataclass(frozen=True)
@@ -54,6 +56,7 @@ class _Planner:
 
     passage: Passage
     tasks: dict[tuple[str, int, Stretch | None], Task] = field(default_factory=dict)
+    _steps: dict[tuple[str, int], list[str]] = field(default_factory=dict)
 
     def finish(self) -> Task:
         passes = range(self.passage.passes)
@@ -62,17 +65,12 @@ class _Planner:
         identity = {
             "recording": self.passage.recording,
             "chain": self.passage.chain.name,
+            "columns": [column.name for column in self.passage.columns],
             "pieces": [[p.start_s, p.stop_s] for p in self.passage.pieces],
             "conditions": _conditions(self.passage),
-            "lanes": [
-                {
-                    **_lane(lane),
-                    "steps": [_step(m, named=True) for m in lane.program.moves.values()],
-                }
-                for lane in self.passage.lanes
-            ],
+            "lanes": self._lanes("finish", 0),
         }
-        return self._task("finish", 0, None, identity, needs, 0.05)
+        return self._task("finish", 0, None, identity, needs, _FINISH_COST_S)
 
     def combine(self, pass_no: int) -> Task:
         """Plan the state that pass ``pass_no`` applies."""
@@ -80,80 +78,72 @@ class _Planner:
         if known is not None:
             return known
         needs = [self.rows(pass_no - 1, s).key for s in self._selected(pass_no - 1)]
-        identity = {
-            "lanes": [
-                {**_lane(lane), "steps": [_step(m) for m in barriers(lane, pass_no)]}
-                for lane in self.passage.lanes
-            ]
-        }
-        return self._task("combine", pass_no, None, identity, needs, 0.05)
+        identity = {"lanes": self._lanes("combine", pass_no)}
+        return self._task("combine", pass_no, None, identity, needs, _FINISH_COST_S)
 
     def rows(self, pass_no: int, stretch: Stretch) -> Task:
         known = self.tasks.get(("rows", pass_no, stretch))
         if known is not None:
             return known
-        needs: list[str] = []
-        lanes = []
+        bounds = [lane.bounds_s(stretch) for lane in self.passage.lanes]
+        windows = []
         cost = 0.0
-        for lane in self.passage.lanes:
-            reach = lane.program.rows_reach()
-            start, stop = lane.bounds_s(stretch)
-            moves = rows_moves(lane, pass_no)
-            for p in range(pass_no + 1):
-                if lane.program.kept_signals(p) and lane.program.prepares(p):
-                    for other in overlapping(
-                        self.passage,
-                        lane,
-                        stretch.piece,
-                        start - reach.before_s,
-                        stop + reach.after_s,
-                    ):
-                        needs.append(self.prepare(p, other).key)
-            lanes.append(
-                {
-                    **_lane(lane),
-                    "bounds": [start, stop],
-                    "steps": [_step(m) for m in moves],
-                    "collected": [_step(m) for m in collected(lane, pass_no)],
-                }
-            )
-            cost += _samples(lane, start, stop) * max(1, len(moves)) * _ROWS_COST_S
-        needs += [self.combine(p).key for p in range(1, pass_no + 1)]
+        for lane, (start, stop) in zip(self.passage.lanes, bounds, strict=True):
+            reach = lane.program.rows_reach
+            windows.append((start - reach.before_s, stop + reach.after_s))
+            steps = max(1, len(rows_moves(lane, pass_no)))
+            cost += _samples(lane, start, stop) * steps * _ROWS_COST_S
         identity = {
             "piece": _piece(self.passage, stretch),
             "conditions": _conditions(self.passage),
-            "lanes": lanes,
+            "bounds": bounds,
+            "lanes": self._lanes("rows", pass_no),
         }
+        needs = self._needs(range(pass_no + 1), pass_no, stretch, windows)
         return self._task("rows", pass_no, stretch, identity, needs, cost)
 
     def prepare(self, pass_no: int, stretch: Stretch) -> Task:
         known = self.tasks.get(("prepare", pass_no, stretch))
         if known is not None:
             return known
-        needs: list[str] = []
-        lanes = []
+        lanes = self.passage.lanes
+        windows = [window_s(self.passage, lane, pass_no, stretch) for lane in lanes]
         cost = 0.0
-        for lane in self.passage.lanes:
-            start, stop = lane.bounds_s(stretch)
-            low, high = window_s(self.passage, lane, pass_no, stretch)
-            moves = lane.program.samples_moves(pass_no)
-            for p in range(pass_no):
-                if lane.program.kept_signals(p) and lane.program.prepares(p):
-                    for other in overlapping(self.passage, lane, stretch.piece, low, high):
-                        needs.append(self.prepare(p, other).key)
-            lanes.append(
-                {
-                    **_lane(lane),
-                    "bounds": [start, stop],
-                    "window": [low, high],
-                    "steps": [_step(m) for m in moves],
-                    "kept": lane.program.kept_signals(pass_no),
-                }
-            )
-            cost += _samples(lane, low, high) * max(1, len(moves)) * _PREPARE_COST_S
-        needs += [self.combine(p).key for p in range(1, pass_no + 1)]
-        identity = {"piece": _piece(self.passage, stretch), "lanes": lanes}
+        for lane, (low, high) in zip(lanes, windows, strict=True):
+            steps = max(1, len(lane.program.samples_moves(pass_no)))
+            cost += _samples(lane, low, high) * steps * _PREPARE_COST_S
+        identity = {
+            "piece": _piece(self.passage, stretch),
+            "bounds": [lane.bounds_s(stretch) for lane in lanes],
+            "windows": windows,
+            "lanes": self._lanes("prepare", pass_no),
+        }
+        needs = self._needs(range(pass_no), pass_no, stretch, windows)
         return self._task("prepare", pass_no, stretch, identity, needs, cost)
+
+    def _needs(
+        self,
+        passes: Iterable[int],
+        pass_no: int,
+        stretch: Stretch,
+        windows: Sequence[tuple[Fraction, Fraction]],
+    ) -> list[str]:
+        """Return the keys of what other tasks prepared within the windows, and of states."""
+        wanted: dict[tuple[int, Stretch], None] = {}
+        for p in passes:
+            for lane, window in zip(self.passage.lanes, windows, strict=True):
+                if lane.program.prepares(p) and lane.program.kept_signals(p):
+                    for other in overlapping(lane, stretch.piece, *window):
+                        wanted[p, other] = None
+        needs = [self.prepare(p, other).key for p, other in wanted]
+        return needs + [self.combine(p).key for p in range(1, pass_no + 1)]
+
+    def _lanes(self, action: Action, pass_no: int) -> list[str]:
+        """Return a digest of each lane's part in a task, but for the stretch."""
+        if (action, pass_no) not in self._steps:
+            lanes = self.passage.lanes
+            self._steps[action, pass_no] = [digest(_lane(lane, action, pass_no)) for lane in lanes]
+        return self._steps[action, pass_no]
 
     def _selected(self, pass_no: int) -> Iterator[Stretch]:
         """Yield the stretches a pass looks at: all, or those that meet a condition."""
@@ -248,21 +238,16 @@ def window_s(
     piece = passage.pieces[stretch.piece]
     reach = lane.program.samples_reach(pass_no)
     start, stop = lane.bounds_s(stretch)
-    low = aligned(start - reach.before_s, piece, lane.program.grid_step_s())
+    low = aligned(start - reach.before_s, piece, lane.program.grid_step_s)
     return low, min(piece.stop_s, stop + reach.after_s)
 
 
-def overlapping(
-    passage: Passage, lane: Lane, piece: int, start_s: Fraction, stop_s: Fraction
-) -> list[Stretch]:
+def overlapping(lane: Lane, piece: int, start_s: Fraction, stop_s: Fraction) -> list[Stretch]:
     """Return the stretches of a piece that share time with an interval, for one signal."""
-    return [
-        stretch
-        for stretch in passage.stretches
-        if stretch.piece == piece
-        and lane.bounds_s(stretch)[0] < stop_s
-        and start_s < lane.bounds_s(stretch)[1]
-    ]
+    borders = lane.borders_s[piece]
+    first = max(0, bisect_right(borders, start_s) - 1)
+    last = min(len(borders) - 1, bisect_left(borders, stop_s))
+    return [Stretch(piece, number) for number in range(first, last)]
 
 
 def _meets(passage: Passage, lane: Lane, stretch: Stretch) -> bool:
@@ -270,8 +255,9 @@ def _meets(passage: Passage, lane: Lane, stretch: Stretch) -> bool:
     return any(c.start_s < stop and start < c.stop_s for c in passage.conditions)
 
 
-def _lane(lane: Lane) -> dict[str, Any]:
-    return {
+def _lane(lane: Lane, action: Action, pass_no: int) -> dict[str, Any]:
+    """Return all of a signal and its steps that can change what a task makes of it."""
+    known: dict[str, Any] = {
         "signal": lane.signal,
         "channel": lane.channel,
         "scale": lane.scale,
@@ -279,6 +265,17 @@ def _lane(lane: Lane) -> dict[str, Any]:
         "modality": lane.spec.modality,
         "rate_hz": lane.spec.rate_hz,
     }
+    if action == "prepare":
+        known["steps"] = [_step(move) for move in lane.program.samples_moves(pass_no)]
+        known["kept"] = lane.program.kept_signals(pass_no)
+    elif action == "rows":
+        known["steps"] = [_step(move) for move in rows_moves(lane, pass_no)]
+        known["collected"] = [_step(move) for move in collected(lane, pass_no)]
+    elif action == "combine":
+        known["steps"] = [_step(move) for move in barriers(lane, pass_no)]
+    else:
+        known["steps"] = [_step(move, named=True) for move in lane.program.moves.values()]
+    return known
 
 
 def _step(move: Move, *, named: bool = False) -> dict[str, Any]:

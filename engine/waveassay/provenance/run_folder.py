@@ -9,7 +9,7 @@ from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
-from waveassay.plan.columns import feature_columns
+from waveassay.plan.columns import columns_by_chain
 from waveassay.provenance.files import machine_errors, write_text
 from waveassay.provenance.log import Log
 from waveassay.provenance.manifest import LOG, MANIFEST, read_manifest, write_manifest
@@ -101,9 +101,8 @@ class RunFolder:
         self._write_recordings(results)
         write_csv(self.path / "steps.csv", _STEP_COLUMNS, list(steps))
         write_csv(self.path / "derived.csv", _DERIVED_COLUMNS, list(derived))
-        columns = {c.name: feature_columns(c, recipe.signals) for c in recipe.chains.values()}
         with machine_errors(self.path):
-            write_result_tables(self.path, columns, results)
+            write_result_tables(self.path, columns_by_chain(recipe), results)
             _copy_figures(self.path, results)
         for result in results:
             self.log.append(
