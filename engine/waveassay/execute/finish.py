@@ -141,12 +141,11 @@ def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
         "excluded": excluded,
         "figures": figures,
         "summary": [],
-        "csv": "never",
+        "csv": _csv_choice(passage),
     }
     tables = [s for s in passage.chain.steps if s.given is Kind.TABLE]
     if tables:
         own = [c for c in passage.columns if not c.averaged]
-        facts["csv"] = _csv_choice(passage)
         for averaged, name, some in (
             (False, "epochs.parquet", blocks),
             (True, "averages.parquet", average_blocks),
@@ -235,11 +234,14 @@ def _units(lane: Lane) -> dict[tuple[str, str], str]:
 
 
 def _csv_choice(passage: Passage) -> str:
-    """Return what the chain's table steps ask for; the most eager one decides."""
-    asked = {"never"}
+    """Return what the chain's table steps ask for; the most eager one decides.
+
+    Without one there are averaged spectra at most, written as the sizes suggest.
+    """
+    asked = set()
     for step in passage.chain.steps:
         if step.given is Kind.TABLE and step.stage.run is not None:
             table = step.stage.run(step.params, None)
             assert isinstance(table, Table), f"{step.name} gives a table"
             asked.add(table.csv)
-    return next(choice for choice in ("always", "auto", "never") if choice in asked)
+    return next((choice for choice in ("always", "auto", "never") if choice in asked), "auto")

@@ -102,14 +102,17 @@ def passages(
     matched = match_signals(recipe.signals, labels, wanted)
     warnings = list(facts.warnings)
     found: list[Passage] = []
+    empty: list[str] = []
     for chain in recipe.chains.values():
         passage = _passage(
             recipe, chain, columns[chain.name], recording, sha256, facts, conditions, matched
         )
         if not passage.lanes:
-            warnings.append(f"chain {chain.name}: none of its signals is in this recording")
+            empty.append(chain.name)
         warnings.extend(passage.warnings)
         found.append(passage)
+    if empty:
+        warnings.append(f"nothing to do in {', '.join(empty)}: no signal of theirs is in the file")
     return tuple(found), tuple(dict.fromkeys(warnings))
 
 

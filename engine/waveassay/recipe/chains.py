@@ -265,11 +265,11 @@ def resolve_chain(
 
 
 def warn_of_unused(chain: str, steps: Sequence[Step], report: Report) -> None:
-    """Warn of each output that no later step takes and that is no export."""
+    """Warn of each output that no later step takes and that the engine does not write."""
     used = {step.takes_from for step in steps}
     last_table = max((i for i, step in enumerate(steps) if step.given is Kind.TABLE), default=-1)
     for index, step in enumerate(steps):
-        if index in used or step.given in SINKS:
+        if index in used or step.given in SINKS or step.given is Kind.AVERAGES:
             continue
         if step.given in _NUMBERS and index < last_table:
             continue
