@@ -57,16 +57,24 @@ def test_the_second_of_two_writers_does_no_harm(tmp_path: Path) -> None:
     assert store.read(KEY).path("value.txt").read_text() == "early"
 
 
-def test_a_sweep_takes_what_the_dead_left_and_nothing_of_the_living(tmp_path: Path) -> None:
-    store = Store(tmp_path)
+def leave_half_written(root: Path) -> None:
+    """Kill a process while it writes a result."""
     code = (
         "import os, sys; from pathlib import Path; from waveassay.execute.store import Store\n"
         f"with Store(Path(sys.argv[1])).writing({KEY!r}, 'e'): os.kill(os.getpid(), 9)"
     )
-    subprocess.run([sys.executable, "-c", code, str(tmp_path)], check=False)
-    assert len(list(tmp_path.rglob(".part-*"))) == 1
-    with store.writing(KEY, "e") as folder:
-        store.sweep()
-        assert list(tmp_path.rglob(".part-*")) == [folder]
-        (folder / "value.txt").write_text("alive")
-    assert store.read(KEY).path("value.txt").read_text() == "alive"
+    subprocess.run([sys.executable, "-c", code, str(root)], check=False)
+    assert len(list(root.rglob(".part-*"))) == 1
+
+
+def test_what_the_dead_left_is_swept(tmp_path: Path) -> None:
+    leave_half_written(tmp_path)
+    with Store(tmp_path).in_use():
+        assert not list(tmp_path.rglob(".part-*"))
+
+
+def test_nothing_is_swept_while_another_run_shares_the_store(tmp_path: Path) -> None:
+    with Store(tmp_path).in_use():
+        leave_half_written(tmp_path)
+        with Store(tmp_path).in_use():  # the second of two: it waits for nobody
+            assert len(list(tmp_path.rglob(".part-*"))) == 1

@@ -111,7 +111,8 @@ def run_recipe(
             return RunOutcome(*finished, already=True, timings_s={"all": seconds})
         reading_s = time.monotonic() - started
         run = _Run(recipe, store, workers, runner, watcher)
-        return run.over(found, read, into / "runs", known, reading_s)
+        with store.in_use():
+            return run.over(found, read, into / "runs", known, reading_s)
 
 
 @dataclass
@@ -132,7 +133,6 @@ class _Run:
     ) -> RunOutcome:
         """Plan, compute what the store lacks, and write the run folder."""
         clock = _Clock({"reading": reading_s})
-        self.store.sweep()
         env = environment(installed_bundles())
         folder = RunFolder.open(runs, self.recipe)
         folder.begin(known, env, workers=self.workers, recordings=len(found))

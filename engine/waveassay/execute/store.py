@@ -5,11 +5,11 @@ never taken for whole. Its ``artefact.json`` names the files with their digests 
 that made them, and is checked when the result is read.
 """
 
+import fcntl
 import hashlib
 import json
 import os
 import shutil
-import socket
 import tempfile
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -65,7 +65,7 @@ class Store:
         place = self._place(key)
         try:
             place.parent.mkdir(parents=True, exist_ok=True)
-            part = Path(tempfile.mkdtemp(prefix=_own_prefix(), dir=place.parent))
+            part = Path(tempfile.mkdtemp(prefix=PART_PREFIX, dir=place.parent))
             try:
                 yield part
                 self._put(key, environment, part)
@@ -129,34 +129,30 @@ class Store:
         facts = json.loads((self._place(key) / _FACTS).read_text())
         return facts["digest"], facts["environment"]
 
-    def sweep(self) -> None:
-        """Remove what killed processes of this machine left half written.
+    @contextmanager
+    def in_use(self) -> Iterator[None]:
+        """Hold the store for a run, beside others that share it.
 
-        A store may be shared: what a live process, or another machine, is writing stays.
+        What killed runs left half written is removed first, when no other run is at work: only
+        then is none of it anybody's.
         """
+        try:
+            self.root.mkdir(parents=True, exist_ok=True)
+            file = (self.root / ".lock").open("a")
+        except OSError as error:
+            raise machine_error(error, self.root) or error from error
+        with file:
+            try:
+                fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
+                self._sweep()
+            except BlockingIOError:
+                pass
+            fcntl.flock(file, fcntl.LOCK_SH)
+            yield
+
+    def _sweep(self) -> None:
         for part in self.root.glob(f"objects/*/{PART_PREFIX}*"):
-            host, _, process = part.name.removeprefix(PART_PREFIX).rpartition(".")
-            number = process.split("-")[0]
-            if host == _host() and number.isdigit() and not _lives(int(number)):
-                shutil.rmtree(part, ignore_errors=True)
-
-
-def _own_prefix() -> str:
-    return f"{PART_PREFIX}{_host()}.{os.getpid()}-"
-
-
-def _host() -> str:
-    return socket.gethostname().replace("/", "_")
-
-
-def _lives(process: int) -> bool:
-    try:
-        os.kill(process, 0)
-    except ProcessLookupError:
-        return False
-    except PermissionError:  # it lives, and is somebody else's
-        return True
-    return True
+            shutil.rmtree(part, ignore_errors=True)
 
 
 def _sha256(path: Path) -> str:
