@@ -32,6 +32,7 @@ from waveassay.contract.quantity import (
     number_text,
     unit_factor,
 )
+from waveassay.contract.response import Response, kernel_gain
 from waveassay.contract.spec import (
     ColumnSpec,
     Derived,
@@ -79,6 +80,7 @@ __all__ = [
     "Part",
     "Quantity",
     "Reach",
+    "Response",
     "Rows",
     "Seconds",
     "Share",
@@ -97,6 +99,7 @@ __all__ = [
     "check_band",
     "exact",
     "features_of",
+    "kernel_gain",
     "merged",
     "number_text",
     "unit_factor",

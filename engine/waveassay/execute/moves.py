@@ -4,7 +4,10 @@ import traceback
 from collections.abc import Sequence
 from typing import Any, cast
 
-from waveassay.contract import Data, Epochs, Part, SignalError
+import numpy as np
+from numpy.typing import NDArray
+
+from waveassay.contract import Data, Epochs, Floats, Part, Response, Signal, SignalError
 from waveassay.contract.errors import MachineError
 from waveassay.plan.program import Move
 
@@ -32,6 +35,38 @@ def run_move(move: Move, data: Any, state: Part | None = None) -> Data:
     if run is None:
         raise StepError(move.step.name, "the stage has nothing to run")
     return cast(Data, _guarded(move, lambda: run(params, data)))
+
+
+def mask_move(move: Move, signal: Signal) -> Signal:
+    """Return the signal with its masks as a step that declares its response leaves them."""
+    response = _response(move)
+    return cast(Signal, _guarded(move, lambda: response.mask(move.step.params, signal)))
+
+
+def gain_move(move: Move, freq_hz: Floats) -> NDArray[Any]:
+    """Return the gain of a step that declares its response.
+
+    Raises
+    ------
+    StepError
+        When it is not one finite number a frequency.
+    """
+    response = _response(move)
+    gain = _guarded(move, lambda: response.gain(move.step.params, move.spec_in, freq_hz))
+    gain = np.asarray(gain)
+    if gain.shape != freq_hz.shape or gain.dtype.kind not in "fc" or not np.isfinite(gain).all():
+        raise StepError(
+            move.step.name,
+            f"the response of stage {move.step.stage.name} is not one finite number for each of "
+            f"{freq_hz.size} frequencies; tell whoever maintains it.",
+        )
+    return gain
+
+
+def _response(move: Move) -> Response:
+    response = move.step.stage.response
+    assert response is not None, f"{move.step.name} declares a response"
+    return response
 
 
 def collect_move(move: Move, data: Any) -> Part:
