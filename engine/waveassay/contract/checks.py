@@ -22,6 +22,7 @@ import numpy as np
 from pydantic import ValidationError
 
 from waveassay.contract.checks_data import RATES_HZ, UNITS, Given, given, random_signal
+from waveassay.contract.checks_response import RESPONSE_TOLERANCE, prove_response
 from waveassay.contract.checks_running import (
     InRows,
     Refused,
@@ -44,7 +45,14 @@ from waveassay.contract.spec import (
 )
 from waveassay.contract.stage import EachRow, Reach, Stage, Whole
 
-__all__ = ["CHECKS", "STRETCH_TOLERANCE", "example_params", "run_by_stretches", "run_whole"]
+__all__ = [
+    "CHECKS",
+    "RESPONSE_TOLERANCE",
+    "STRETCH_TOLERANCE",
+    "example_params",
+    "run_by_stretches",
+    "run_whole",
+]
 
 #: Run by stretches and run whole may be this share of the largest sample (in or out) apart:
 #: ten times what the declared reach may leave out, for what rounding adds.
@@ -276,6 +284,15 @@ def check_context(stage: Stage) -> None:
             _prove_reach(stage, params, case)
 
 
+def check_response(stage: Stage) -> None:
+    """Prove a declared frequency response against the stage's own function, masks to the letter."""
+    if stage.response is None:
+        return
+    for case in cases(stage):
+        assert isinstance(case.spec, SignalSpec), f"{stage.name}: a response is for signals"
+        prove_response(stage, example_params(stage), case.spec)
+
+
 def _prove_reach(stage: Stage, params: Params, case: Given) -> None:
     """Require that run by stretches equals run whole, masks to the letter."""
     assert isinstance(case.spec, SignalSpec), f"{stage.name}: a reach is for stages on signals"
@@ -352,4 +369,5 @@ CHECKS: tuple[Callable[[Stage], None], ...] = (
     check_input_is_not_written,
     check_same_twice,
     check_context,
+    check_response,
 )

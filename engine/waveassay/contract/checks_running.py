@@ -78,7 +78,7 @@ def run_by_stretches(
     rates = [signal.rate_hz]
     if isinstance(spec_out, SignalSpec) and spec_out.rate_hz is not None:
         rates.append(spec_out.rate_hz)
-    piece, step_s = signal.piece, _common_step_s(rates)
+    piece, step_s = signal.piece, common_step_s(rates)
 
     def aligned(time_s: Fraction) -> Fraction:
         inside_s = max(Fraction(0), time_s - piece.start_s)
@@ -100,7 +100,8 @@ def run_by_stretches(
     return _joined(parts, signal)
 
 
-def _common_step_s(rates_hz: Sequence[Fraction]) -> Fraction:
+def common_step_s(rates_hz: Sequence[Fraction]) -> Fraction:
+    """Return the shortest time that is a whole number of samples at every rate."""
     return Fraction(
         lcm(*(rate.denominator for rate in rates_hz)), gcd(*(rate.numerator for rate in rates_hz))
     )
