@@ -1,10 +1,12 @@
 """Run one step, and say which step failed when it does."""
 
 import traceback
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from pathlib import Path
 from typing import Any, cast
 
 from waveassay.contract import Data, Epochs, Part, SignalError
+from waveassay.contract.agreement import disagreements
 from waveassay.contract.errors import MachineError
 from waveassay.plan.program import Move
 
@@ -27,11 +29,11 @@ def run_move(move: Move, data: Any, state: Part | None = None) -> Data:
     barrier = move.barrier
     if barrier is not None and barrier.apply is not None:
         apply = barrier.apply
-        return cast(Data, _guarded(move, lambda: apply(params, data, state or {})))
+        return _agreed(move, data, _guarded(move, lambda: apply(params, data, state or {})))
     run = move.step.stage.run
     if run is None:
         raise StepError(move.step.name, "the stage has nothing to run")
-    return cast(Data, _guarded(move, lambda: run(params, data)))
+    return _agreed(move, data, _guarded(move, lambda: run(params, data)))
 
 
 def collect_move(move: Move, data: Any) -> Part:
@@ -47,7 +49,28 @@ def combine_move(move: Move, parts: Sequence[Part]) -> Any:
     whole = move.barrier or move.gather
     if whole is None:
         raise StepError(move.step.name, "the stage combines nothing")
-    return _guarded(move, lambda: whole.combine(move.step.params, parts))
+    made = _guarded(move, lambda: whole.combine(move.step.params, parts))
+    if whole.apply is None:
+        return _agreed(move, None, made)
+    if not isinstance(made, Mapping):
+        raise _fault(move, f"it combines to {type(made).__name__}, and named arrays are expected")
+    return made
+
+
+def _agreed(move: Move, taken: Any, made: Any) -> Data:
+    """Return what a step gave, once it is what its spec announced."""
+    for text in disagreements(move.spec_out, taken, made):
+        raise _fault(move, text)
+    return cast(Data, made)
+
+
+def _fault(move: Move, what: str, detail: str = "") -> StepError:
+    return StepError(
+        move.step.name,
+        f"the stage failed: {what}. This is a fault of stage {move.step.stage.name}, not of the "
+        "recording; its maintainer finds more in log.jsonl.",
+        detail,
+    )
 
 
 def _guarded(move: Move, work: Any) -> Any:
@@ -58,12 +81,10 @@ def _guarded(move: Move, work: Any) -> Any:
     except SignalError as error:
         raise StepError(move.step.name, str(error)) from error
     except Exception as error:  # a stage's own fault must fail this recording alone, by name
-        raise StepError(
-            move.step.name,
-            f"the stage failed: {type(error).__name__}: {error}. This is a fault of stage "
-            f"{move.step.stage.name}, not of the recording; tell whoever maintains it.",
-            traceback.format_exc(),
-        ) from error
+        last = traceback.extract_tb(error.__traceback__)[-1]
+        where = f"{Path(last.filename).name}:{last.lineno}"
+        what = f"{type(error).__name__}: {error} ({where})"
+        raise _fault(move, what, traceback.format_exc()) from error
 
 
 def starting_in(data: Data, bounds: tuple[Any, Any]) -> Data:
