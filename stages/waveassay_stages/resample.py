@@ -294,11 +294,7 @@ STAGE = Stage(
     spec=spec,
     run=run,
     context=context,
-    response=Response(
-        gain=response_gain,
-        mask=mask,
-        ratio=lambda params, given: ratio(params, given.rate_hz),
-    ),
+    response=Response(gain=response_gain, mask=mask),
     derive=derive,
     example={"rate": "128 Hz"},
     source="J. F. Kaiser, Nonrecursive digital filter design using the I0-sinh window function, "

@@ -270,7 +270,7 @@ def test_values_that_are_missing_without_a_reason_or_there_without_an_epoch() ->
 
     check = checks.check_spec_agrees_with_data
     caught(check, "says no reason", replace(HONEST_ROWS, run=silent))
-    caught(check, "where none is kept", replace(HONEST_ROWS, run=filled))
+    caught(check, "in rows that are not kept", replace(HONEST_ROWS, run=filled))
 
 
 def test_a_row_that_depends_on_another() -> None:

@@ -15,8 +15,8 @@ from typing import Any
 import numpy as np
 import pytest
 
-from waveassay.contract.digests import digest
-from waveassay.provenance.environment import Bundle, environment, environment_id, source_digest
+from waveassay.contract.digests import digest, source_digest
+from waveassay.provenance.environment import Bundle, environment, environment_id
 
 
 @pytest.fixture

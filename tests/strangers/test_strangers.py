@@ -5,6 +5,7 @@ They are found by entry point, as installed packages are; nothing about them is 
 
 import csv
 import os
+import shutil
 import subprocess
 import sys
 from pathlib import Path
@@ -141,3 +142,20 @@ def test_a_taken_name_stays_with_its_owner_and_the_claim_is_told() -> None:
     assert "filter.notch" in listed
     shown = waveassay("stages", "filter.notch", packages="claiming").stdout
     assert "waveassay" in shown.splitlines()[0]
+
+
+def test_a_stage_that_was_edited_is_never_answered_from_the_store(tmp_path: Path) -> None:
+    """Its author forgot to raise the version."""
+    shutil.copytree(HERE / "working", tmp_path / "edited")
+    (tmp_path / "recipe.yaml").write_text(RECIPE)
+    x = np.round(np.random.default_rng(2).uniform(-100, 100, 60 * 100), 1)
+    write_eeg(tmp_path / "recordings" / "a.edf", x, 100)
+    first = waveassay("run", tmp_path, packages=str(tmp_path / "edited"))
+    assert first.returncode == 0, first.stderr
+    module = tmp_path / "edited" / "acme_stages" / "range.py"
+    module.write_text(module.read_text().replace("np.ptp(", "2 * np.ptp("))
+    second = waveassay("run", tmp_path, packages=str(tmp_path / "edited"))
+    assert "finished before" not in second.stdout
+    old, new = sorted((tmp_path / "runs").glob("with-strangers-*"))
+    for one, other in zip(rows(old, "epochs/two"), rows(new, "epochs/two"), strict=True):
+        assert float(other["range"]) == 2 * float(one["range"])

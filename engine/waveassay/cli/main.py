@@ -64,11 +64,17 @@ def run_command(
 def check_command(
     recipe: Annotated[str, typer.Argument(help="A recipe: its path, or a shipped one's name.")],
     recordings: Recordings = None,
+    plan: Annotated[
+        bool,
+        typer.Option(
+            "--plan", help="Say which steps run as one frequency response, and why others do not."
+        ),
+    ] = False,
 ) -> None:
     """Check a recipe, alone or against recordings, before anything is computed."""
     from waveassay.cli.check import check
 
-    _leave(check(recipe, recordings or []))
+    _leave(check(recipe, recordings or [], plan=plan))
 
 
 @app.command("describe")

@@ -21,6 +21,7 @@ from typing import Any
 import numpy as np
 from pydantic import ValidationError
 
+from waveassay.contract.agreement import disagreements
 from waveassay.contract.checks_data import RATES_HZ, UNITS, Given, given, random_signal
 from waveassay.contract.checks_response import RESPONSE_TOLERANCE, prove_response
 from waveassay.contract.checks_running import (
@@ -34,11 +35,9 @@ from waveassay.contract.checks_running import (
     run_whole,
     take_rows,
 )
-from waveassay.contract.kinds import Epochs, Features, Signal, Spectra
+from waveassay.contract.kinds import Epochs, Signal
 from waveassay.contract.params import Params
 from waveassay.contract.spec import (
-    EpochsSpec,
-    FeaturesSpec,
     Findings,
     SignalSpec,
     SpectraSpec,
@@ -195,48 +194,8 @@ def check_spec_agrees_with_data(stage: Stage) -> None:
     params = example_params(stage)
     for case in cases(stage):
         spec, out = announced(stage, params, case.spec), run_whole(stage, params, case.data)
-        for what, said, found in _said_and_found(spec, out):
-            same = said == found
-            if isinstance(said, float) and isinstance(found, float):
-                same = bool(np.isclose(said, found, rtol=1e-9))
-            assert same, f"{stage.name}: its spec says {what} {said}, and {found} comes out"
-        if isinstance(out, Features):
-            _check_gaps(stage, out)
-
-
-def _said_and_found(spec: object, out: object) -> Iterator[tuple[str, object, object]]:
-    if isinstance(spec, SignalSpec):
-        assert isinstance(out, Signal), f"signals are announced, and {type(out).__name__} comes"
-        yield "name", spec.name, out.name
-        yield "unit", spec.unit, out.unit
-        yield "rate", spec.rate_hz, out.rate_hz
-    elif isinstance(spec, EpochsSpec):
-        assert isinstance(out, Epochs), f"epochs are announced, and {type(out).__name__} comes"
-        yield "length", spec.length_s, float(out.length / out.signal.rate_hz)
-        yield "unit", spec.signal.unit, out.signal.unit
-        yield "rate", spec.signal.rate_hz, out.signal.rate_hz
-    elif isinstance(spec, SpectraSpec):
-        assert isinstance(out, Spectra), f"spectra are announced, and {type(out).__name__} comes"
-        yield "name", spec.signal.name, out.signal
-        yield "unit", spec.signal.unit, out.unit
-        yield "resolution", spec.resolution_hz, out.resolution_hz
-        yield "spacing", spec.bin_hz, out.bin_hz
-        yield "highest frequency", spec.top_hz, float(out.freq_hz[-1])
-        yield "densities", (len(out.rows), out.freq_hz.size), out.density.shape
-    elif isinstance(spec, FeaturesSpec):
-        assert isinstance(out, Features), f"features are announced, and {type(out).__name__} comes"
-        yield "name", spec.signal.name, out.signal
-        yield "columns", [column.part for column in spec.columns], list(out.columns)
-        sizes = {values.size for values in out.columns.values()} | {len(out.missing)}
-        yield "one value a row:", {len(out.rows)}, sizes
-
-
-def _check_gaps(stage: Stage, out: Features) -> None:
-    for part, values in out.columns.items():
-        where = f"{stage.name}: column '{part}'"
-        assert np.all(np.isnan(values[~out.rows.kept])), f"{where} has values where none is kept"
-        silent = [i for i in np.flatnonzero(out.rows.kept & np.isnan(values)) if not out.missing[i]]
-        assert not silent, f"{where} lacks a value in kept row {silent[:1]}, and says no reason"
+        for text in disagreements(spec, case.data, out):
+            raise AssertionError(f"{stage.name}: {text}")
 
 
 def check_input_is_not_written(stage: Stage) -> None:

@@ -12,6 +12,7 @@ import math
 from collections.abc import Mapping
 from enum import Enum
 from fractions import Fraction
+from pathlib import Path
 from typing import Any
 
 
@@ -36,6 +37,26 @@ def canonical_json(value: object) -> bytes:
 def digest(value: object) -> str:
     """Return the SHA-256 of a value's canonical form, in hexadecimal."""
     return hashlib.sha256(canonical_json(value)).hexdigest()
+
+
+def source_digest(folder: Path, pattern: str = "*") -> str:
+    """Return one SHA-256 over the files below a folder that match: their names and their bytes.
+
+    Compiled Python and hidden files are left out; data and extensions that a package carries are
+    as much part of its code as its modules.
+    """
+    files = sorted(path.relative_to(folder) for path in folder.rglob(pattern) if path.is_file())
+    kept = [file for file in files if not any(map(_is_left_out, file.parts))]
+    return digest([(file.as_posix(), _sha256(folder / file)) for file in kept])
+
+
+def _is_left_out(part: str) -> bool:
+    return part == "__pycache__" or part.startswith(".")
+
+
+def _sha256(path: Path) -> str:
+    with path.open("rb") as file:
+        return hashlib.file_digest(file, "sha256").hexdigest()
 
 
 def _plain(value: object) -> Any:

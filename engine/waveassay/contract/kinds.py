@@ -9,6 +9,7 @@ from dataclasses import dataclass, field, replace
 from enum import StrEnum
 from fractions import Fraction
 from math import ceil
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -29,6 +30,11 @@ class Kind(StrEnum):
     AVERAGE_FEATURES = "average features"  # features of averaged spectra
     TABLE = "table"
     FIGURE = "figure"
+
+
+def _freeze(*arrays: NDArray[Any]) -> None:
+    for array in arrays:
+        array.flags.writeable = False
 
 
 @dataclass(frozen=True, order=True)
@@ -105,7 +111,7 @@ class Signal:
     conditions: tuple[Condition, ...] = ()
 
     def __post_init__(self) -> None:
-        self.x.flags.writeable = False
+        _freeze(self.x)
 
     @property
     def stop_s(self) -> Fraction:
@@ -123,7 +129,15 @@ class Signal:
     def with_samples(
         self, x: Floats, *, rate_hz: Fraction | None = None, unit: str | None = None
     ) -> "Signal":
-        """Return the signal with other samples from the same start."""
+        """Return the signal with other samples from the same start.
+
+        Raises
+        ------
+        TypeError
+            When the samples are complex.
+        """
+        if np.iscomplexobj(x):
+            raise TypeError("samples are real numbers; take the real part or the magnitude")
         return replace(
             self,
             x=np.asarray(x, np.float64),
@@ -190,6 +204,9 @@ class Rows:
     reason: tuple[str, ...]
     epochs: Ints
 
+    def __post_init__(self) -> None:
+        _freeze(self.start_s, self.duration_s, self.kept, self.epochs)
+
     def __len__(self) -> int:
         return len(self.condition)
 
@@ -211,6 +228,9 @@ class Epochs:
     condition: tuple[str, ...]
     kept: Bools
     reason: tuple[str, ...]
+
+    def __post_init__(self) -> None:
+        _freeze(self.first, self.kept)
 
     def __len__(self) -> int:
         return int(self.first.size)
@@ -278,7 +298,7 @@ class Spectra:
     dof: Floats
 
     def __post_init__(self) -> None:
-        self.density.flags.writeable = False
+        _freeze(self.freq_hz, self.density, self.dof)
 
     @property
     def bin_hz(self) -> float:
@@ -301,6 +321,9 @@ class Features:
     rows: Rows
     columns: Mapping[str, Floats]
     missing: tuple[str, ...]
+
+    def __post_init__(self) -> None:
+        _freeze(*self.columns.values())
 
 
 @dataclass(frozen=True)

@@ -2,18 +2,12 @@
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from fractions import Fraction
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from waveassay.contract.kinds import Floats, Signal
-
-
-def unchanged_rate(params: Any, given: Any) -> Fraction:
-    """Return 1: as many samples come out as go in."""
-    return Fraction(1)
 
 
 @dataclass(frozen=True)
@@ -29,20 +23,18 @@ class Response:
     gain : ``gain(params, given, freq_hz)``: what a sine of each frequency is multiplied by, real
         for a filter without delay, complex otherwise (:math:`\sum_n h[n] e^{-2 \pi i f n / r}`).
         ``given`` is the spec of the input, with its rate. ``freq_hz``, shape (n,), rises in equal
-        steps from 0 to at most half of the rate r at which the filter stands: the input's; for a
-        change of rate by U / D in lowest terms, U times the input's. There the input stands with
-        U - 1 zeros after each sample, so its spectrum repeats every ``given.rate_hz``; it is
-        multiplied by ``gain``, every D-th sample is kept and multiplied by U. So a slow signal
-        keeps its size where the gain at 0 Hz is 1, and no delay means that the first samples of
-        input and output lie at the same time.
+        steps from 0 to half of the rate r at which the filter stands: the input's; where the
+        stage's spec changes the rate by U / D in lowest terms, U times the input's. There the
+        input stands with U - 1 zeros after each sample, so that its spectrum repeats every
+        ``given.rate_hz``; it is multiplied by ``gain``, every D-th sample is kept, and multiplied
+        by U. So a slow signal keeps its size where the gain at 0 Hz is 1, and without delay the
+        first samples of input and output lie at the same time.
     mask : ``mask(params, signal)``: the signal with its exclusions as `run` leaves them, its
         samples and rate as they were. It may look at no sample.
-    ratio : ``ratio(params, given)``: rate of the output over that of the input, exact.
     """
 
     gain: Callable[[Any, Any, Floats], NDArray[Any]]
     mask: Callable[[Any, Signal], Signal]
-    ratio: Callable[[Any, Any], Fraction] = unchanged_rate
 
 
 def kernel_gain(kernel: Floats, centre: int, freq_hz: Floats, rate_hz: float) -> NDArray[Any]:

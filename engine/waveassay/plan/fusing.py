@@ -10,7 +10,7 @@ from dataclasses import dataclass
 from fractions import Fraction
 from math import ceil
 
-from waveassay.contract import SignalSpec
+from waveassay.contract import SignalSpec, Spec
 from waveassay.plan.blocks import BlockGrid
 from waveassay.plan.program import Level, Move, Program
 
@@ -56,7 +56,7 @@ class Unit:
 
 def units_of(program: Program, pass_no: int) -> tuple[Unit, ...]:
     """Return how a pass's steps on samples are run, in order."""
-    step_s = program.grid_step_s
+    step_s = _step_s(program)
     units = []
     for moves in _runs(program, pass_no):
         sides = [_sides(move, step_s) for move in moves]
@@ -70,7 +70,14 @@ def units_of(program: Program, pass_no: int) -> tuple[Unit, ...]:
     return tuple(units)
 
 
+def _step_s(program: Program) -> Fraction:
+    known = any(_rate_hz(move.spec_out) is not None for move in program.moves.values())
+    return program.grid_step_s if known else Fraction(1)
+
+
 def _sides(move: Move, step_s: Fraction) -> tuple[int, int]:
+    if _rate_hz(move.spec_in) is None:
+        return 0, 0  # only the recipe is known, and nothing is going to be run
     reach = move.reach()
     return ceil(reach.before_s / step_s), ceil(reach.after_s / step_s)
 
@@ -127,13 +134,13 @@ def why_not(moves: Sequence[Move], reach: int, step_s: Fraction) -> str | None:
     reach : their summed reach to both sides, in steps of the grid.
     """
     if not _responds(moves[0]):
-        return NO_RESPONSE
-    changing = sum(ratio_of(move) != 1 for move in moves if _rate_hz(move) is not None)
-    if len(moves) == 1 and not changing and _rate_hz(moves[0]) is not None:
+        return NO_RESPONSE  # such a step stands alone
+    changing = sum(_rate_hz(move.spec_in) != _rate_hz(move.spec_out) for move in moves)
+    if len(moves) == 1 and not changing:
         return "only one step"
     length_s = BlockGrid(step_s).reads(reach) * step_s
     for move in moves:
-        rate_hz = _rate_hz(move)
+        rate_hz = _rate_hz(move.spec_in)
         if rate_hz is None:
             return None  # the rest is known once there is a recording
         samples = length_s * rate_hz
@@ -149,15 +156,16 @@ def why_not(moves: Sequence[Move], reach: int, step_s: Fraction) -> str | None:
     return None
 
 
-def _rate_hz(move: Move) -> Fraction | None:
-    return move.spec_in.rate_hz if isinstance(move.spec_in, SignalSpec) else None
-
-
 def ratio_of(move: Move) -> Fraction:
-    """Return the rate of what a responding step gives over that of what it takes."""
-    response = move.step.stage.response
-    assert response is not None, f"{move.step.name} has a response"
-    return response.ratio(move.step.params, move.spec_in)
+    """Return the rate that a step on samples announces over that of what it takes."""
+    before, after = _rate_hz(move.spec_in), _rate_hz(move.spec_out)
+    assert before is not None, "rates are known once there is a recording"
+    assert after is not None, "likewise"
+    return after / before
+
+
+def _rate_hz(spec: Spec) -> Fraction | None:
+    return spec.rate_hz if isinstance(spec, SignalSpec) else None
 
 
 @dataclass(frozen=True)
@@ -178,36 +186,40 @@ def explained(program: Program) -> tuple[Told, ...]:
     return tuple(told)
 
 
-def _told(program: Program, unit: Unit, units: Sequence[Unit]) -> Iterator[Told]:
+def _told(program: Program, unit: Unit, units: Iterable[Unit]) -> Iterator[Told]:
     names = [move.step.name for move in unit.moves]
+    reasons = [] if _responds(unit.moves[0]) else [NO_RESPONSE]
     if not unit.fused:
-        (move,) = unit.moves
-        yield Told(names[0], f"by its own function: {_why_not(program, move)}")
-        return
-    ends = "; ".join(dict.fromkeys(_ends(program, unit, units)))
-    if len(names) > 1:
-        text = f"fused: one response of {' + '.join(names)}"
+        text, reasons = "by its own function", [*reasons, *_why_alone(program, unit.moves[0])]
+    elif len(names) > 1:
+        text = f"fused, as one response: {' + '.join(names)}"
     else:
         text = "by its response, alone"
+    if _responds(unit.moves[0]):
+        reasons.extend(_ends(program, unit, units))
+    if reasons:
+        text += f" ({'; '.join(dict.fromkeys(reasons))})"
     for name in names:
-        yield Told(name, f"{text} ({ends})" if ends else text)
+        yield Told(name, text)
 
 
-def _why_not(program: Program, move: Move) -> str:
-    if move.barrier is not None:
-        return "needs the whole recording"
-    step_s = program.grid_step_s
+def _why_alone(program: Program, move: Move) -> Iterator[str]:
+    step_s = _step_s(program)
     for moves in _runs(program, move.pass_no):
         if move in moves:
             reach = sum(sum(_sides(one, step_s)) for one in moves)
-            return why_not(moves, reach, step_s) or NO_RESPONSE
-    return NO_RESPONSE
+            reason = why_not(moves, reach, step_s)
+            if reason is not None:
+                yield reason
 
 
 def _ends(program: Program, unit: Unit, units: Iterable[Unit]) -> Iterator[str]:
-    """Yield why a group does not go on to its neighbours."""
+    """Yield why a step or a group is not one with its neighbours."""
     for other in units:
+        reason = None
         if other.source == unit.index:
-            yield run_ends(program, unit.moves[-1], other.moves[0]) or "too long together"
+            reason = run_ends(program, unit.moves[-1], other.moves[0])
         elif other.index == unit.source:
-            yield run_ends(program, other.moves[-1], unit.moves[0]) or "too long together"
+            reason = run_ends(program, other.moves[-1], unit.moves[0])
+        if reason is not None:
+            yield reason

@@ -6,11 +6,21 @@ Which tasks share a job changes no byte of what they make, so cores may be count
 from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 from itertools import groupby
+from typing import NamedTuple
 
 from waveassay.contract.digests import digest
 from waveassay.plan.tasks import Task
 
-SHORTEST_S, LONGEST_S = 1.0, 60.0
+
+class JobLength(NamedTuple):
+    """How long jobs should be, in predicted CPU seconds."""
+
+    shortest_s: float
+    longest_s: float
+
+
+#: A worker that is already running starts a job in milliseconds; a cluster takes seconds at best.
+LOCAL, CLUSTER = JobLength(1.0, 60.0), JobLength(10.0, 300.0)
 
 
 @dataclass(frozen=True)
@@ -41,17 +51,20 @@ def missing_tasks(tasks: Sequence[Task], is_stored: Callable[[str], bool]) -> li
     return todo[::-1]
 
 
-def group_into_jobs(by_recording: Iterable[Sequence[Task]], workers: int) -> tuple[Job, ...]:
+def group_into_jobs(
+    by_recording: Iterable[Sequence[Task]], workers: int, length: JobLength = LOCAL
+) -> tuple[Job, ...]:
     """Group tasks into jobs: short recordings in batches, long ones cut up.
 
     Parameters
     ----------
     by_recording : the tasks to do of each recording, each after those that it needs.
     workers : processes to keep busy.
+    length : between what lengths jobs should lie.
     """
     todo = [list(tasks) for tasks in by_recording if tasks]
     total_s = sum(task.cost_s for tasks in todo for task in tasks)
-    target_s = min(LONGEST_S, max(SHORTEST_S, total_s / (4 * workers)))
+    target_s = min(length.longest_s, max(length.shortest_s, total_s / (4 * workers)))
     groups: list[list[Task]] = []
     batch: list[Task] = []
     for tasks in todo:

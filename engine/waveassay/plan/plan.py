@@ -8,7 +8,8 @@ from waveassay.contract.digests import digest
 from waveassay.plan.columns import FeatureColumn, columns_by_chain
 from waveassay.plan.passage import Passage, passages
 from waveassay.plan.recordings import Found
-from waveassay.plan.tasks import Task, numerics, tasks_of
+from waveassay.plan.sources import engine, stage_source
+from waveassay.plan.tasks import Task, tasks_of
 from waveassay.recipe.model import Recipe
 from waveassay.recording import Facts
 
@@ -43,13 +44,13 @@ class Plan:
 
 def run_digest(recipe: Recipe, sha256_by_name: dict[str, str]) -> str:
     """Return what two runs share when the second has nothing to compute."""
-    stages = sorted({(s.stage.name, s.stage.version) for _, _, s in recipe.steps()})
+    stages = {(s.stage.name, s.stage.version, stage_source(s.stage)) for _, _, s in recipe.steps()}
     return digest(
         {
             "recipe": recipe.text,
-            "stages": [list(stage) for stage in stages],
+            "stages": sorted(stages),
             "recordings": sha256_by_name,
-            "numerics": numerics(),
+            "engine": engine(),
         }
     )
 

@@ -12,8 +12,6 @@ from bisect import bisect_left, bisect_right
 from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, field
 from fractions import Fraction
-from functools import lru_cache
-from importlib.metadata import version
 from typing import Any, Literal
 
 from waveassay.contract.digests import digest
@@ -21,6 +19,7 @@ from waveassay.plan.blocks import BLOCK_S, MARGIN_S
 from waveassay.plan.fusing import FORM
 from waveassay.plan.passage import Lane, Passage
 from waveassay.plan.program import Level, Move
+from waveassay.plan.sources import engine, stage_source
 from waveassay.plan.stretches import Stretch
 
 Action = Literal["prepare", "rows", "combine", "finish"]
@@ -46,12 +45,6 @@ class Task:
     key: str
     needs: tuple[str, ...]
     cost_s: float
-
-
-@lru_cache(maxsize=1)
-def numerics() -> dict[str, str]:
-    """Return the versions that can change a number."""
-    return {name: version(name) for name in ("waveassay", "numpy", "scipy")}
 
 
 @dataclass
@@ -171,7 +164,7 @@ class _Planner:
             {
                 "action": action,
                 "pass": pass_no,
-                "numerics": numerics(),
+                "engine": engine(),
                 "precision": "double",
                 "sha256": self.passage.sha256,
                 "needs": list(unique),
@@ -292,6 +285,7 @@ def _step(move: Move, *, named: bool = False) -> dict[str, Any]:
         "source": move.source,
         "stage": move.step.stage.name,
         "version": move.step.stage.version,
+        "code": stage_source(move.step.stage),
         "params": move.step.params.model_dump(mode="json"),
     }
     if named:

@@ -16,8 +16,7 @@ from pathlib import Path
 from typing import Any
 
 import waveassay
-from waveassay.contract.digests import digest
-from waveassay.provenance.files import sha256_of
+from waveassay.contract.digests import digest, source_digest
 
 # What can change the last bits of a number, or how much of the machine is used.
 _NUMERIC_VARIABLES = (
@@ -64,21 +63,6 @@ class Bundle:
     name: str
     version: str
     folder: Path
-
-
-def source_digest(folder: Path, pattern: str = "*") -> str:
-    """Return one SHA-256 over the files below a folder that match: their names and their bytes.
-
-    Compiled Python and hidden files are left out; data and extensions that a package carries are
-    as much part of its code as its modules.
-    """
-    files = sorted(path.relative_to(folder) for path in folder.rglob(pattern) if path.is_file())
-    kept = [file for file in files if not any(map(_is_left_out, file.parts))]
-    return digest([(file.as_posix(), sha256_of(folder / file)) for file in kept])
-
-
-def _is_left_out(part: str) -> bool:
-    return part == "__pycache__" or part.startswith(".")
 
 
 def environment(bundles: Iterable[Bundle] = ()) -> dict[str, Any]:

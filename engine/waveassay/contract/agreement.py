@@ -1,0 +1,88 @@
+"""Whether what a step gives is what its spec announced."""
+
+from collections.abc import Iterator
+from math import isclose
+
+import numpy as np
+
+from waveassay.contract.kinds import Epochs, Features, Signal, Spectra
+from waveassay.contract.spec import EpochsSpec, FeaturesSpec, SignalSpec, SpectraSpec
+
+_ANNOUNCED: dict[type, type] = {
+    SignalSpec: Signal,
+    EpochsSpec: Epochs,
+    SpectraSpec: Spectra,
+    FeaturesSpec: Features,
+}
+
+
+def disagreements(spec: object, taken: object, out: object) -> Iterator[str]:
+    """Yield what does not agree between a step's spec and its output; nothing for an export.
+
+    Parameters
+    ----------
+    spec : what was announced.
+    taken : what the step was given.
+    out : what it gave.
+    """
+    kind = _ANNOUNCED.get(type(spec))
+    if kind is None:
+        return
+    if not isinstance(out, kind):
+        yield f"its spec says {kind.__name__}, and {type(out).__name__} comes out"
+        return
+    for what, said, found in _said_and_found(spec, out):
+        same = said == found
+        if isinstance(said, float) and isinstance(found, float):
+            same = isclose(said, found, rel_tol=1e-9)
+        if not same:
+            yield f"its spec says {what} {said}, and {found} comes out"
+    if isinstance(out, Signal) and isinstance(taken, Signal):
+        yield from _misplaced(taken, out)
+    if isinstance(out, Features):
+        yield from _gaps(out)
+
+
+def _said_and_found(spec: object, out: object) -> Iterator[tuple[str, object, object]]:
+    if isinstance(spec, SignalSpec) and isinstance(out, Signal):
+        yield "name", spec.name, out.name
+        yield "unit", spec.unit, out.unit
+        yield "rate", spec.rate_hz, out.rate_hz
+    elif isinstance(spec, EpochsSpec) and isinstance(out, Epochs):
+        yield "length", spec.length_s, float(out.length / out.signal.rate_hz)
+        yield "unit", spec.signal.unit, out.signal.unit
+        yield "rate", spec.signal.rate_hz, out.signal.rate_hz
+    elif isinstance(spec, SpectraSpec) and isinstance(out, Spectra):
+        yield "name", spec.signal.name, out.signal
+        yield "unit", spec.signal.unit, out.unit
+        yield "resolution", spec.resolution_hz, out.resolution_hz
+        yield "spacing", spec.bin_hz, out.bin_hz
+        yield "highest frequency", spec.top_hz, float(out.freq_hz[-1])
+        yield "densities", (len(out.rows), out.freq_hz.size), out.density.shape
+    elif isinstance(spec, FeaturesSpec) and isinstance(out, Features):
+        yield "name", spec.signal.name, out.signal
+        yield "columns", [column.part for column in spec.columns], list(out.columns)
+        sizes = {values.size for values in out.columns.values()} | {len(out.missing)}
+        yield "one value a row:", {len(out.rows)}, sizes
+
+
+def _misplaced(taken: Signal, out: Signal) -> Iterator[str]:
+    if out.start_s != taken.start_s:
+        yield f"the signal starts at {taken.start_s} s, and {out.start_s} s comes out"
+    count = taken.x.size * out.rate_hz / taken.rate_hz
+    if abs(out.x.size - count) >= 1:
+        yield (
+            f"{taken.x.size} samples at {float(taken.rate_hz):g} Hz are {float(count):g} at "
+            f"{float(out.rate_hz):g} Hz, and {out.x.size} come out"
+        )
+
+
+def _gaps(out: Features) -> Iterator[str]:
+    for part, values in out.columns.items():
+        if values.size != len(out.rows) or len(out.missing) != len(out.rows):
+            continue
+        if not np.all(np.isnan(values[~out.rows.kept])):
+            yield f"column '{part}' has values in rows that are not kept"
+        silent = [i for i in np.flatnonzero(out.rows.kept & np.isnan(values)) if not out.missing[i]]
+        if silent:
+            yield f"column '{part}' lacks a value in kept row {silent[0]}, and says no reason"
