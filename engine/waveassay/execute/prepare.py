@@ -42,13 +42,13 @@ def prepare(
         bounds = lane.bounds_s(stretch)
         if pass_no < len(lane.forms):
             piece = passage.pieces[stretch.piece]
-            _run_form(lane.forms[pass_no], lane_no, values, states, piece, bounds)
+            run_form(lane.forms[pass_no], lane_no, values, states, piece, bounds)
         for index in lane.program.kept_signals(pass_no):
             prepared[lane_no, index] = values[index].cut(*bounds)
     save_prepared(folder, prepared, source.outside)
 
 
-def _run_form(
+def run_form(
     form: Form,
     lane_no: int,
     values: dict[int, Signal],
