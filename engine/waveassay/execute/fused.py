@@ -205,10 +205,16 @@ def _reach(run: Sequence[Move], grid: BlockGrid) -> tuple[int, int]:
     after = sum(ceil(reach.after_s / grid.step_s) for reach in reaches)
     if any(ratio_of(move) != 1 for move in run):
         return before, after
-    in_step = _samples(run[0], grid)
+    in_step, rate_hz = _samples(run[0], grid), _rate_hz(run[0])
     length = fast_length(2 * (before + after + 1), in_step) * in_step
-    past, future = support(gain_of(run, length, _rate_hz(run[0])), length, REACH_TOLERANCE)
-    return min(before, -(-past // in_step)), min(after, -(-future // in_step))
+    gain, longest = gain_of([], length, rate_hz), (0, 0)
+    # What a step does at an end of a piece is felt through it and those that follow, which may be
+    # longer than through all of them.
+    for move in reversed(run):
+        gain = gain * gain_of([move], length, rate_hz)
+        past, future = support(gain, length, REACH_TOLERANCE)
+        longest = max(longest[0], past), max(longest[1], future)
+    return min(before, -(-longest[0] // in_step)), min(after, -(-longest[1] // in_step))
 
 
 def _given(move: Move) -> SignalSpec:
