@@ -2,7 +2,7 @@
 
 import json
 from collections import defaultdict
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -134,9 +134,12 @@ def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
         )  # fmt: skip
     facts: dict[str, Any] = {
         "warnings": [
-            f"{passage.lanes[lane].label}: some samples lie outside the digital limits of the "
-            "header; they are used as they are"
-            for lane in sorted(gathered.outside)
+            *(
+                f"{passage.lanes[lane].label}: some samples lie outside the digital limits of the "
+                "header; they are used as they are"
+                for lane in sorted(gathered.outside)
+            ),
+            *_without_epochs(passage, blocks),
         ],
         "excluded": excluded,
         "figures": figures,
@@ -164,6 +167,24 @@ def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
     if averages:
         write_parquet(folder / "spectra.parquet", spectra_table(passage.recording, averages))
     (folder / FACTS_FILE).write_text(json.dumps(facts, sort_keys=True))
+
+
+def _without_epochs(passage: Passage, blocks: Sequence[Block]) -> Iterator[str]:
+    """Yield a warning for each condition of a signal that gave nothing."""
+    for block in blocks:
+        kept = dict.fromkeys((c.name for c in passage.conditions), 0)
+        rows = dict(kept)
+        for name, is_kept in zip(block.rows.condition, block.rows.kept, strict=True):
+            rows[name] += 1
+            kept[name] += int(is_kept)
+        for name, count in kept.items():
+            if count == 0:
+                why = (
+                    "no epoch fits in it"
+                    if rows[name] == 0
+                    else f"none of {rows[name]} epochs is kept"
+                )
+                yield f"{passage.chain.name}: condition {name} of {block.signal}: {why}"
 
 
 def _recording_values(lane_no: int, lane: Lane, gathered: Gathered) -> dict[int, Data]:
@@ -217,7 +238,7 @@ def _save_figures(lane: Lane, values: Mapping[int, Data], folder: Path) -> list[
                     "file": name,
                     "signal": data.signal,
                     "show": data.show,
-                    "step": step.alias or step.name,
+                    "step": step.alias or f"{data.show}{step.name.partition('#')[2]}",
                     "caption": data.caption,
                 }
             )
