@@ -7,6 +7,8 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+
 from waveassay.contract import (
     Data,
     Exclusion,
@@ -117,7 +119,7 @@ def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
     figures: list[dict[str, str]] = []
     units: dict[tuple[str, str], str] = {}
     for lane_no, lane in enumerate(passage.lanes):
-        values = _recording_values(lane_no, lane, gathered)
+        values = _recording_values(passage.recording, lane_no, lane, gathered)
         blocks += _epoch_blocks(lane_no, lane, gathered)
         average_blocks += _average_blocks(lane, values)
         figures += _save_figures(lane, values, folder)
@@ -187,7 +189,9 @@ def _without_epochs(passage: Passage, blocks: Sequence[Block]) -> Iterator[str]:
                 yield f"{passage.chain.name}: condition {name} of {block.signal}: {why}"
 
 
-def _recording_values(lane_no: int, lane: Lane, gathered: Gathered) -> dict[int, Data]:
+def _recording_values(
+    recording: str, lane_no: int, lane: Lane, gathered: Gathered
+) -> dict[int, Data]:
     """Run the steps that need the whole, and those that follow them."""
     values: dict[int, Data] = {}
     for move in lane.program.moves.values():
@@ -201,6 +205,8 @@ def _recording_values(lane_no: int, lane: Lane, gathered: Gathered) -> dict[int,
             parts = [collect_move(move, values[move.source])]
         else:
             parts = gathered.parts(f"{lane_no}.{move.index}.part.")
+        if move.step.given is Kind.FIGURE:
+            parts = [{**part, "recording": np.array(recording)} for part in parts]
         if parts:
             values[move.index] = combine_move(move, parts)
     return values
@@ -227,9 +233,10 @@ def _average_blocks(lane: Lane, values: Mapping[int, Data]) -> list[Block]:
 
 
 def _save_figures(lane: Lane, values: Mapping[int, Data], folder: Path) -> list[dict[str, str]]:
-    saved = []
+    saved: list[dict[str, str]] = []
     for index, data in values.items():
         if isinstance(data, Figure):
+            alike = sum(known["show"] == data.show for known in saved)
             name = f"figure-{lane.channel}-{index}.png"
             (folder / name).write_bytes(data.png)
             step = lane.program.moves[index].step
@@ -238,7 +245,7 @@ def _save_figures(lane: Lane, values: Mapping[int, Data], folder: Path) -> list[
                     "file": name,
                     "signal": data.signal,
                     "show": data.show,
-                    "step": step.alias or f"{data.show}{step.name.partition('#')[2]}",
+                    "name": step.alias or (f"{data.show}-{alike + 1}" if alike else data.show),
                     "caption": data.caption,
                 }
             )

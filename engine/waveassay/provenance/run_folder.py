@@ -223,7 +223,7 @@ def _copy_figures(folder: Path, results: Sequence[Result]) -> None:
         for output in result.outputs:
             for figure in output.facts["figures"]:
                 # The whole name stands in the file's: figures are sent on one by one.
-                file = f"{Path(result.recording).name}.{figure['signal']}.{figure['step']}.png"
+                file = f"{Path(result.recording).name}.{figure['signal']}.{figure['name']}.png"
                 safe = "".join(c if c.isalnum() or c in "-_." else "_" for c in file)
                 path = Path("figures", output.chain, result.recording).with_name(safe)
                 (folder / path).parent.mkdir(parents=True, exist_ok=True)
