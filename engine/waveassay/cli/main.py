@@ -44,11 +44,31 @@ def run_command(
         typer.Option(help="Folder that gets runs/ and store/. Needed unless WORKDIR is given."),
     ] = None,
     workers: Annotated[
-        int | None, typer.Option(min=1, help="Processes at work. Default: one a core.")
+        int | None,
+        typer.Option(
+            min=1,
+            help="Processes at work. Default: one a core. With --cluster: jobs at once.",
+        ),
     ] = None,
     store: Annotated[
         Path | None, typer.Option(help="Folder of stored results. Default: store/ beside runs/.")
     ] = None,
+    cluster: Annotated[
+        Path | None,
+        typer.Option(
+            metavar="DIR",
+            help="Run on a cluster: a Snakemake profile (a folder with config.yaml), or 'slurm', "
+            "which ships. Recordings and results must be on a disk that every node sees.",
+        ),
+    ] = None,
+    cluster_wait: Annotated[
+        float,
+        typer.Option(
+            metavar="HOURS",
+            min=0.01,
+            help="Stop when no job has begun or ended on the cluster for so many hours.",
+        ),
+    ] = 24.0,
 ) -> None:
     """Run a recipe over recordings: tables, figures and provenance in a run folder.
 
@@ -57,7 +77,7 @@ def run_command(
     """
     from waveassay.cli.run import run
 
-    _leave(run(target, recordings or [], into, workers, store))
+    _leave(run(target, recordings or [], into, workers, store, cluster, cluster_wait))
 
 
 @app.command("check")

@@ -17,6 +17,7 @@ from waveassay.contract.kinds import (
     Signal,
     Spectra,
     Table,
+    exclusions_of,
     merged,
 )
 from waveassay.contract.params import Params
@@ -96,6 +97,7 @@ __all__ = [
     "Whole",
     "check_band",
     "exact",
+    "exclusions_of",
     "features_of",
     "merged",
     "number_text",

@@ -91,6 +91,9 @@ def rule(axis: "Axis", name: str, most: int = 8) -> None:
     axis.set_major_formatter(formatter)
 
 
+_BETWEEN = 30  # pixels between a title and its note
+
+
 def unit_label(unit: str) -> str:
     """Return a unit as it is printed on an axis: ``uV`` with a micro sign."""
     return "µ" + unit[1:] if unit.startswith("u") and len(unit) > 1 else unit
@@ -126,11 +129,14 @@ def fitted(text: str, room: float, size: float) -> str:
 
 def title(figure: "Figure", name: str, note: str, right: int = WIDTH) -> None:
     """Write what the picture is of on top, and a note that ends at ``right``."""
-    room = right - LEFT - 0.8 * width_of(note, NOTE)  # it is our own: small letters
     height = (TOP + 20) / HEIGHT
-    shown = fitted(name, room / 1.1, TITLE)  # it is bold
-    figure.text(LEFT / WIDTH, height, shown, fontsize=TITLE, fontweight="bold")
-    figure.text(right / WIDTH, height, note, fontsize=NOTE, color=QUIET, ha="right")
+    beside = figure.text(right / WIDTH, height, note, fontsize=NOTE, color=QUIET, ha="right")
+    shown = figure.text(LEFT / WIDTH, height, name, fontsize=TITLE, fontweight="bold")
+    limit = beside.get_window_extent().x0 - _BETWEEN
+    length = len(name)
+    while shown.get_window_extent().x1 > limit and length > 4:
+        length -= 1
+        shown.set_text(shortened(name, length))
 
 
 def message(name: str, what: str, text: Sequence[str]) -> bytes:
