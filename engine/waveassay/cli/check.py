@@ -12,6 +12,9 @@ from waveassay.recipe.model import Recipe
 
 def check(argument: str, arguments: Sequence[Path]) -> int:
     """Check a recipe, and whether recordings would go through it; return the exit code."""
+    place = Path(argument)
+    if (place / "recipe.yaml").exists() and not arguments:
+        argument, arguments = str(place / "recipe.yaml"), [place / "recordings"]
     recipe, warnings = load_recipe(argument)
     screen = console()
     for warning in warnings:

@@ -28,6 +28,26 @@ _RECORDINGS = typer.Argument(
 Recordings = Annotated[list[Path] | None, _RECORDINGS]
 
 
+def _print_version(asked: bool) -> None:
+    if asked:
+        from importlib.metadata import version
+
+        typer.echo(f"waveassay {version('waveassay')}")
+        raise typer.Exit
+
+
+@app.callback()
+def _options(
+    version: Annotated[
+        bool,
+        typer.Option(
+            "--version", callback=_print_version, is_eager=True, help="Show the version and exit."
+        ),
+    ] = False,
+) -> None:
+    """Take what stands before the command."""
+
+
 @app.command("run")
 def run_command(
     target: Annotated[
@@ -82,7 +102,13 @@ def run_command(
 
 @app.command("check")
 def check_command(
-    recipe: Annotated[str, typer.Argument(help="A recipe: its path, or a shipped one's name.")],
+    recipe: Annotated[
+        str,
+        typer.Argument(
+            metavar="RECIPE|WORKDIR",
+            help="A recipe: its path, or a shipped one's name. Or a working directory.",
+        ),
+    ],
     recordings: Recordings = None,
 ) -> None:
     """Check a recipe, alone or against recordings, before anything is computed."""
