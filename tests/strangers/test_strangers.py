@@ -153,7 +153,7 @@ def test_a_recipe_that_uses_a_contested_name_is_told_whose_stage_it_has(made: Pa
     assert told.returncode == 0, told.stderr
     said = told.stderr + told.stdout
     assert "contested.yaml:10:7: W404 one.filter.notch: this is the stage of waveassay" in said
-    assert "clash 2.0 (clash_stages.notch) claims the name" in said
+    assert "its name is also claimed by clash 2.0 (clash_stages.notch)" in said
     assert "W404" not in (alone := waveassay("check", recipe, packages="working")).stderr
     assert "W404" not in alone.stdout
 

@@ -122,7 +122,7 @@ class StepReader:
             params = self._params(stage, body, place, where)
             if others := ", ".join(self.registry.claims.get(stage_name, ())):
                 owner = self.registry.owners.get(stage_name, "unknown")
-                message = f"this is the stage of {owner}; {others} claims the name, and is not used"
+                message = f"this is the stage of {owner}; its name is also claimed by {others}"
                 report.warn(place, "W404", message, where)
         alias = self._text(keys, "as", where)
         keep = keys["keep"][1] if "keep" in keys else None
