@@ -51,17 +51,52 @@ def test_developers_names_every_room_of_the_house() -> None:
             assert f"{room}/" in DEVELOPERS, room
 
 
-def test_the_stage_of_the_guide_works_as_printed(tmp_path: Path) -> None:
-    """The walk of DEVELOPERS.md: its stage and its test, copied out and run."""
+ALL_CHECKS = """\
+import importlib
+import pytest
+from waveassay.contract.checks import CHECKS
+
+@pytest.mark.parametrize("check", CHECKS, ids=lambda check: check.__name__)
+@pytest.mark.parametrize("module", {modules})
+def test_stage(module, check):
+    check(importlib.import_module(f"my_stages.{{module}}").STAGE)
+"""
+
+ALL_STAGES = """\
+recipe: all
+edition: 1
+title: All stages of the guide
+purpose: To see that they go together
+signals: {eeg: {labels: [E], unit: uV}}
+chains:
+  one:
+    - load: {signals: [eeg]}
+    - my.smooth: {length: 80 ms}
+    - my.far: {}
+    - epoch.consecutive: {length: 4 s}
+    - my.line_length: {}
+    - export.table
+"""
+
+
+def test_the_stages_of_the_guide_work_as_printed(tmp_path: Path) -> None:
+    """The walk of DEVELOPERS.md: its stages and its test, copied out and run."""
     import os
     import subprocess
     import sys
 
-    stage, test = blocks(DEVELOPERS, "python")
+    printed = blocks(DEVELOPERS, "python")
+    stages = {
+        match[1]: block for block in printed if (match := re.search(r'name="my\.(\w+)"', block))
+    }
+    assert list(stages) == ["line_length", "smooth", "far"]
+    (test,) = (block for block in printed if block not in stages.values())
     (tmp_path / "my_stages").mkdir()
     (tmp_path / "my_stages" / "__init__.py").write_text('"""My stages."""\n')
-    (tmp_path / "my_stages" / "line_length.py").write_text(stage)
+    for name, stage in stages.items():
+        (tmp_path / "my_stages" / f"{name}.py").write_text(stage)
     (tmp_path / "test_line_length.py").write_text(test)
+    (tmp_path / "test_all.py").write_text(ALL_CHECKS.format(modules=list(stages)[1:]))
     info = tmp_path / "my_stages-0.1.dist-info"
     info.mkdir()
     (info / "METADATA").write_text("Metadata-Version: 2.1\nName: my-stages\nVersion: 0.1\n")
@@ -69,15 +104,20 @@ def test_the_stage_of_the_guide_works_as_printed(tmp_path: Path) -> None:
     group = re.search(r'\[project.entry-points."(.*)"\]\n(.*) = "(.*)"', project)
     assert group
     (info / "entry_points.txt").write_text(f"[{group[1]}]\n{group[2]} = {group[3]}\n")
-    env = {**os.environ, "PYTHONPATH": str(tmp_path)}
-    done = subprocess.run(
-        [sys.executable, "-m", "pytest", "-q", "-p", "no:cacheprovider", str(tmp_path)],
-        capture_output=True, text=True, env=env, cwd=tmp_path,
-    )  # fmt: skip
+    (tmp_path / "all.yaml").write_text(ALL_STAGES)
+
+    def child(*arguments: object) -> subprocess.CompletedProcess[str]:
+        return subprocess.run(
+            [sys.executable, "-m", *map(str, arguments)],
+            capture_output=True, text=True, cwd=tmp_path,
+            env={**os.environ, "PYTHONPATH": str(tmp_path)},
+        )  # fmt: skip
+
+    done = child("pytest", "-q", "-W", "error", "-p", "no:cacheprovider", tmp_path)
     assert done.returncode == 0, done.stdout + done.stderr
-    shown = subprocess.run(
-        [sys.executable, "-m", "waveassay", "stages", "my.line_length"],
-        capture_output=True, text=True, env=env,
-    )  # fmt: skip
-    assert "Line length of each epoch" in shown.stdout
-    assert "my-stages 0.1" in shown.stdout
+    for name, stage in stages.items():
+        shown = child("waveassay", "stages", f"my.{name}").stdout
+        assert stage.splitlines()[0].strip('"') in shown
+        assert "my-stages 0.1" in shown
+    checked = child("waveassay", "check", "all.yaml")
+    assert checked.returncode == 0, checked.stdout + checked.stderr

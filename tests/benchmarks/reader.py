@@ -1,12 +1,10 @@
 """Decoding every signal of a long recording, against a plain read of the same file.
 
-Run as a script: ``python tests/benchmarks/reader.py [hours] [rounds]``. Ratios are of medians of
-times measured in turn in one run; memory is the growth of a fresh process's peak while it decodes.
+Ratios are of times measured in turn, each within one round; memory is the growth of a fresh
+process's peak while it decodes.
 """
 
 import json
-import statistics
-import subprocess
 import sys
 import tempfile
 import time
@@ -16,6 +14,7 @@ from typing import Any
 
 import numpy as np
 
+from benchmarks.measured import Spread, child, own_peak_mb, ratios
 from waveassay.recording import open_recording
 
 SIGNALS = 64
@@ -37,21 +36,21 @@ def measure(hours: float, rounds: int) -> dict[str, Any]:
     return found
 
 
-def _compare(path: Path, rounds: int) -> dict[str, float]:
+def _compare(path: Path, rounds: int) -> dict[str, Any]:
     ways: dict[str, Callable[[Path], None]] = {"plain": _plain, "decode": _decode, "two": _two}
     times: dict[str, list[float]] = {name: [] for name in ways}
+    _plain(path)  # into the system's cache
     for _ in range(rounds):
         for name, way in ways.items():
             start = time.perf_counter()
             way(path)
             times[name].append(time.perf_counter() - start)
-    median = {name: statistics.median(values) for name, values in times.items()}
     return {
         "size_mb": path.stat().st_size / _MB,
-        "plain_s": median["plain"],
-        "decode_all_ratio": median["decode"] / median["plain"],
-        "decode_two_ratio": median["two"] / median["plain"],
-        "memory_growth_mb": _memory_growth_mb(path),
+        "plain_s": Spread.of(times["plain"]),
+        "decode_all_ratio": ratios(times["decode"], times["plain"]),
+        "decode_two_ratio": ratios(times["two"], times["plain"]),
+        "memory_growth_mb": Spread.of(child("reader", path).json for _ in range(min(rounds, 3))),
     }
 
 
@@ -106,38 +105,26 @@ def _write(path: Path, kind: str, records: int) -> None:
             file.write(some[record % len(some)])
 
 
-def _memory_growth_mb(path: Path) -> float:
-    """Return how far decoding raises the peak of a process that has decoded nothing before."""
-    command = [sys.executable, __file__, "--memory", str(path)]
-    return float(subprocess.run(command, check=True, capture_output=True, text=True).stdout)
+def memory_growth_mb(path: Path) -> float:
+    """Return how far decoding raises the peak of this process, which has decoded nothing before."""
+    try:
+        # Sets the peak back to what is resident now; elsewhere importing may hide some of it.
+        Path("/proc/self/clear_refs").write_text("5")
+        before_mb = _status_mb("VmRSS")
+    except OSError:
+        before_mb = own_peak_mb()
+        _decode(path)
+        return own_peak_mb() - before_mb
+    _decode(path)
+    return _status_mb("VmHWM") - before_mb
 
 
 def _status_mb(key: str) -> float:
     for line in Path("/proc/self/status").read_text().splitlines():
         if line.startswith(key + ":"):
             return int(line.split()[1]) * 1024 / _MB
-    raise RuntimeError(f"the kernel does not tell {key}")
-
-
-def _reset_peak_mb() -> float:
-    """Set the peak of resident memory back to what is resident now, and return that."""
-    Path("/proc/self/clear_refs").write_text("5")
-    return _status_mb("VmRSS")
+    raise OSError(f"the kernel does not tell {key}")
 
 
 if __name__ == "__main__":
-    arguments = sys.argv[1:]
-    if arguments[:1] == ["--memory"]:
-        before_mb = _reset_peak_mb()
-        _decode(Path(arguments[1]))
-        print(_status_mb("VmHWM") - before_mb)
-        raise SystemExit
-    print(
-        json.dumps(
-            measure(
-                hours=float(arguments[0]) if arguments else 1.0,
-                rounds=int(arguments[1]) if len(arguments) > 1 else 5,
-            ),
-            indent=2,
-        )
-    )
+    print(json.dumps(memory_growth_mb(Path(sys.argv[1]))))

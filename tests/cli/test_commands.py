@@ -191,3 +191,15 @@ def test_nothing_heavy_is_loaded_for_help(made: Path) -> None:
     )
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert "HEAVY []" in done.stdout
+
+
+def test_version_and_check_of_a_working_directory(made: Path) -> None:
+    from importlib.metadata import version
+
+    assert command("--version").stdout.strip() == f"waveassay {version('waveassay')}"
+    done = command("check", made)
+    assert done.returncode == 3
+    assert "1 of 2 recordings would run." in done.stdout
+    nowhere = command("run", made / "nowhere")
+    assert nowhere.returncode == 2
+    assert "there is no such file or folder" in nowhere.stderr

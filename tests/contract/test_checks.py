@@ -7,19 +7,29 @@ from typing import Any
 
 import numpy as np
 import pytest
-from pydantic import ConfigDict, Field
+from pydantic import ConfigDict
 
+from contract_stages import (
+    HONEST,
+    HONEST_ROWS,
+    HONEST_WHOLE,
+    LENGTH,
+    SmoothParams,
+    caught,
+    less_mean,
+    levels,
+    mean_level,
+    size,
+    smooth,
+    smooth_context,
+)
 from waveassay.contract import (
-    ColumnSpec,
-    EachRow,
     Epochs,
     EpochsSpec,
     Exclusion,
     Features,
-    FeaturesSpec,
     Findings,
     Floats,
-    Kind,
     Params,
     Part,
     Reach,
@@ -32,86 +42,6 @@ from waveassay.contract import (
     kernel_gain,
 )
 from waveassay.contract.checks import CHECKS
-
-LENGTH = 11
-
-
-class SmoothParams(Params):
-    """Parameters of a moving average."""
-
-    weight: float = Field(default=1.0, description="What every sample is multiplied by.")
-
-
-def smooth_spec(params: Any, given: SignalSpec, findings: Findings) -> SignalSpec:
-    return given
-
-
-def smooth(params: Any, signal: Signal) -> Signal:
-    """Average eleven samples, five on either side; ends are repeated."""
-    padded = np.pad(signal.x, LENGTH // 2, mode="edge")
-    windows = np.lib.stride_tricks.sliding_window_view(padded, LENGTH)
-    half_s = LENGTH // 2 / signal.rate_hz
-    out = signal.with_samples(params.weight * np.mean(np.ascontiguousarray(windows), axis=-1))
-    return out.widened(half_s, half_s)
-
-
-def smooth_context(params: Any, given: SignalSpec) -> Reach:
-    assert given.rate_hz is not None
-    return Reach(LENGTH // 2 / given.rate_hz, LENGTH // 2 / given.rate_hz)
-
-
-HONEST = Stage(
-    name="filter.smooth",
-    version=1,
-    params=SmoothParams,
-    takes=(Kind.SIGNALS,),
-    gives=Kind.SIGNALS,
-    spec=smooth_spec,
-    run=smooth,
-    context=smooth_context,
-    example={"weight": 2.0},
-)
-
-
-def size_spec(params: Any, given: EpochsSpec, findings: Findings) -> FeaturesSpec:
-    columns = (ColumnSpec("rms", given.signal.unit, "size"), ColumnSpec("top", "", "largest"))
-    return FeaturesSpec(given.signal, columns)
-
-
-def size(params: Any, epochs: Epochs) -> Features:
-    found = np.full((2, len(epochs)), np.nan)
-    samples = epochs.samples()
-    found[0, epochs.kept] = np.sqrt(np.mean(samples**2, axis=-1))
-    found[1, epochs.kept] = np.max(samples, axis=-1)
-    columns = {"rms": found[0], "top": found[1]}
-    return Features(epochs.signal.name, epochs.rows, columns, ("",) * len(epochs))
-
-
-HONEST_ROWS = replace(
-    HONEST,
-    name="feature.size",
-    takes=(Kind.EPOCHS,),
-    gives=Kind.FEATURES,
-    spec=size_spec,
-    run=size,
-    context=EachRow(),
-)
-
-
-def levels(params: Any, signal: Signal) -> Part:
-    return {"sum": np.array([np.sum(signal.x)]), "count": np.array([signal.x.size])}
-
-
-def mean_level(params: Any, parts: Sequence[Part]) -> Part:
-    total = sum(float(part["sum"][0]) for part in parts)
-    return {"mean": np.array([total / sum(int(part["count"][0]) for part in parts)])}
-
-
-def less_mean(params: Any, signal: Signal, state: Part) -> Signal:
-    return signal.with_samples(signal.x - state["mean"][0])
-
-
-HONEST_WHOLE = replace(HONEST, run=None, context=Whole(levels, mean_level, less_mean))
 
 
 def smooth_gain(params: Any, given: SignalSpec, freq_hz: Floats) -> Any:
@@ -138,11 +68,6 @@ def test_an_honest_stage_passes(stage: Stage, check: Callable[[Stage], None]) ->
     check(stage)
 
 
-def caught(check: Callable[[Stage], None], said: str, stage: Stage) -> None:
-    with pytest.raises(AssertionError, match=said):
-        check(stage)
-
-
 class Loose(SmoothParams):
     """Takes anything."""
 
@@ -166,8 +91,8 @@ class Forgetful(SmoothParams):
 @pytest.mark.parametrize(
     ("check", "said", "changes"),
     [
-        (checks.check_name, "lower case", {"name": "Filter Smooth"}),
-        (checks.check_name, "starts at 1", {"version": 0}),
+        (checks.check_form, "lower case", {"name": "Filter Smooth"}),
+        (checks.check_form, "a whole number from 1", {"version": 0}),
         (checks.check_is_described, "no source", {"source": " "}),
         (checks.check_parameters_are_described, "weight", {"params": Bare}),
         (checks.check_refuses_unknown_parameters, "silently", {"params": Loose}),

@@ -8,7 +8,15 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from waveassay.contract import Condition, Epochs, Exclusion, Interval, Signal, merged
+from waveassay.contract import (
+    Condition,
+    Epochs,
+    Exclusion,
+    Interval,
+    Signal,
+    exclusions_of,
+    merged,
+)
 
 TIMES = st.fractions(0, 20, max_denominator=12)
 REASONS = st.sampled_from(["a", "b"])
@@ -157,3 +165,29 @@ def test_conditions_and_intervals() -> None:
     assert not one.contains(Interval(Fraction(1), Fraction(3)))
     assert not one.overlaps(Interval(Fraction(2), Fraction(3)))
     assert one.overlaps(Interval(Fraction(1), Fraction(3)))
+
+
+@settings(deadline=None)
+@given(MASKS, REASONS)
+def test_masked_samples_are_those_whose_time_is_masked(masks: list[Exclusion], other: str) -> None:
+    found = signal(masks, Fraction(3))
+    times = [found.time_s(i) for i in range(found.x.size)]
+    for ignoring, reasons in (((), ("a", "b")), ((other,), {"a", "b"} - {other})):
+        expected = [any(masked(masks, reason, time) for reason in reasons) for time in times]
+        assert found.masked(ignoring).tolist() == expected
+
+
+@settings(deadline=None)
+@given(st.lists(st.booleans(), min_size=160, max_size=160))
+def test_marked_samples_become_time_and_time_marks_the_same_samples(marks: list[bool]) -> None:
+    where = np.array(marks)
+    found = exclusions_of(signal([], Fraction(1, 3)), where, "a")
+    assert found == merged(found)  # one for each run
+    again = signal([], Fraction(1, 3)).excluding(found)
+    assert again.masked().tolist() == marks
+    assert sum(item.length_s for item in found) * RATE == sum(marks)
+
+
+def test_marks_of_another_length_are_refused() -> None:
+    with pytest.raises(ValueError, match="160 samples"):
+        exclusions_of(signal([]), np.ones(159, np.bool_), "a")

@@ -221,3 +221,39 @@ def test_a_stored_result_that_was_changed_is_found_and_made_again(folder: Path) 
     third = run(text, [folder / "in"], folder / "out")
     assert {r.status for r in third.results} == {"done"}
     assert first.results_digest != third.results_digest
+
+
+def test_a_condition_that_gives_nothing_is_warned_of(folder: Path) -> None:
+    short = RECIPE.replace("length: 60 s", "length: 3 s")
+    outcome = run(short, [folder / "in"], folder / "short")
+    assert {r.status for r in outcome.results} == {"done_with_warnings"}
+    assert "condition rest of frontal: no epoch fits in it" in outcome.results[0].message
+    masked = RECIPE.replace("900 uV", "1 uV")
+    outcome = run(masked, [folder / "in"], folder / "masked")
+    assert "none of 29 epochs is kept" in outcome.results[0].message
+
+
+def test_a_finished_run_that_was_changed_is_told_and_made_anew(folder: Path) -> None:
+    first = run(RECIPE, [folder / "in"], folder / "out")
+    summary = first.folder / "summary.csv"
+    summary.write_text(summary.read_text().replace("p0", "p7", 1))
+    second = run(RECIPE, [folder / "in"], folder / "out")
+    assert not second.already
+    assert second.results_digest == first.results_digest
+    assert any("changed after it was finished" in note for note in second.notes)
+
+
+def test_other_content_under_the_same_name_and_edition_is_told(folder: Path) -> None:
+    run(RECIPE, [folder / "in"], folder / "out")
+    second = run(RECIPE.replace("13 Hz", "12 Hz"), [folder / "in"], folder / "out")
+    assert any("Raise the edition" in note for note in second.notes)
+    comment = run("# only a comment\n" + RECIPE, [folder / "in"], folder / "alone")
+    again = run(RECIPE, [folder / "in"], folder / "alone")
+    assert not comment.notes
+    assert not again.notes
+
+
+def test_the_environments_of_all_results_are_in_the_folder(folder: Path) -> None:
+    outcome = run(RECIPE, [folder / "in"], folder / "out")
+    used = {row["environment"] for row in rows(outcome.folder, "steps")}
+    assert {path.stem for path in (outcome.folder / "environments").iterdir()} == used

@@ -173,10 +173,10 @@ def test_conditions_come_in_the_recipes_order_and_may_overlap() -> None:
         ),
         (
             {"start": note("stop"), "length": "101.5 s"},
-            "condition level, from 500 s to 601.5 s, stands out of the recording, which is 600 s",
+            "condition level, from 500 s to 601.5 s, lies outside the recording, which is 600 s",
         ),
-        ({"start": note("eyes closed", offset="-12 s")}, "from -2 s to 600 s, stands out"),
-        ({"start": {"time": "600 s"}, "length": "0.5 s"}, "stands out of the recording"),
+        ({"start": note("eyes closed", offset="-12 s")}, "from -2 s to 600 s, lies outside"),
+        ({"start": {"time": "600 s"}, "length": "0.5 s"}, "lies outside the recording"),
         ({"start": {"time": "700 s"}}, "reversed"),
         ({"start": {"clock": "23:59:29"}}, "reversed"),
         ({"start": {"offset": "3 s"}}, "its start needs one of annotation, time and clock"),

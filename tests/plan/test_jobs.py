@@ -5,7 +5,7 @@ from graphlib import TopologicalSorter
 from hypothesis import given
 from hypothesis import strategies as st
 
-from waveassay.plan.jobs import LONGEST_S, Job, group_into_jobs, missing_tasks
+from waveassay.plan.jobs import LOCAL, Job, group_into_jobs, missing_tasks
 from waveassay.plan.stretches import Stretch
 from waveassay.plan.tasks import Task
 
@@ -54,7 +54,7 @@ def test_every_task_is_in_one_job_after_what_it_needs(
 def test_a_long_recording_is_cut_up_and_short_ones_share_a_job() -> None:
     long = group_into_jobs([tasks_of("long", 50, 5.0)], workers=2)
     assert len(long) > 4
-    assert all(job.cost_s <= LONGEST_S for job in long)
+    assert all(job.cost_s <= LOCAL.longest_s for job in long)
     short = group_into_jobs([tasks_of(f"r{i}", 1, 0.01) for i in range(40)], workers=2)
     assert len(short) < 10
 

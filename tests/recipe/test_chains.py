@@ -138,12 +138,41 @@ def test_one_fault_does_not_draw_others_behind_it() -> None:
 def test_outputs_and_signals_that_nothing_uses_are_warned_of() -> None:
     assert said("load: {signals: [eeg]}", CUT, "spectrum.plain", POWER, "spectrum.mean", POWER) == [
         "5:3: W403 signals.artery: no chain reads this signal",
-        "11:7: W402 c.feature.power: gives features that no later step uses",
-        "13:7: W402 c.feature.power#2: gives average features that no later step uses",
+        "11:7: W402 c.feature.power: gives features that no later step uses"
+        "; put an export.table behind it, or leave it out",
+        "13:7: W402 c.feature.power#2: gives average features that no later step uses"
+        "; put an export.table behind it, or leave it out",
     ]
 
 
 def test_a_table_uses_every_feature_before_it() -> None:
     assert said(READ, CUT, "spectrum.plain", POWER, POWER, "export.table", POWER) == [
         "14:7: W402 c.feature.power#3: gives features that no later step uses"
+        "; put an export.table behind it, or leave it out"
     ]
+
+
+def test_a_name_that_another_steps_columns_have_already_is_refused() -> None:
+    """Two steps under one name would share a column, and one of them would be lost."""
+    from waveassay.recipe import check_recipe
+
+    text = """\
+recipe: clash
+edition: 1
+title: A clash of names
+purpose: None
+signals:
+  frontal: {labels: [Fp1], unit: uV}
+chains:
+  c:
+    - load: {signals: [frontal]}
+    - epoch.consecutive: {length: 4 s}
+    - spectrum.periodogram: {}
+    - feature.spectral_edge: {within: [1 Hz, 30 Hz]}
+    - feature.spectral_entropy: {within: [1 Hz, 30 Hz]}
+      as: spectral_edge
+    - export.table: {}
+"""
+    (problem,) = check_recipe(text, "r.yaml").errors
+    assert str(problem).startswith("r.yaml:14:11: R304 ")
+    assert "feature.spectral_edge (line 12)" in str(problem)

@@ -2,11 +2,13 @@
 
 import subprocess
 import sys
+from dataclasses import replace
 from importlib.metadata import Distribution, EntryPoint
 from pathlib import Path
 
 import pytest
 
+from recipe_stages import READ
 from waveassay.contract import Kind
 from waveassay.recipe import check_recipe, load_registry
 from waveassay.recipe.registry import GROUP
@@ -18,7 +20,10 @@ from waveassay.contract import Kind, Params, Stage
 class P(Params):
     \"\"\"None.\"\"\"
 
-STAGE = Stage("{name}", 1, P, (Kind.SIGNALS,), Kind.SIGNALS, lambda p, given, findings: given)
+STAGE = Stage(
+    "{name}", 1, P, (Kind.SIGNALS,), Kind.SIGNALS, lambda p, given, findings: given,
+    run=lambda p, signal: signal,
+)
 """
 
 
@@ -84,6 +89,7 @@ def test_what_does_not_load_is_named_and_the_rest_is_there(bundles: Bundles) -> 
             "bad.py": "import no_such_module_at_all",
             "leaves.py": "raise SystemExit(3)",
             "empty.py": "",
+            "kind.py": _STAGE.format(name="acme.kind").replace("(Kind.SIGNALS,)", "Kind.SIGNALS"),
             "name.py": _STAGE.format(name="Not A Name"),
             "reserved.py": _STAGE.format(name="keep"),
             "good.py": _STAGE.format(name="acme.good"),
@@ -99,16 +105,25 @@ def test_what_does_not_load_is_named_and_the_rest_is_there(bundles: Bundles) -> 
     assert [(b.owner, b.module, b.why.split(":")[0]) for b in registry.broken] == [
         ("acme 1.2", "acme_partly.bad", "ModuleNotFoundError"),
         ("acme 1.2", "acme_partly.empty", "the module defines no STAGE"),
+        ("acme 1.2", "acme_partly.kind", "stage 'acme.kind'"),
         ("acme 1.2", "acme_partly.leaves", "SystemExit"),
         (
             "acme 1.2",
             "acme_partly.name",
             "'Not A Name' is no stage name; lower case, such as 'family.method'",
         ),
-        ("acme 1.2", "acme_partly.reserved", "'keep' is a key of the recipe grammar"),
+        (
+            "acme 1.2",
+            "acme_partly.reserved",
+            "'keep' is a key of the recipe grammar; name the stage 'family.method'",
+        ),
         ("broken 0.3", "broken_whole", "ZeroDivisionError"),
         ("gone 2", "gone_stages", "ModuleNotFoundError"),
     ]
+    said = {broken.module: str(broken) for broken in registry.broken}
+    assert "acme_partly.kind: stage 'acme.kind': takes is" in said["acme_partly.kind"]
+    assert "write takes=(Kind.SIGNALS,)" in said["acme_partly.kind"]
+    assert "begin the name of a helper module with '_'" in said["acme_partly.empty"]
 
 
 def test_a_missed_stage_is_told_together_with_what_did_not_load(bundles: Bundles) -> None:
@@ -131,8 +146,20 @@ def test_the_shipped_package_keeps_a_name_that_a_stranger_claims_too(bundles: Bu
     (broken,) = registry.broken
     assert broken.owner == "aaa 1.2"
     assert broken.why == (
-        "stage name 'family.one' is also claimed by waveassay 9 (ours_claims.one), which keeps it"
+        "stage name 'family.one' is also claimed by waveassay 9 (ours_claims.one), which keeps it: "
+        "rename yours"
     )
+    text = (
+        "recipe: r\nedition: 1\nsignals: {e: {labels: [E], unit: uV}}\n"
+        "chains:\n  c:\n  - load: {signals: [e]}\n  - family.one\n"
+    )
+    stages = {"load": READ, **registry.stages}
+    checked = check_recipe(text, "r.yaml", replace(registry, stages=stages))
+    assert (
+        "r.yaml:7:5: W404 c.family.one: this is the stage of waveassay 9; its name is also "
+        in str(checked.warnings[0])
+    )
+    assert not checked.errors
 
 
 def test_of_two_strangers_with_one_name_neither_has_it(bundles: Bundles) -> None:
@@ -142,20 +169,22 @@ def test_of_two_strangers_with_one_name_neither_has_it(bundles: Bundles) -> None
     registry = load_registry(bundles.points())
     assert registry.stages == {}
     assert [b.owner for b in registry.broken] == ["aaa 1.2", "bbb 1.2"]
+    assert all(b.why.endswith("so neither has it: rename one") for b in registry.broken)
     assert "aaa 1.2" in registry.unknown("family.twice")
     assert "bbb 1.2" in registry.unknown("family.twice")
 
 
 def test_a_stranger_whose_spec_fails_is_named_and_nothing_crashes(bundles: Bundles) -> None:
     source = _STAGE.format(name="acme.source").replace("(Kind.SIGNALS,),", "(),")
-    crash = _STAGE.format(name="acme.crash").replace(": given)", ": 1 / 0)")
-    wrong = _STAGE.format(name="acme.wrong").replace(": given)", ": 'signals')")
+    source = source.replace("run=lambda p, signal: signal", "needs=lambda p: ('e',)")
+    crash = _STAGE.format(name="acme.crash").replace(": given,", ": 1 / 0,")
+    wrong = _STAGE.format(name="acme.wrong").replace(": given,", ": 'signals',")
     bundles.add(
         "acme",
         "acme_crash",
         {
             "__init__.py": "",
-            "source.py": source.replace("given)", "given, needs=lambda p: ('e',))"),
+            "source.py": source,
             "crash.py": crash,
             "wrong.py": wrong,
         },

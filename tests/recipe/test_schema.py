@@ -1,12 +1,16 @@
 """The JSON Schema of the grammar takes what is sound and refuses what an editor can see is not."""
 
+import json
+from dataclasses import replace
 from typing import Any
 
 import jsonschema
 import pytest
+from pydantic import Field
 
-from recipe_stages import HEAD, REGISTRY, with_chain
-from waveassay.recipe import library, load_registry, recipe_schema
+from recipe_stages import CUT, HEAD, REGISTRY, with_chain
+from waveassay.contract import Params, Seconds
+from waveassay.recipe import Registry, library, load_registry, recipe_schema
 from waveassay.recipe.problems import Report
 from waveassay.recipe.yaml_nodes import read_document, value_of
 
@@ -96,9 +100,28 @@ def test_each_parameter_says_what_it_means_its_unit_and_its_default_as_a_recipe_
     assert cut["examples"] == [{"length": "4 s"}]
 
 
+class TextParams(Params):
+    """A default as a recipe writes it, where the value as held is due."""
+
+    length: Seconds = Field(default="0.05 s", description="Length.")  # type: ignore[assignment]
+
+
+def test_a_stage_without_a_schema_is_left_out_and_named() -> None:
+    stages = {"acme.text": replace(CUT, name="acme.text", params=TextParams), "epoch.cut": CUT}
+    left_out: list[str] = []
+    schema = recipe_schema(Registry(stages, {"acme.text": "acme 1.2"}), left_out)
+    jsonschema.Draft202012Validator.check_schema(schema)
+    assert "epoch.cut" in schema["$defs"]
+    assert "acme.text" not in json.dumps(schema)
+    (text,) = left_out
+    assert text.startswith("acme.text (acme 1.2): no schema of its parameters can be made")
+
+
 def test_every_installed_stage_is_in_the_schema() -> None:
     registry = load_registry()
-    schema = recipe_schema(registry)
+    left_out: list[str] = []
+    schema = recipe_schema(registry, left_out)
+    assert left_out == []
     for name, stage in registry.stages.items():
         assert set(schema["$defs"][name]["properties"]) == set(stage.params.model_fields)
         for field in schema["$defs"][name]["properties"].values():

@@ -1,16 +1,25 @@
 import io
 import warnings
 from collections.abc import Sequence
+from dataclasses import replace
+from itertools import combinations
 
 import matplotlib
 import numpy as np
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+from matplotlib.backend_bases import RendererBase
+from matplotlib.text import Text
 from PIL import Image
 
 from feature_data import Collected, some_rows, spectra, spectra_spec
 from waveassay.contract import Figure, Kind, Spectra, Whole
+from waveassay_stages.export._conditions import stretches
+from waveassay_stages.export._draw import fitted, shortened
+from waveassay_stages.export._raster import colour_limits, rastered
 from waveassay_stages.export._rows import MOST_BINS, collect_rows, joined
-from waveassay_stages.export._spectrogram import colour_limits, rastered, stretches, time_unit
+from waveassay_stages.export._spectrogram import time_unit
 from waveassay_stages.export._spectrum import confidence_band, level_limits
 from waveassay_stages.export.figure import STAGE, FigureParams, spec
 
@@ -108,7 +117,7 @@ def test_excluded_time_is_drawn_hatched_and_gaps_are_white() -> None:
     start = np.where(np.arange(30) < 20, np.arange(30), np.arange(30) + 20) * 4.0
     data = spectra(data.density, kept=data.rows.kept, start_s=start)
     pixels = image(figure(params(), [data]).png).astype(int)
-    line = pixels[400, 120:1400]  # across the axes, half-way up
+    line = pixels[400, 140:1380]  # across the axes, half-way up
     grey = (np.ptp(line, axis=-1) == 0) & (line[:, 0] > 150)
     white = line[:, 0] == 255
     assert 0.15 < np.mean(grey & ~white) < 0.25  # ten of fifty epochs' lengths
@@ -204,3 +213,104 @@ def test_what_lies_outside_a_filter_may_be_shown() -> None:
     found = Collected()
     spec(params(within=("0 Hz", "60 Hz")), spectra_spec(pass_hz=(0.5, 40.0)), found.findings)
     assert not found.refused
+
+
+LONG = "LEFT FRONTAL EEG (Fp1) and a very long name that goes on, as some do, the second time"
+EPOCHS = np.arange(40)
+CROWDED: dict[str, tuple[dict[str, object], dict[str, object]]] = {
+    "long names": ({}, {"condition": [f"{LONG} {i // 20}" for i in EPOCHS]}),
+    "ten conditions": ({}, {"condition": [f"CONDITION {i // 4}" for i in EPOCHS]}),
+    "forty conditions": ({}, {"condition": [f"stimulus {i}" for i in EPOCHS]}),
+    "overlapping conditions": (
+        {},
+        {"condition": [*"abcdefgh"] * 5, "start_s": (EPOCHS // 8) * 4.0},
+    ),
+    "late start": ({}, {"start_s": EPOCHS * 4.0 + 1e7}),
+    "narrow range": ({"within": ("8 Hz", "8.5 Hz"), "range": ("-10.05 dB", "-10.01 dB")}, {}),
+    "wide range": ({"range": ("-5000 dB", "5000 dB")}, {}),
+    "one epoch in two excluded": ({}, {"kept": EPOCHS % 2 == 0}),
+    "nothing kept": ({}, {"kept": [False] * 40}),
+}
+
+
+def written(
+    monkeypatch: pytest.MonkeyPatch, chosen: FigureParams, data: Spectra
+) -> list[tuple[str, tuple[float, ...]]]:
+    """Return what is written in a figure, and its left, bottom, right and top in pixels."""
+    seen: list[tuple[str, tuple[float, ...]]] = []
+    draw = Text.draw
+
+    def look(text: Text, renderer: RendererBase) -> None:
+        draw(text, renderer)
+        if text.get_visible() and text.get_text():
+            box = text.get_window_extent(renderer)
+            seen.append((text.get_text(), (box.x0, box.y0, box.x1, box.y1)))
+
+    monkeypatch.setattr(Text, "draw", look)
+    figure(chosen, [data])
+    return seen
+
+
+@pytest.mark.parametrize("show", ["spectrum", "spectrogram"])
+@pytest.mark.parametrize("case", CROWDED)
+def test_no_text_covers_another_or_leaves_the_picture(
+    show: str, case: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    chosen, of_rows = CROWDED[case]
+    data = replace(noise(40, **of_rows), signal=LONG)
+    boxes = written(monkeypatch, params(show, **chosen), data)
+    assert len(boxes) > 1
+    for name, (left, bottom, right, top) in boxes:
+        assert 0 <= left < right <= 1600, name
+        assert 0 <= bottom < top <= 800, name
+    for (one, a), (other, b) in combinations(boxes, 2):
+        apart = a[2] <= b[0] or b[2] <= a[0] or a[3] <= b[1] or b[3] <= a[1]
+        assert apart, f"{one} covers {other}"
+
+
+def test_times_far_from_the_start_are_written_in_full(monkeypatch: pytest.MonkeyPatch) -> None:
+    late = noise(40, start_s=EPOCHS * 4.0 + 1e7)
+    seen = [text for text, _ in written(monkeypatch, params(), late)]
+    assert "10000050" in seen
+    assert not [text for text in seen if "e+" in text or "+1" in text or "1e" in text]
+
+
+def test_very_many_names_end_in_how_many_more_there_are(monkeypatch: pytest.MonkeyPatch) -> None:
+    data = noise(40, condition=[f"stimulus {i}" for i in EPOCHS])
+    seen = [text for text, _ in written(monkeypatch, params("spectrum"), data)]
+    named = [text for text in seen if text.startswith("stimulus")]
+    assert len(named) >= 20
+    assert f"and {40 - len(named)} more" in seen
+
+
+@given(text=st.text("abW gé", max_size=60), room=st.integers(0, 400))
+def test_a_text_is_cut_to_its_room_and_keeps_its_start_and_end(text: str, room: int) -> None:
+    cut = fitted(text, room, 10)
+    if cut and cut != text:
+        assert len(cut) < len(text)
+        start, end = cut.split("…")
+        assert start
+        assert text.startswith(start)
+        assert text.endswith(end)
+
+
+def test_names_that_differ_at_their_end_still_differ_when_cut() -> None:
+    cut = {shortened(f"level of the drug, step {step}", 12) for step in range(10)}
+    assert len(cut) == 10
+    assert {len(text) for text in cut} <= {11, 12}  # a space before the ellipsis goes
+
+
+def test_a_level_stands_at_its_place_and_in_the_colour_of_the_bar() -> None:
+    # A line every 4 Hz, of which that at 20 Hz stands 20 dB over the rest in the second half.
+    density = np.ones((10, 17))
+    density[5:, 5] = 100.0
+    pixels = image(figure(params(range=("0 dB", "20 dB")), [spectra(density, 4.0)]).png).astype(int)
+    top, bottom = matplotlib.colormaps["viridis"]([1.0, 0.0], bytes=True)[:, :3].astype(int)
+    bright = np.argwhere((pixels[:, :1390] == top).all(axis=-1))
+    dark = np.argwhere((pixels[:, :1390] == bottom).all(axis=-1))
+    (upper, left), (lower, right) = dark.min(axis=0), dark.max(axis=0)
+    pixel_hz = 66 / (lower - upper + 1)  # the axes reach from 0 to half a line above 64 Hz
+    assert bright[:, 1].min() == pytest.approx((left + right + 1) / 2, abs=2)
+    assert bright[:, 1].max() == right
+    assert (lower + 1 - bright[:, 0].max()) * pixel_hz == pytest.approx(18, abs=0.3)
+    assert (lower + 1 - bright[:, 0].min()) * pixel_hz == pytest.approx(22, abs=0.3)

@@ -4,6 +4,7 @@ They are found by entry point, as installed packages are; nothing about them is 
 """
 
 import csv
+import json
 import os
 import shutil
 import subprocess
@@ -159,6 +160,42 @@ def test_a_taken_name_stays_with_its_owner_and_the_claim_is_told() -> None:
     assert "filter.notch" in listed
     shown = waveassay("stages", "filter.notch", packages="claiming").stdout
     assert "waveassay" in shown.splitlines()[0]
+
+
+def test_a_recipe_that_uses_a_contested_name_is_told_whose_stage_it_has(made: Path) -> None:
+    recipe = made / "contested.yaml"
+    notch = RECIPE.replace("acme.smooth: {length: 50 ms}", "filter.notch: {line: 50 Hz}")
+    recipe.write_text(notch)
+    told = waveassay("check", recipe, packages="claiming working")
+    assert told.returncode == 0, told.stderr
+    said = told.stderr + told.stdout
+    assert "contested.yaml:10:7: W404 one.filter.notch: this is the stage of waveassay" in said
+    assert "its name is also claimed by clash 2.0 (clash_stages.notch)" in said
+    assert "W404" not in (alone := waveassay("check", recipe, packages="working")).stderr
+    assert "W404" not in alone.stdout
+
+
+def test_a_stage_whose_parameters_cannot_be_shown_stops_no_command(made: Path) -> None:
+    listed = waveassay("stages", packages="careless working")
+    assert listed.returncode == 0
+    assert "careless.text" in listed.stdout
+    assert "careless_stages.unready: stage 'careless.unready': takes is" in listed.stdout
+    shown = waveassay("stages", "careless.text", packages="careless")
+    assert shown.returncode == 0
+    assert "no schema of its parameters can be made" in shown.stdout
+    assert shown.stderr == ""
+    schema = waveassay("schema", packages="careless working")
+    assert schema.returncode == 0
+    assert "left out: careless.text (careless 0.1): no schema" in schema.stderr
+    assert "Traceback" not in schema.stderr
+    known = json.loads(schema.stdout)["$defs"]
+    assert "careless.text" not in known
+    recipe = made / "careless.yaml"
+    recipe.write_text(RECIPE.replace("acme.smooth: {length: 50 ms}", "careless.text: {}"))
+    checked = waveassay("check", recipe, packages="careless working")
+    assert checked.returncode == 2
+    assert "careless.yaml:10:7: R310 one.careless.text: the stage of careless 0.1" in checked.stderr
+    assert "acme.smooth" in known
 
 
 def test_a_stage_that_was_edited_is_never_answered_from_the_store(tmp_path: Path) -> None:

@@ -17,6 +17,9 @@ def check(argument: str, arguments: Sequence[Path], *, plan: bool = False) -> in
 
     With ``plan``, say how the steps on samples would be run.
     """
+    place = Path(argument)
+    if (place / "recipe.yaml").exists() and not arguments:
+        argument, arguments = str(place / "recipe.yaml"), [place / "recordings"]
     recipe, warnings = load_recipe(argument)
     screen = console()
     for warning in warnings:

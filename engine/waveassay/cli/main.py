@@ -28,6 +28,26 @@ _RECORDINGS = typer.Argument(
 Recordings = Annotated[list[Path] | None, _RECORDINGS]
 
 
+def _print_version(asked: bool) -> None:
+    if asked:
+        from importlib.metadata import version
+
+        typer.echo(f"waveassay {version('waveassay')}")
+        raise typer.Exit
+
+
+@app.callback()
+def _options(
+    version: Annotated[
+        bool,
+        typer.Option(
+            "--version", callback=_print_version, is_eager=True, help="Show the version and exit."
+        ),
+    ] = False,
+) -> None:
+    """Take what stands before the command."""
+
+
 @app.command("run")
 def run_command(
     target: Annotated[
@@ -44,11 +64,31 @@ def run_command(
         typer.Option(help="Folder that gets runs/ and store/. Needed unless WORKDIR is given."),
     ] = None,
     workers: Annotated[
-        int | None, typer.Option(min=1, help="Processes at work. Default: one a core.")
+        int | None,
+        typer.Option(
+            min=1,
+            help="Processes at work. Default: one a core. With --cluster: jobs at once.",
+        ),
     ] = None,
     store: Annotated[
         Path | None, typer.Option(help="Folder of stored results. Default: store/ beside runs/.")
     ] = None,
+    cluster: Annotated[
+        Path | None,
+        typer.Option(
+            metavar="DIR",
+            help="Run on a cluster: a Snakemake profile (a folder with config.yaml), or 'slurm', "
+            "which ships. Recordings and results must be on a disk that every node sees.",
+        ),
+    ] = None,
+    cluster_wait: Annotated[
+        float,
+        typer.Option(
+            metavar="HOURS",
+            min=0.01,
+            help="Stop when no job has begun or ended on the cluster for so many hours.",
+        ),
+    ] = 24.0,
 ) -> None:
     """Run a recipe over recordings: tables, figures and provenance in a run folder.
 
@@ -57,12 +97,18 @@ def run_command(
     """
     from waveassay.cli.run import run
 
-    _leave(run(target, recordings or [], into, workers, store))
+    _leave(run(target, recordings or [], into, workers, store, cluster, cluster_wait))
 
 
 @app.command("check")
 def check_command(
-    recipe: Annotated[str, typer.Argument(help="A recipe: its path, or a shipped one's name.")],
+    recipe: Annotated[
+        str,
+        typer.Argument(
+            metavar="RECIPE|WORKDIR",
+            help="A recipe: its path, or a shipped one's name. Or a working directory.",
+        ),
+    ],
     recordings: Recordings = None,
     plan: Annotated[
         bool,

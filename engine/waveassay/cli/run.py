@@ -3,13 +3,16 @@
 import os
 from collections.abc import Sequence
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 from waveassay.cli.loading import load_recipe
 from waveassay.cli.screen import NOTICE, console, plural
 from waveassay.contract.errors import UsageError
 from waveassay.execute.run import InterruptedRunError, RunOutcome, Watcher, run_recipe
+from waveassay.execute.runner import Runner
+from waveassay.plan.jobs import CLUSTER, LOCAL, JobLength
 from waveassay.plan.recordings import find_recordings
+from waveassay.recipe import library
 
 if TYPE_CHECKING:
     from rich.progress import Progress
@@ -21,6 +24,8 @@ def run(
     into: Path | None,
     workers: int | None,
     store: Path | None,
+    cluster: Path | None = None,
+    cluster_wait_h: float = 24.0,
 ) -> int:
     """Run, print how it went, and return the exit code."""
     recipe_argument, arguments, folder = _places(target, recordings, into)
@@ -33,8 +38,7 @@ def run(
         f"Recipe {recipe.name}, edition {recipe.edition}: "
         f"{plural(len(recipe.chains), 'chain')} over {plural(len(found), 'recording')}."
     )
-    from waveassay.execute.snakemake.backend import run_with_snakemake
-
+    where = _this_machine(workers) if cluster is None else _on(cluster, workers, cluster_wait_h)
     try:
         with _Bar() as bar:
             outcome = run_recipe(
@@ -42,8 +46,9 @@ def run(
                 found,
                 folder,
                 store_folder=store,
-                workers=workers or _usable_cores(),
-                runner=run_with_snakemake,
+                workers=where.workers,
+                runner=where.runner,
+                job_length=where.job_length,
                 watcher=bar.watcher,
             )
     except KeyboardInterrupt:
@@ -59,6 +64,8 @@ def _places(
         if into is None:
             raise UsageError("Say where the results go: --into DIR.")
         return target, list(recordings), into
+    if not path.exists() and target not in library.names():
+        raise UsageError(f"{target}: there is no such file or folder, and no shipped recipe.")
     if not path.is_dir():
         raise UsageError(
             f"Name the recordings after the recipe, as in: waveassay run {target} FILE_OR_FOLDER "
@@ -72,6 +79,41 @@ def _places(
                 f"{wanted.name} in it."
             )
     return str(recipe), [folder], into or path
+
+
+class _Where(NamedTuple):
+    """Where the work is done."""
+
+    runner: Runner
+    workers: int
+    job_length: JobLength
+
+
+def _this_machine(workers: int | None) -> _Where:
+    from waveassay.execute.snakemake.backend import run_with_snakemake
+
+    return _Where(run_with_snakemake, workers or _usable_cores(), LOCAL)
+
+
+def _on(cluster: Path, workers: int | None, wait_h: float) -> _Where:
+    """Return the cluster of a profile, checked before anything is computed."""
+    from waveassay.execute.snakemake import slurm
+    from waveassay.execute.snakemake.cluster import ClusterRunner
+    from waveassay.execute.snakemake.profile import read_profile
+
+    screen = console(stderr=True)
+    profile = read_profile(cluster)
+    if profile.executor == "slurm":
+        profile = slurm.checked(profile)
+        warning = slurm.warning(profile)
+        if warning:
+            screen.print(warning, style="yellow")
+    workers = workers or profile.jobs or _usable_cores()
+    screen.print(
+        f"Cluster: executor {profile.executor}, at most {plural(workers, 'job')} at once, as "
+        f"{profile.file} says."
+    )
+    return _Where(ClusterRunner(profile, wait_h * 3600, screen.print), workers, CLUSTER)
 
 
 def _usable_cores() -> int:
@@ -134,6 +176,8 @@ def _report(outcome: RunOutcome) -> int:
     for result in failed:
         step = f" at {result.chain}.{result.step}" if result.step else ""
         screen.print(f"failed   {result.recording}{step}: {result.message}")
+    for note in outcome.notes:
+        screen.print(f"note     {note}")
     done = len(results) - len(failed)
     line = f"{plural(done, 'recording')} done"
     if warned:

@@ -1,12 +1,16 @@
 """``waveassay stages``."""
 
 import inspect
+import warnings
 from typing import Any
+
+from pydantic.json_schema import PydanticJsonSchemaWarning
 
 from waveassay.cli.screen import console
 from waveassay.contract import Stage
 from waveassay.contract.errors import UsageError
 from waveassay.recipe.registry import Registry, load_registry
+from waveassay.recipe.schema import no_schema
 
 
 def show_stages(name: str | None) -> int:
@@ -33,7 +37,12 @@ def _show(stage: Stage, registry: Registry) -> None:
     module = inspect.getmodule(stage.params)
     screen.print(inspect.cleandoc((module and module.__doc__) or ""))
     screen.print("\nParameters")
-    for field, text in parameter_lines(stage):
+    try:
+        lines = parameter_lines(stage)
+    except Exception as error:  # a stranger's parameters
+        lines = []
+        screen.print(f"  {no_schema(error)}")
+    for field, text in lines:
         screen.print(f"  {field}")
         screen.print(f"      {text}")
     screen.print(f"\nSource: {stage.source}")
@@ -44,7 +53,9 @@ def _show(stage: Stage, registry: Registry) -> None:
 
 def parameter_lines(stage: Stage) -> list[tuple[str, str]]:
     """Return each parameter with its form and default, and what it means."""
-    schema = stage.params.model_json_schema()
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", PydanticJsonSchemaWarning)
+        schema = stage.params.model_json_schema()
     definitions = schema.get("$defs", {})
     defaults = stage.params.model_construct().model_dump(mode="json", warnings=False)
     required = set(schema.get("required", ()))

@@ -17,6 +17,7 @@ from waveassay.contract.kinds import (
     Signal,
     Spectra,
     Table,
+    exclusions_of,
     merged,
 )
 from waveassay.contract.params import Params
@@ -98,6 +99,7 @@ __all__ = [
     "Whole",
     "check_band",
     "exact",
+    "exclusions_of",
     "features_of",
     "kernel_gain",
     "merged",

@@ -9,63 +9,50 @@ A check says nothing when all is well, and raises AssertionError with what is wr
 """
 
 import json
-import re
+import os
 import subprocess
 import sys
 from collections.abc import Callable, Iterator
 from dataclasses import replace
-from fractions import Fraction
 from importlib.util import find_spec
-from typing import Any
+from math import isfinite
 
-import numpy as np
 from pydantic import ValidationError
 
 from waveassay.contract.agreement import disagreements
-from waveassay.contract.checks_data import RATES_HZ, UNITS, Given, given, random_signal
+from waveassay.contract.checks_context import (
+    prove_each_row,
+    prove_reach,
+    prove_whole,
+    require_finite,
+)
+from waveassay.contract.checks_data import RATES_HZ, UNITS, Given, given
+from waveassay.contract.checks_defaults import unsound_defaults
+from waveassay.contract.checks_form import why_unfit
+from waveassay.contract.checks_masks import prove_masks
 from waveassay.contract.checks_response import RESPONSE_TOLERANCE, prove_response
 from waveassay.contract.checks_running import (
-    InRows,
     Refused,
     announced,
     arrays_in,
     difference,
-    in_parts,
     run_by_stretches,
     run_whole,
-    take_rows,
 )
-from waveassay.contract.kinds import Epochs, Signal
 from waveassay.contract.params import Params
-from waveassay.contract.spec import (
-    Findings,
-    SignalSpec,
-    SpectraSpec,
-)
-from waveassay.contract.stage import EachRow, Reach, Stage, Whole
+from waveassay.contract.spec import Derived, Findings, SignalSpec, Spec, SpectraSpec
+from waveassay.contract.stage import EachRow, Stage, Whole
 
 __all__ = [
     "CHECKS",
     "RESPONSE_TOLERANCE",
-    "STRETCH_TOLERANCE",
     "example_params",
     "run_by_stretches",
     "run_whole",
 ]
 
-#: Run by stretches and run whole may be this share of the largest sample (in or out) apart:
-#: ten times what the declared reach may leave out, for what rounding adds.
-STRETCH_TOLERANCE = 1e-9
-
-#: What a recording's parts are combined to may depend on where it was cut by rounding alone.
-COMBINE_TOLERANCE = 1e-9
-
-STRETCHES_S = (Fraction(7), Fraction(41, 2))
-
 #: Slow to import; listing stages and checking a recipe must stay fast.
 HEAVY = ("scipy", "pandas", "pyarrow", "matplotlib", "pint")
-
-_NAME = re.compile(r"[a-z][a-z0-9_]*(\.[a-z][a-z0-9_]*)?\Z")
 
 
 def example_params(stage: Stage) -> Params:
@@ -78,6 +65,7 @@ def cases(stage: Stage) -> Iterator[Given]:
 
     The signal's unit is the first one that the example accepts.
     """
+    check_form(stage)
     params = example_params(stage)
     for kind in stage.kinds_taken(params):
         refusals = []
@@ -110,10 +98,10 @@ def _is_source(stage: Stage) -> bool:
     return stage.needs is not None
 
 
-def check_name(stage: Stage) -> None:
-    """Require a name such as ``family.method`` in lower case, and a version from 1."""
-    assert _NAME.match(stage.name), f"'{stage.name}': lower case, such as 'family.method'"
-    assert stage.version >= 1, f"{stage.name}: its version is {stage.version}, and starts at 1"
+def check_form(stage: Stage) -> None:
+    """Require what can be said of a stage as it stands: its name, kinds, functions, context."""
+    why = why_unfit(stage)
+    assert why is None, why
 
 
 def check_is_described(stage: Stage) -> None:
@@ -150,6 +138,12 @@ def check_example(stage: Stage) -> None:
     assert again == params, f"{stage.name}: {text} reads back as {again!r}, not {params!r}"
 
 
+def check_defaults(stage: Stage) -> None:
+    """Require that each default is a value as held, and would be accepted in a recipe."""
+    for text in unsound_defaults(stage.params, stage.example):
+        raise AssertionError(f"{stage.name}: {text}")
+
+
 def check_is_light_to_import(stage: Stage) -> None:
     """Require that heavy libraries are imported inside functions.
 
@@ -163,7 +157,8 @@ def check_is_light_to_import(stage: Stage) -> None:
     if found is None or module == "__main__":
         return
     code = f"import {module}, sys; print(*({set(HEAVY)!r} & set(sys.modules)))"
-    child = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True)
+    env = {**os.environ, "PYTHONPATH": os.pathsep.join(filter(None, sys.path))}
+    child = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, env=env)
     assert child.returncode == 0, f"{stage.name}: {module} cannot be imported: {child.stderr}"
     loaded = child.stdout.split()
     assert not loaded, f"{stage.name}: importing it imports {', '.join(sorted(loaded))}"
@@ -171,20 +166,47 @@ def check_is_light_to_import(stage: Stage) -> None:
 
 def check_spec_without_rate(stage: Stage) -> None:
     """Require that the recipe alone can be checked: a rate that is not known is no error."""
-    findings = Findings(lambda message, at: None, lambda message, at: None)
     params = example_params(stage)
-    if _is_source(stage):
-        stage.spec(params, SignalSpec("random", "uV"), findings)
+    specs = [SignalSpec("random", "uV")] if _is_source(stage) else [c.spec for c in cases(stage)]
+    for spec in specs:
+        findings = Findings(lambda message, at: None, lambda message, at: None)
+        try:
+            stage.spec(params, _without_rate(spec), findings)
+        except Exception as error:
+            raise AssertionError(
+                f"{stage.name}: its spec fails where only the recipe is known, and rate_hz is "
+                f"None: {type(error).__name__}: {error}"
+            ) from error
+
+
+def _without_rate(spec: Spec) -> Spec:
+    if isinstance(spec, SignalSpec):
+        return replace(spec, rate_hz=None)
+    unknown = replace(spec, signal=replace(spec.signal, rate_hz=None))
+    if isinstance(unknown, SpectraSpec):
+        return replace(unknown, resolution_hz=None, bin_hz=None, top_hz=None)
+    return unknown
+
+
+def check_derive(stage: Stage) -> None:
+    """Require that what is derived at a known rate is a list of `Derived`, each number finite."""
+    if stage.derive is None:
         return
-    for case in cases(stage):
-        spec = case.spec
-        if isinstance(spec, SignalSpec):
-            stage.spec(params, replace(spec, rate_hz=None), findings)
-            continue
-        unknown = replace(spec, signal=replace(spec.signal, rate_hz=None))
-        if isinstance(unknown, SpectraSpec):
-            unknown = replace(unknown, resolution_hz=None, bin_hz=None, top_hz=None)
-        stage.spec(params, unknown, findings)
+    params = example_params(stage)
+    specs = [SignalSpec("random", "uV", None, rate_hz) for rate_hz in RATES_HZ]
+    for spec in specs if _is_source(stage) else [case.spec for case in cases(stage)]:
+        items: object = stage.derive(params, spec)
+        assert isinstance(items, list | tuple), f"{stage.name}: derive gives {items!r}, no list"
+        for item in items:
+            assert isinstance(item, Derived), f"{stage.name}: derive gives {item!r}, no Derived"
+            assert item.quantity.strip(), f"{stage.name}: a derived value has no name: {item!r}"
+            value: object = item.value
+            known = isinstance(value, str | int | float) and not isinstance(value, bool)
+            finite = known and (isinstance(value, str) or isfinite(value))  # type: ignore[arg-type]
+            assert finite, (
+                f"{stage.name}: derived '{item.quantity}' is {value!r}: give a finite float, an "
+                "int or a text"
+            )
 
 
 def check_spec_agrees_with_data(stage: Stage) -> None:
@@ -196,6 +218,7 @@ def check_spec_agrees_with_data(stage: Stage) -> None:
         spec, out = announced(stage, params, case.spec), run_whole(stage, params, case.data)
         for text in disagreements(spec, case.data, out):
             raise AssertionError(f"{stage.name}: {text}")
+        require_finite(stage, out)
 
 
 def check_input_is_not_written(stage: Stage) -> None:
@@ -236,11 +259,11 @@ def check_context(stage: Stage) -> None:
     params = example_params(stage)
     for case in cases(stage):
         if isinstance(stage.context, EachRow):
-            _prove_each_row(stage, params, case)
+            prove_each_row(stage, params, case)
         elif isinstance(stage.context, Whole):
-            _prove_whole(stage, params, case, stage.context)
+            prove_whole(stage, params, case, stage.context)
         else:
-            _prove_reach(stage, params, case)
+            prove_reach(stage, params, case)
 
 
 def check_response(stage: Stage) -> None:
@@ -252,81 +275,29 @@ def check_response(stage: Stage) -> None:
         prove_response(stage, example_params(stage), case.spec)
 
 
-def _prove_reach(stage: Stage, params: Params, case: Given) -> None:
-    """Require that run by stretches equals run whole, masks to the letter."""
-    assert isinstance(case.spec, SignalSpec), f"{stage.name}: a reach is for stages on signals"
-    assert callable(stage.context)
-    reach = stage.context(params, case.spec)
-    assert isinstance(reach, Reach), f"{stage.name}: its context is no Reach but {reach!r}"
-    # Long enough that stretches in the middle see neither end.
-    long_s = min(600, max(100, int(3 * (reach.before_s + reach.after_s)) + 60))
-    assert case.spec.rate_hz is not None
-    data = random_signal(case.spec.unit, case.spec.rate_hz, long_s)
-    whole = run_whole(stage, params, data)
-    tolerance = STRETCH_TOLERANCE * float(np.max(np.abs(data.x)))
-    if isinstance(whole, Signal):
-        whole = whole.cut(data.piece.start_s, data.piece.stop_s)
-        tolerance = max(tolerance, STRETCH_TOLERANCE * float(np.max(np.abs(whole.x), initial=0)))
-    for stretch_s in STRETCHES_S:
-        joined = run_by_stretches(stage, params, data, stretch_s, case.spec)
-        found = difference(joined, whole, tolerance)
-        assert not found, (
-            f"{stage.name}: run by stretches of {float(stretch_s):g} s and whole, {found}. "
-            "Its context is too short, or it depends on where its input begins"
-        )
-
-
-def _prove_each_row(stage: Stage, params: Params, case: Given) -> None:
-    """Require that some rows alone give what they give among the others, to the bit."""
-    data = case.data
-    assert isinstance(data, InRows), f"{stage.name}: signals have no rows"
-    whole = run_whole(stage, params, data)
-    if not isinstance(whole, InRows):
-        return  # a request for a table holds no rows
-    count = len(data) if isinstance(data, Epochs) else len(data.rows)
-    every = np.arange(count, dtype=np.int64)
-    for places in (every[1::2], every[: count // 3], every[-1:], every[:0]):
-        some = run_whole(stage, params, take_rows(data, places))
-        found = difference(some, take_rows(whole, places))
-        assert not found, (
-            f"{stage.name}: {places.size} of {count} rows alone and among the others, {found}. "
-            "A row may depend on no other row, not even in the last bit"
-        )
-
-
-def _prove_whole(stage: Stage, params: Params, case: Given, context: Whole) -> None:
-    """Require that what is combined does not depend on the cuts, nor what is applied."""
-    state = context.combine(params, [context.collect(params, case.data)])
-    whole = run_whole(stage, params, case.data)
-    for count in (3, 64):  # some of 64 are empty
-        parts = in_parts(case.data, count)
-        again = context.combine(params, [context.collect(params, part) for part in parts])
-        scale = max((float(np.nanmax(np.abs(a), initial=0)) for a in _numbers(state)), default=0.0)
-        found = difference(again, state, COMBINE_TOLERANCE * scale)
-        assert not found, f"{stage.name}: combined from {count} parts and from one, {found}"
-        if context.apply is None:
-            continue
-        outs = [context.apply(params, part, state) for part in parts]
-        for out, part in zip(outs, in_parts(whole, count), strict=True):
-            found = difference(out, part)
-            assert not found, f"{stage.name}: applied to one of {count} parts and whole, {found}"
-
-
-def _numbers(value: object) -> Iterator[np.ndarray[Any, Any]]:
-    return (array for array in arrays_in(value) if array.dtype.kind == "f" and array.size)
+def check_masks(stage: Stage) -> None:
+    """Prove that a filter widens masks, and masks the ends of a piece, by its response."""
+    params = example_params(stage)
+    if _is_source(stage) or not callable(stage.context):
+        return
+    for case in cases(stage):
+        prove_masks(stage, params, case)
 
 
 CHECKS: tuple[Callable[[Stage], None], ...] = (
-    check_name,
+    check_form,
     check_is_described,
     check_parameters_are_described,
     check_refuses_unknown_parameters,
     check_example,
+    check_defaults,
     check_is_light_to_import,
     check_spec_without_rate,
+    check_derive,
     check_spec_agrees_with_data,
     check_input_is_not_written,
     check_same_twice,
     check_context,
+    check_masks,
     check_response,
 )

@@ -1,6 +1,6 @@
 """Random data of every kind, for the checks that a stage's author runs."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from fractions import Fraction
 
 import numpy as np
@@ -84,13 +84,9 @@ def random_signal(unit: str, rate_hz: Fraction, length_s: int) -> Signal:
     Artefacts, flat stretches and masks lie every ten seconds or so, and so about the borders of
     stretches, wherever they are.
     """
-    rng = np.random.default_rng([_SEED, int(rate_hz), length_s])
-    count = int(length_s * rate_hz)
-    time_s = np.arange(count) / float(rate_hz)
-    drift = np.cumsum(rng.standard_normal(count)) * 20 / np.sqrt(count)
-    rhythm = 15 * np.sin(2 * np.pi * 10.3 * time_s) + 8 * np.sin(2 * np.pi * 1.2 * time_s)
-    x = 40 + 10 * rng.standard_normal(count) + drift + rhythm
-    start_s = Fraction(1237, 1000)
+    calm = calm_signal(unit, rate_hz, length_s)
+    rng = np.random.default_rng([_SEED, int(rate_hz), length_s, 1])
+    x, start_s = calm.x.copy(), calm.start_s
     masks = []
     for k in range(1, length_s // 10):
         centre_s = 10 * k + Fraction(int(rng.integers(-800, 800)), 1000)
@@ -103,6 +99,18 @@ def random_signal(unit: str, rate_hz: Fraction, length_s: int) -> Signal:
         elif k % 4 == 3:
             mask_s = start_s + centre_s
             masks.append(Exclusion(mask_s, mask_s + wide / rate_hz, f"planted {k % 3}"))
+    return replace(calm, x=x, excluded=merged(masks))
+
+
+def calm_signal(unit: str, rate_hz: Fraction, length_s: int) -> Signal:
+    """Return a whole piece of noise, drift, offset and a rhythm, much the same throughout."""
+    rng = np.random.default_rng([_SEED, int(rate_hz), length_s])
+    count = int(length_s * rate_hz)
+    time_s = np.arange(count) / float(rate_hz)
+    drift = np.cumsum(rng.standard_normal(count)) * 20 / np.sqrt(count)
+    rhythm = 15 * np.sin(2 * np.pi * 10.3 * time_s) + 8 * np.sin(2 * np.pi * 1.2 * time_s)
+    x = 40 + 10 * rng.standard_normal(count) + drift + rhythm
+    start_s = Fraction(1237, 1000)
     stop_s = start_s + count / rate_hz
     some = Fraction(1, 3) * length_s
     conditions = (
@@ -111,7 +119,7 @@ def random_signal(unit: str, rate_hz: Fraction, length_s: int) -> Signal:
         Condition(start_s + some, stop_s - 1, "late"),
     )
     piece = Interval(start_s, stop_s)
-    return Signal("random", unit, rate_hz, start_s, x, piece, merged(masks), conditions)
+    return Signal("random", unit, rate_hz, start_s, x, piece, (), conditions)
 
 
 def random_epochs(signal: Signal) -> Epochs:

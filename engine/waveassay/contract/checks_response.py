@@ -6,20 +6,21 @@ from typing import Any
 
 import numpy as np
 
-from waveassay.contract.checks_data import random_signal
+from waveassay.contract.checks_context import length_for, reach_of
+from waveassay.contract.checks_data import calm_signal, random_signal
 from waveassay.contract.checks_running import common_step_s, difference
 from waveassay.contract.kinds import Floats, Signal
 from waveassay.contract.params import Params
 from waveassay.contract.spec import SignalSpec
-from waveassay.contract.stage import Reach, Stage
+from waveassay.contract.stage import Stage
 
-#: The response and the function may be this share of the largest sample (in or out) apart, away
-#: from the ends of a piece: ten times what the declared reach may leave out.
+#: The response and the function may be this share of the root mean square (of the largest sample
+#: beside artefacts) apart, away from the ends of a piece: ten times what a reach may leave out.
 RESPONSE_TOLERANCE = 1e-9
 
 
 def prove_response(stage: Stage, params: Params, given: SignalSpec) -> None:
-    """Require that gain and mask give what `run` gives, on a random signal."""
+    """Require that gain and mask give what `run` gives, on random signals."""
     rate_hz = given.rate_hz
     assert stage.response is not None, f"{stage.name} declares no response"
     assert rate_hz is not None, "the check's signals have a rate"
@@ -27,23 +28,27 @@ def prove_response(stage: Stage, params: Params, given: SignalSpec) -> None:
         f"{stage.name}: a response says what `run` does, and there is none"
     )
     assert callable(stage.context), f"{stage.name}: a response goes with a reach as context"
-    reach = stage.context(params, given)
-    assert isinstance(reach, Reach), f"{stage.name}: its context is no Reach but {reach!r}"
-    long_s = min(600, max(100, int(2 * (reach.before_s + reach.after_s)) + 60))
-    signal = random_signal(given.unit, rate_hz, long_s)
-    out = stage.run(params, signal)
-    assert isinstance(out, Signal), f"{stage.name}: a response gives signals"
-    step_s = common_step_s([rate_hz, out.rate_hz])
-    middle_s = signal.piece.start_s + signal.piece.length_s / 3 // step_s * step_s
-    for part in (signal, signal.cut(middle_s, middle_s + 30)):
+    reach = reach_of(stage, params, given)
+    long_s = length_for(reach)
+    planted = random_signal(given.unit, rate_hz, long_s)
+    for signal in (planted, calm_signal(given.unit, rate_hz, long_s)):
+        out = stage.run(params, signal)
+        assert isinstance(out, Signal), f"{stage.name}: a response gives signals"
+        new_rate_hz = out.rate_hz
+        made = _filtered(stage, params, given, signal.x, new_rate_hz / rate_hz)
+        first, last = signal.piece.start_s + reach.before_s, signal.piece.stop_s - reach.after_s
+        low, high = max(0, out.index_at(first)), min(out.index_at(last), out.x.size)
+        assert high - low > out.x.size // 10, (
+            f"{stage.name}: its reach leaves too little to compare"
+        )
+        sizes = [np.max(np.abs(x)) if signal is planted else np.std(x) for x in (signal.x, out.x)]
+        tolerance = RESPONSE_TOLERANCE * float(max(sizes))
+        told = difference(made[low:high], out.x[low:high], tolerance)
+        assert not told, f"{stage.name}: its response and its function are not the same: {told}"
+    step_s = common_step_s([rate_hz, new_rate_hz])
+    middle_s = planted.piece.start_s + planted.piece.length_s / 3 // step_s * step_s
+    for part in (planted, planted.cut(middle_s, middle_s + 30)):
         _prove_masks(stage, params, part)
-    made = _filtered(stage, params, given, signal.x, out.rate_hz / rate_hz)
-    first, last = signal.piece.start_s + reach.before_s, signal.piece.stop_s - reach.after_s
-    low, high = max(0, out.index_at(first)), min(out.index_at(last), out.x.size)
-    assert high - low > out.x.size // 10, f"{stage.name}: its reach leaves too little to compare"
-    largest = max(float(np.max(np.abs(signal.x))), float(np.max(np.abs(out.x))))
-    told = difference(made[low:high], out.x[low:high], RESPONSE_TOLERANCE * largest)
-    assert not told, f"{stage.name}: its response and its function are not the same: {told}"
 
 
 def _prove_masks(stage: Stage, params: Params, given: Signal) -> None:

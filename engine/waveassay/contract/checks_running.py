@@ -21,7 +21,7 @@ from waveassay.contract.kinds import (
 )
 from waveassay.contract.params import Params
 from waveassay.contract.spec import Findings, SignalSpec, Spec
-from waveassay.contract.stage import Reach, Stage, Whole
+from waveassay.contract.stage import Stage, Whole
 
 InRows = Epochs | Spectra | Features
 
@@ -43,7 +43,13 @@ def announced(stage: Stage, params: Params, spec_in: Spec) -> Spec:
     def refuse(message: str, at: str) -> None:
         refusals.append(f"{at}: {message}" if at else message)
 
-    spec_out = stage.spec(params, spec_in, Findings(refuse, lambda message, at: None))
+    try:
+        spec_out = stage.spec(params, spec_in, Findings(refuse, lambda message, at: None))
+    except (AttributeError, TypeError) as error:
+        raise AssertionError(
+            f"{stage.name}: its spec fails when given a {type(spec_in).__name__}, as its 'takes' "
+            f"says: {type(error).__name__}: {error}"
+        ) from error
     if refusals:
         raise Refused("; ".join(refusals))
     return spec_out
@@ -55,8 +61,7 @@ def run_whole(stage: Stage, params: Params, data: Data) -> Any:
     if isinstance(context, Whole):
         state = context.combine(params, [context.collect(params, data)])
         return state if context.apply is None else context.apply(params, data, state)
-    if stage.run is None:
-        raise TypeError(f"{stage.name} is a source: there is nothing to run")
+    assert stage.run is not None, f"{stage.name} has nothing to run: write run=run"
     return stage.run(params, data)
 
 
@@ -72,8 +77,6 @@ def run_by_stretches(
     assert stage.run is not None, f"{stage.name} has a reach, and nothing to run"
     assert callable(stage.context), f"{stage.name} declares no reach"
     reach = stage.context(params, spec_in)
-    assert isinstance(reach, Reach), f"{stage.name}: its context is no Reach but {reach!r}"
-    assert reach.before_s >= 0 <= reach.after_s, f"{stage.name}: its reach is negative: {reach}"
     spec_out = announced(stage, params, spec_in)
     rates = [signal.rate_hz]
     if isinstance(spec_out, SignalSpec) and spec_out.rate_hz is not None:
@@ -101,7 +104,7 @@ def run_by_stretches(
 
 
 def common_step_s(rates_hz: Sequence[Fraction]) -> Fraction:
-    """Return the shortest time that is a whole number of samples at every rate."""
+    """Return the shortest time that is a whole number of samples at each of the rates."""
     return Fraction(
         lcm(*(rate.denominator for rate in rates_hz)), gcd(*(rate.numerator for rate in rates_hz))
     )

@@ -145,6 +145,16 @@ class Signal:
             unit=self.unit if unit is None else unit,
         )
 
+    def masked(self, ignoring: Iterable[str] = ()) -> Bools:
+        """Tell which samples lie in masked time, shape (n,); some reasons may be ignored."""
+        ignored = set(ignoring)
+        found = np.zeros(self.x.size, np.bool_)
+        for item in self.excluded:
+            if item.reason not in ignored:
+                first, last = (max(0, self.index_at(t)) for t in (item.start_s, item.stop_s))
+                found[first:last] = True
+        return found
+
     def excluding(self, more: Iterable[Exclusion]) -> "Signal":
         """Return the signal with more time masked."""
         return replace(self, excluded=merged((*self.excluded, *more)))
@@ -188,6 +198,25 @@ class Signal:
         return replace(
             self, x=self.x[first:last], start_s=self.time_s(first), excluded=merged(kept)
         )
+
+
+def exclusions_of(signal: Signal, where: Bools, reason: str) -> tuple[Exclusion, ...]:
+    """Return the time of marked samples, for `Signal.excluding`; a run of them is one exclusion.
+
+    A sample takes the time from its own to the next one's. ``where`` has one mark a sample.
+
+    Raises
+    ------
+    ValueError
+        When there are more or fewer marks than samples.
+    """
+    if where.shape != signal.x.shape:
+        raise ValueError(f"{signal.x.size} samples need as many marks, not {where.shape}")
+    edges = np.flatnonzero(np.diff(where.astype(np.int8), prepend=0, append=0))
+    return tuple(
+        Exclusion(signal.time_s(start), signal.time_s(stop), reason)
+        for start, stop in edges.reshape(-1, 2).tolist()
+    )
 
 
 @dataclass(frozen=True)

@@ -12,7 +12,8 @@ from waveassay.contract.params import Params
 from waveassay.contract.response import Response
 from waveassay.contract.spec import Derived, Findings, Spec
 
-#: A moment of a filter's output may depend on samples outside its reach by at most this share.
+#: A moment of a filter's output may depend on samples outside its reach by at most this share
+#: of the largest of them.
 REACH_TOLERANCE = 1e-10
 
 
@@ -41,7 +42,8 @@ class Whole:
 
     ``collect(params, data)`` is run on each stretch and returns named arrays, as small as may be.
     ``combine(params, parts)`` is run once a signal, on the parts in order of time.
-    Without ``apply``, what it returns is the output (an average, a figure). With ``apply``, it
+    Without ``apply``, what it returns is the output (an average, a figure; the parts of a figure
+    also hold ``recording``, its recording's name, for the title). With ``apply``, it
     returns named arrays again, and ``apply(params, data, state)`` turns each stretch into output.
     """
 

@@ -2,10 +2,12 @@
 
 import json
 from collections import defaultdict
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
+
+import numpy as np
 
 from waveassay.contract import (
     Data,
@@ -117,7 +119,7 @@ def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
     figures: list[dict[str, str]] = []
     units: dict[tuple[str, str], str] = {}
     for lane_no, lane in enumerate(passage.lanes):
-        values = _recording_values(lane_no, lane, gathered)
+        values = _recording_values(passage.recording, lane_no, lane, gathered)
         blocks += _epoch_blocks(lane_no, lane, gathered)
         average_blocks += _average_blocks(lane, values)
         figures += _save_figures(lane, values, folder)
@@ -134,9 +136,12 @@ def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
         )  # fmt: skip
     facts: dict[str, Any] = {
         "warnings": [
-            f"{passage.lanes[lane].label}: some samples lie outside the digital limits of the "
-            "header; they are used as they are"
-            for lane in sorted(gathered.outside)
+            *(
+                f"{passage.lanes[lane].label}: some samples lie outside the digital limits of the "
+                "header; they are used as they are"
+                for lane in sorted(gathered.outside)
+            ),
+            *_without_epochs(passage, blocks),
         ],
         "excluded": excluded,
         "figures": figures,
@@ -166,7 +171,27 @@ def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
     (folder / FACTS_FILE).write_text(json.dumps(facts, sort_keys=True))
 
 
-def _recording_values(lane_no: int, lane: Lane, gathered: Gathered) -> dict[int, Data]:
+def _without_epochs(passage: Passage, blocks: Sequence[Block]) -> Iterator[str]:
+    """Yield a warning for each condition of a signal that gave nothing."""
+    for block in blocks:
+        kept = dict.fromkeys((c.name for c in passage.conditions), 0)
+        rows = dict(kept)
+        for name, is_kept in zip(block.rows.condition, block.rows.kept, strict=True):
+            rows[name] += 1
+            kept[name] += int(is_kept)
+        for name, count in kept.items():
+            if count == 0:
+                why = (
+                    "no epoch fits in it"
+                    if rows[name] == 0
+                    else f"none of {rows[name]} epochs is kept"
+                )
+                yield f"{passage.chain.name}: condition {name} of {block.signal}: {why}"
+
+
+def _recording_values(
+    recording: str, lane_no: int, lane: Lane, gathered: Gathered
+) -> dict[int, Data]:
     """Run the steps that need the whole, and those that follow them."""
     values: dict[int, Data] = {}
     for move in lane.program.moves.values():
@@ -180,6 +205,8 @@ def _recording_values(lane_no: int, lane: Lane, gathered: Gathered) -> dict[int,
             parts = [collect_move(move, values[move.source])]
         else:
             parts = gathered.parts(f"{lane_no}.{move.index}.part.")
+        if move.step.given is Kind.FIGURE:
+            parts = [{**part, "recording": np.array(recording)} for part in parts]
         if parts:
             values[move.index] = combine_move(move, parts)
     return values
@@ -206,9 +233,10 @@ def _average_blocks(lane: Lane, values: Mapping[int, Data]) -> list[Block]:
 
 
 def _save_figures(lane: Lane, values: Mapping[int, Data], folder: Path) -> list[dict[str, str]]:
-    saved = []
+    saved: list[dict[str, str]] = []
     for index, data in values.items():
         if isinstance(data, Figure):
+            alike = sum(known["show"] == data.show for known in saved)
             name = f"figure-{lane.channel}-{index}.png"
             (folder / name).write_bytes(data.png)
             step = lane.program.moves[index].step
@@ -217,7 +245,7 @@ def _save_figures(lane: Lane, values: Mapping[int, Data], folder: Path) -> list[
                     "file": name,
                     "signal": data.signal,
                     "show": data.show,
-                    "step": step.alias or step.name,
+                    "name": step.alias or (f"{data.show}-{alike + 1}" if alike else data.show),
                     "caption": data.caption,
                 }
             )

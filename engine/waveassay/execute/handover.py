@@ -3,6 +3,7 @@
 import json
 import shutil
 from collections.abc import Sequence
+from functools import lru_cache
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any, Literal
@@ -37,7 +38,7 @@ def read_recording(
         facts = digests.facts(
             found.path,
             lambda: read_facts(found.path, truncated=truncated).to_json(),
-            version=f"{version('waveassay')} {truncated}",
+            version=f"{_own_version()} {truncated}",
         )
         return ReadRecording(digests.digest(found.path), Facts.from_json(facts))
     except OSError as error:
@@ -45,6 +46,11 @@ def read_recording(
             f"{found.path}: cannot be read: {error.strerror}. Check the file and your right to "
             "read it."
         ) from error
+
+
+@lru_cache(maxsize=1)
+def _own_version() -> str:
+    return version("waveassay")
 
 
 def write_work(

@@ -25,13 +25,13 @@ from waveassay.execute.results import (
 from waveassay.execute.runner import JobEvent, Runner
 from waveassay.execute.store import Store
 from waveassay.execute.work import Failure
-from waveassay.plan.jobs import Job, group_into_jobs, missing_tasks
+from waveassay.plan.jobs import LOCAL, Job, JobLength, group_into_jobs, missing_tasks
 from waveassay.plan.plan import Plan, ReadRecording, make_plan, run_digest
 from waveassay.plan.recordings import Found
 from waveassay.provenance.environment import environment
 from waveassay.provenance.recording_digests import RecordingDigests
 from waveassay.provenance.results import Result
-from waveassay.provenance.run_folder import RunFolder, finished_run
+from waveassay.provenance.run_folder import RunFolder, finished_run, notes_on
 from waveassay.recipe.model import Recipe
 
 
@@ -53,6 +53,7 @@ class RunOutcome:
     already : the same run was finished before; nothing was computed and nothing written.
     computed, reused : tasks done now, and results taken from the store.
     timings_s : wall seconds by part.
+    notes : what the user should know of earlier runs in the same place.
     """
 
     folder: Path
@@ -62,6 +63,7 @@ class RunOutcome:
     computed: int = 0
     reused: int = 0
     timings_s: Mapping[str, float] = field(default_factory=dict)
+    notes: Sequence[str] = ()
 
 
 class InterruptedRunError(WaveassayError):
@@ -82,6 +84,7 @@ def run_recipe(
     workers: int,
     runner: Runner,
     watcher: Watcher | None = None,
+    job_length: JobLength = LOCAL,
 ) -> RunOutcome:
     """Run a recipe over recordings and return how it ended.
 
@@ -110,7 +113,7 @@ def run_recipe(
             seconds = time.monotonic() - started
             return RunOutcome(*finished, already=True, timings_s={"all": seconds})
         reading_s = time.monotonic() - started
-        run = _Run(recipe, store, workers, runner, watcher)
+        run = _Run(recipe, store, workers, runner, watcher, job_length)
         with store.in_use():
             return run.over(found, read, into / "runs", known, reading_s)
 
@@ -122,6 +125,7 @@ class _Run:
     workers: int
     runner: Runner
     watcher: Watcher
+    job_length: JobLength
 
     def over(
         self,
@@ -133,23 +137,24 @@ class _Run:
     ) -> RunOutcome:
         """Plan, compute what the store lacks, and write the run folder."""
         clock = _Clock({"reading": reading_s})
+        notes = notes_on(runs, self.recipe)
         env = environment(installed_bundles())
         folder = RunFolder.open(runs, self.recipe)
         folder.begin(known, env, workers=self.workers, recordings=len(found))
         plan = make_plan(self.recipe, found, read)
         todo = [missing_tasks(item.tasks, self.store.has) for item in plan.recordings]
-        jobs = group_into_jobs(todo, self.workers)
+        jobs = group_into_jobs(todo, self.workers, self.job_length)
         self.watcher.planned(len(jobs), sum(job.cost_s for job in jobs))
         clock.lap("planning")
         failures = self._compute(plan, jobs, env, folder) if jobs else {}
         clock.lap("jobs")
         computed = {task.key for tasks in todo for task in tasks}
         results = collect_results(plan, self.store, failures)
+        steps = list(step_rows(plan, self.store, computed, results))
+        used = sorted({name for row in steps for name in row[-1].split(";") if name})
+        records = [self.store.root / "environments" / f"{name}.json" for name in used]
         results_digest = folder.complete(
-            self.recipe,
-            results,
-            step_rows(plan, self.store, computed, results),
-            derived_rows(plan, results),
+            self.recipe, results, steps, derived_rows(plan, results), records
         )
         clock.lap("tables")
         return RunOutcome(
@@ -159,6 +164,7 @@ class _Run:
             computed=len(computed),
             reused=len({task.key for item in plan.recordings for task in item.tasks} - computed),
             timings_s=clock.laps_s,
+            notes=notes,
         )
 
     def _compute(

@@ -267,7 +267,7 @@ def _inside(name: str, start_s: Fraction, stop_s: Fraction, duration_s: Fraction
     out_s = max(begin_s - start_s, stop_s - end_s)
     if out_s > CLIPPED_S or end_s <= begin_s:
         raise _Unresolved(
-            f"condition {name}, from {_time(start_s)} to {_time(stop_s)}, stands out of the "
+            f"condition {name}, from {_time(start_s)} to {_time(stop_s)}, lies outside the "
             f"recording, which is {_time(duration_s)} long; shorten it in the recipe, or leave "
             "this recording out"
         )

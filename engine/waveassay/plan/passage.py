@@ -132,8 +132,8 @@ def _passage(
     conditions: tuple[Condition, ...],
     matched: Mapping[str, tuple[tuple[str, int], ...]],
 ) -> Passage:
-    refusals: list[str] = []
-    warnings: list[str] = []
+    refusals: dict[str, list[str]] = {}
+    warnings: dict[str, list[str]] = {}
     planned: list[tuple[str, str, SignalFacts, float, SignalSpec, Program]] = []
     for role in chain.signals:
         rule = recipe.signals[role]
@@ -144,29 +144,42 @@ def _passage(
             folded = fold(chain, spec, rule=role)
             for finding in folded.findings:
                 step = chain.steps[finding.step_index]
-                text = f"{chain.name}.{step.name}: {finding.message} (signal {name})"
-                (refusals if finding.severity == "error" else warnings).append(text)
+                line = (step.places.get(finding.at) or step.places[""]).line
+                text = f"{chain.name}.{step.name} (line {line}): {finding.message}"
+                told = refusals if finding.severity == "error" else warnings
+                told.setdefault(text, []).append(name)
             program = compile_program(chain, role, spec, folded)
             planned.append((name, role, file_signal, scale, spec, program))
     if refusals:
-        raise SignalError("; ".join(dict.fromkeys(refusals)))
+        raise SignalError("; ".join(_with_signals(refusals)))
     whole = any(program.whole_pieces() for *_, program in planned)
     lanes = []
     for name, role, file_signal, scale, spec, program in planned:
-        warnings.extend(_short_pieces(chain, name, program, facts.pieces))
+        for text in _short_pieces(chain, program, facts.pieces):
+            warnings.setdefault(text, []).append(name)
         step_s = program.grid_step_s
         borders = tuple(bounds_s(piece, step_s, whole=whole) for piece in facts.pieces)
         lanes.append(
             Lane(name, role, file_signal.index, file_signal.label, scale, spec, program, borders)
         )
     return Passage(
-        recording, sha256, chain, facts.pieces, conditions, tuple(lanes), columns, tuple(warnings)
+        recording,
+        sha256,
+        chain,
+        facts.pieces,
+        conditions,
+        tuple(lanes),
+        columns,
+        tuple(_with_signals(warnings)),
     )
 
 
-def _short_pieces(
-    chain: Chain, signal: str, program: Program, pieces: tuple[Interval, ...]
-) -> list[str]:
+def _with_signals(told: Mapping[str, list[str]]) -> list[str]:
+    """Return each message once, with the signals that it concerns."""
+    return [f"{text} (signal {', '.join(dict.fromkeys(names))})" for text, names in told.items()]
+
+
+def _short_pieces(chain: Chain, program: Program, pieces: tuple[Interval, ...]) -> list[str]:
     response_s = max(
         (
             move.spec_out.response_s
@@ -177,7 +190,7 @@ def _short_pieces(
     )
     return [
         f"{chain.name}: piece {number} is {float(piece.length_s):g} s long, shorter than the "
-        f"response of its filters ({response_s:.3g} s above 1 %) (signal {signal})"
+        f"response of its filters ({response_s:.3g} s above 1 %)"
         for number, piece in enumerate(pieces, start=1)
         if float(piece.length_s) < response_s
     ]

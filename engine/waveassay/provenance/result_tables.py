@@ -108,6 +108,47 @@ _MEANINGS: dict[str, dict[str, tuple[str, str]]] = {
 }
 
 
+_MEANINGS |= {
+    "recordings": {
+        "recording": ("", "name of the recording: its path below the folder given"),
+        "path": ("", "its file, as it was named"),
+        "sha256": ("", "digest of the file's bytes"),
+        "start": ("", "date and time of the first sample, as the file has it"),
+        "duration_s": ("s", "from the first sample to the last, gaps included"),
+        "status": ("", "done, done_with_warnings or failed"),
+        "chain": ("", "chain in which it failed"),
+        "step": ("", "step at which it failed"),
+        "message": ("", "why it failed, or what to be warned of"),
+    },
+    "parameters": {
+        "step": ("", "chain and step; or the signal or condition of the recipe"),
+        "parameter": ("", "its name; a dot leads into a mapping"),
+        "value": ("", "its value; null where the stage chooses, see derived.csv"),
+        "unit": ("", "unit of the value"),
+        "origin": ("", "recipe, default, or what the recipe's origins say: stated, assumed ..."),
+        "where": ("", "where the source states it, or why it was assumed"),
+    },
+    "derived": {
+        "recording": ("", "name of the recording"),
+        "chain": ("", "chain of the recipe"),
+        "step": ("", "step"),
+        "signal": ("", "name of the signal"),
+        "quantity": ("", "what follows from the parameters and the signal's rate"),
+        "value": ("see unit", "its value"),
+        "unit": ("", "unit of the value"),
+    },
+    "steps": {
+        "recording": ("", "name of the recording"),
+        "chain": ("", "chain of the recipe"),
+        "step": ("", "step"),
+        "key": ("", "digest of all that could change what the step's result holds"),
+        "digest": ("", "digest of what the result holds"),
+        "reused": ("", "whether all of it was in the store before this run"),
+        "environment": ("", "id of the environment that made it, see environment.json"),
+    },
+}
+
+
 def write_result_tables(
     folder: Path, columns: Mapping[str, Sequence[FeatureColumn]], results: Sequence[Result]
 ) -> None:
@@ -180,6 +221,6 @@ def _dictionary(
                 yield [place, column.name, column.unit, column.meaning, column.step]
         for name, (unit, meaning) in last:
             yield [place, name, unit, meaning, ""]
-    for table in ("summary", "excluded"):
+    for table in ("summary", "excluded", "recordings", "parameters", "derived", "steps"):
         for name, (unit, meaning) in _MEANINGS[table].items():
             yield [table, name, unit, meaning, ""]

@@ -10,9 +10,11 @@ from pathlib import Path
 from typing import Any
 
 from waveassay.plan.columns import columns_by_chain
+from waveassay.provenance.environment import environment_id
 from waveassay.provenance.files import machine_errors, write_text
 from waveassay.provenance.log import Log
 from waveassay.provenance.manifest import LOG, MANIFEST, read_manifest, write_manifest
+from waveassay.provenance.manifest_check import verify_manifest
 from waveassay.provenance.result_tables import write_result_tables
 from waveassay.provenance.results import Result
 from waveassay.provenance.tables import Column, write_csv
@@ -82,7 +84,8 @@ class RunFolder:
         self, run_digest: str, environment: dict[str, Any], *, workers: int, recordings: int
     ) -> None:
         """Write what is known before anything is computed."""
-        text = json.dumps(environment, indent=1, ensure_ascii=False)
+        known = {"id": environment_id(environment), **environment}
+        text = json.dumps(known, indent=1, ensure_ascii=False)
         write_text(self.path / "environment.json", text + "\n")
         self.log.append(
             "run_started", run_digest=run_digest, workers=workers, recordings=recordings
@@ -92,18 +95,27 @@ class RunFolder:
         self,
         recipe: Recipe,
         results: Sequence[Result],
-        steps: Iterable[Sequence[Any]],
+        steps: Sequence[Sequence[Any]],
         derived: Iterable[Sequence[Any]],
+        environments: Iterable[Path],
     ) -> str:
-        """Write every table and figure, then the manifest; return the results digest."""
+        """Write every table and figure, then the manifest; return the results digest.
+
+        Parameters
+        ----------
+        environments : the records of all environments that ``steps`` name.
+        """
         write_text(self.path / RESOLVED, resolved_yaml(recipe))
         self._write_parameters(recipe)
         self._write_recordings(results)
-        write_csv(self.path / "steps.csv", _STEP_COLUMNS, list(steps))
+        write_csv(self.path / "steps.csv", _STEP_COLUMNS, steps)
         write_csv(self.path / "derived.csv", _DERIVED_COLUMNS, list(derived))
         with machine_errors(self.path):
             write_result_tables(self.path, columns_by_chain(recipe), results)
             _copy_figures(self.path, results)
+            for record in environments:
+                (self.path / "environments").mkdir(exist_ok=True)
+                shutil.copyfile(record, self.path / "environments" / record.name)
         for result in results:
             self.log.append(
                 "recording",
@@ -137,21 +149,43 @@ def finished_run(
 ) -> tuple[Path, list[Result], str] | None:
     """Return the newest finished run that a new one would only repeat: folder, results, digest.
 
-    One in which a recording failed is not taken: a new run tries that recording again.
+    One in which a recording failed is not taken: a new run tries that recording again. Nor is one
+    that was changed after it was finished.
     """
     for folder in reversed(_folders(runs, recipe)):
         if not (folder / MANIFEST).exists() or not _same_recipe(folder, recipe):
             continue
-        lines = (folder / LOG).read_text(encoding="utf-8").splitlines()
-        events = [json.loads(line) for line in lines]
+        events = _events(folder)
         started = [event for event in events if event["event"] == "run_started"]
         ended = [event for event in events if event["event"] == "run_finished"]
         if started and ended and started[-1]["run_digest"] == run_digest:
-            if ended[-1]["failed"]:
-                return None
+            if ended[-1]["failed"] or verify_manifest(folder):
+                continue
             digest = read_manifest(folder).results_digest
             return folder, _read_results(folder), digest
     return None
+
+
+def notes_on(runs: Path, recipe: Recipe) -> list[str]:
+    """Return what a user should know of earlier runs of this name and edition."""
+    notes = []
+    for folder in _folders(runs, recipe):
+        if not (folder / MANIFEST).exists():
+            continue
+        if found := verify_manifest(folder):
+            notes.append(f"{folder.name} was changed after it was finished: {found[0].message}")
+        digests = [event.get("recipe_digest", "") for event in _events(folder)]
+        if digests and digests[-1] and digests[-1] != recipe.digest:
+            notes.append(
+                f"edition {recipe.edition} of {recipe.name} was run here with other content "
+                f"({folder.name}). Raise the edition when a number can change."
+            )
+    return notes[-3:]
+
+
+def _events(folder: Path) -> list[dict[str, Any]]:
+    lines = (folder / LOG).read_text(encoding="utf-8").splitlines()
+    return [json.loads(line) for line in lines]
 
 
 def _read_results(folder: Path) -> list[Result]:
@@ -188,9 +222,10 @@ def _copy_figures(folder: Path, results: Sequence[Result]) -> None:
     for result in results:
         for output in result.outputs:
             for figure in output.facts["figures"]:
-                name = "-".join((figure["signal"], figure["step"], figure["show"]))
-                safe = "".join(c if c.isalnum() or c in "-_." else "_" for c in name)
-                path = Path("figures", output.chain, result.recording, f"{safe}.png")
+                # The whole name stands in the file's: figures are sent on one by one.
+                file = f"{Path(result.recording).name}.{figure['signal']}.{figure['name']}.png"
+                safe = "".join(c if c.isalnum() or c in "-_." else "_" for c in file)
+                path = Path("figures", output.chain, result.recording).with_name(safe)
                 (folder / path).parent.mkdir(parents=True, exist_ok=True)
                 shutil.copyfile(output.folder / figure["file"], folder / path)
                 rows.append([path.as_posix(), figure["caption"]])

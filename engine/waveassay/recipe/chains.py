@@ -178,8 +178,21 @@ class _Resolver:
             self.report.error(place, "R304", f"'{name}' already names a signal", where)
         elif name in self.registry.stages or name in {step.name for step in self.read}:
             self.report.error(place, "R304", f"'{name}' is the name of a stage", where)
+        elif (other_step := self._unnamed(name, index)) is not None:
+            message = (
+                f"'{name}' is what the output of {other_step.name} (line {other_step.place.line}) "
+                "is called in tables already"
+            )
+            self.report.error(place, "R304", message, where)
         else:
             self.aliases[name] = index
+
+    def _unnamed(self, name: str, index: int) -> ReadStep | None:
+        """Return another step that goes by this name for want of an ``as``."""
+        for other, step in enumerate(self.read):
+            if other != index and step.alias is None and step.name.split(".", 1)[-1] == name:
+                return step
+        return None
 
     def _input(
         self, index: int, step: ReadStep, kinds: tuple[Kind, ...], named: int | None
@@ -274,4 +287,6 @@ def warn_of_unused(chain: str, steps: Sequence[Step], report: Report) -> None:
         if step.given in _NUMBERS and index < last_table:
             continue
         message = f"gives {_kind(step.given)} that no later step uses"
+        if step.given in _NUMBERS:
+            message += "; put an export.table behind it, or leave it out"
         report.warn(step.places[""], "W402", message, f"{chain}.{step.name}")

@@ -44,6 +44,7 @@ R310    a stage fails while it is checked: its author's to mend
 W401    a stage warns, seen in the chain as a whole
 W402    an output that nothing uses
 W403    a signal that no chain reads
+W404    a stage whose name another package claims too
 ======  ============================================================================
 
 Codes in Y concern the file as YAML, R1 the grammar, R2 values, R3 chains, W warnings.

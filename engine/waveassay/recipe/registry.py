@@ -6,14 +6,14 @@ fails is remembered and named where a stage is missed; it never stops the others
 
 import importlib
 import pkgutil
-import re
 from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 from functools import lru_cache
 from importlib.metadata import EntryPoint, entry_points
 from types import ModuleType
 
-from waveassay.contract import Kind, Params, Stage
+from waveassay.contract import Kind, Stage
+from waveassay.contract.checks_form import why_unfit
 from waveassay.recipe.problems import nearest
 
 GROUP = "waveassay.stages"
@@ -21,8 +21,6 @@ SHIPPED = "waveassay"
 
 #: Keys of a step that are not stages.
 STEP_KEYS = ("on", "as", "keep")
-
-_STAGE_NAME = re.compile(r"[a-z][a-z0-9_]*(\.[a-z][a-z0-9_]*)*\Z")
 
 
 @dataclass(frozen=True)
@@ -46,11 +44,17 @@ class BrokenBundle:
 
 @dataclass(frozen=True)
 class Registry:
-    """The installed stages by name, who owns them, and what did not load."""
+    """The installed stages by name, who owns them, and what did not load.
+
+    Attributes
+    ----------
+    claims : stage -> the modules that claim its name too, and are not used.
+    """
 
     stages: Mapping[str, Stage]
     owners: Mapping[str, str] = field(default_factory=dict)
     broken: tuple[BrokenBundle, ...] = ()
+    claims: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
 
     def unknown(self, name: str) -> str:
         """Return the message for a stage that is not there."""
@@ -103,6 +107,11 @@ def load_registry(points: Iterable[EntryPoint] | None = None) -> Registry:
         stages={name: claim.stage for name, claim in kept.items()},
         owners={name: claim.owner for name, claim in kept.items()},
         broken=tuple(broken),
+        claims={
+            name: tuple(_claimant(claim) for claim in claims[name] if claim is not winner)
+            for name, winner in kept.items()
+            if len(claims[name]) > 1
+        },
     )
 
 
@@ -158,20 +167,14 @@ def _modules(package: ModuleType, owner: str, broken: list[BrokenBundle]) -> Ite
 
 
 def _unfit(stage: object) -> str | None:
-    """Return why an object cannot serve as a stage, or None."""
-    if not isinstance(stage, Stage):
-        return "the module defines no STAGE"
-    name: object = stage.name  # a stranger's module may hold anything
-    if not isinstance(name, str) or not _STAGE_NAME.match(name):
-        return f"'{stage.name}' is no stage name; lower case, such as 'family.method'"
-    if stage.name in STEP_KEYS:
-        return f"'{stage.name}' is a key of the recipe grammar"
-    params: object = stage.params
-    if not (isinstance(params, type) and issubclass(params, Params)):
-        return f"the parameters of '{stage.name}' are no Params class"
-    if type(stage.version) is not int or stage.version < 1:
-        return f"the version of '{stage.name}' is no whole number from 1"
-    return None
+    """Return why an object cannot serve as a stage and what to write, or None."""
+    if isinstance(stage, Stage) and stage.name in STEP_KEYS:
+        return f"'{stage.name}' is a key of the recipe grammar; name the stage 'family.method'"
+    return why_unfit(stage)
+
+
+def _claimant(claim: _Claim) -> str:
+    return f"{claim.owner} ({claim.module})"
 
 
 def _settle(name: str, claims: list[_Claim], broken: list[BrokenBundle]) -> _Claim | None:
@@ -181,8 +184,8 @@ def _settle(name: str, claims: list[_Claim], broken: list[BrokenBundle]) -> _Cla
     for claim in claims:
         if claim is winner:
             continue
-        others = ", ".join(f"{c.owner} ({c.module})" for c in claims if c is not claim)
-        kept = "which keeps it" if winner is not None else "so neither has it"
+        others = ", ".join(_claimant(other) for other in claims if other is not claim)
+        kept = "which keeps it: rename yours" if winner else "so neither has it: rename one"
         broken.append(
             BrokenBundle(
                 claim.owner,

@@ -1,8 +1,10 @@
 """The recipe grammar as JSON Schema (draft 2020-12), with each installed stage's parameters."""
 
+import warnings
 from typing import Any
 
 from pydantic import BaseModel
+from pydantic.json_schema import PydanticJsonSchemaWarning
 
 from waveassay.contract import Params, Stage
 from waveassay.recipe.fields import plain
@@ -13,11 +15,18 @@ from waveassay.recipe.registry import Registry, load_registry
 DIALECT = "https://json-schema.org/draft/2020-12/schema"
 
 
-def recipe_schema(registry: Registry | None = None) -> dict[str, Any]:
+def recipe_schema(
+    registry: Registry | None = None, left_out: list[str] | None = None
+) -> dict[str, Any]:
     """Return the schema of a recipe as an editor wants it.
 
     It says what each key means and takes. What needs more than one place to be seen (a band above
-    the filter, a signal that is not described) only `check_recipe` finds.
+    the filter, a signal that is not described) only `check_recipe` finds. A stage whose parameters
+    have no schema is left out.
+
+    Parameters
+    ----------
+    left_out : a line is added for each stage that is left out, with the reason.
     """
     registry = load_registry() if registry is None else registry
     definitions: dict[str, Any] = {}
@@ -32,7 +41,7 @@ def recipe_schema(registry: Registry | None = None) -> dict[str, Any]:
         ),
         "origins": _named("origins", _model(Origin, "origin", definitions)),
     }
-    definitions["step"] = _step(registry, definitions)
+    definitions["step"] = _step(registry, definitions, [] if left_out is None else left_out)
     return {
         "$schema": DIALECT,
         "title": "A waveassay recipe",
@@ -58,9 +67,17 @@ def _named(section: str, item: dict[str, Any], least: int = 0) -> dict[str, Any]
     return {**schema, "minProperties": least} if least else schema
 
 
-def _step(registry: Registry, definitions: dict[str, Any]) -> dict[str, Any]:
-    stages = {name: _stage(stage, definitions) for name, stage in sorted(registry.stages.items())}
-    bare = [name for name, stage in sorted(registry.stages.items()) if not _needs(stage.params)]
+def _step(registry: Registry, definitions: dict[str, Any], left_out: list[str]) -> dict[str, Any]:
+    stages = {}
+    for name, stage in sorted(registry.stages.items()):
+        try:
+            made, own = _stage(stage)
+        except Exception as error:  # a stranger's parameters
+            left_out.append(f"{name} ({registry.owners.get(name, 'unknown')}): {no_schema(error)}")
+            continue
+        stages[name] = made
+        definitions |= own
+    bare = [name for name in stages if not _needs(registry.stages[name].params)]
     beside = {
         "on": {
             "description": "Signals that the step is limited to, or an earlier output to take.",
@@ -94,15 +111,26 @@ def _step(registry: Registry, definitions: dict[str, Any]) -> dict[str, Any]:
     return {"anyOf": [as_mapping, {"description": "A stage as it stands.", "enum": bare}]}
 
 
-def _stage(stage: Stage, definitions: dict[str, Any]) -> dict[str, Any]:
+def no_schema(error: Exception) -> str:
+    """Return in one line that a stage's parameters have no schema, and what its author does."""
+    text = " ".join(str(error).split())
+    return (
+        f"no schema of its parameters can be made ({type(error).__name__}: {text}); its author's "
+        "to mend: run waveassay.contract.checks on it"
+    )
+
+
+def _stage(stage: Stage) -> tuple[dict[str, Any], dict[str, Any]]:
+    """Return what stands for a stage among a step's keys, and its definitions."""
+    definitions: dict[str, Any] = {}
     params = _model(stage.params, stage.name, definitions)
     params["description"] = stage.summary
     params["examples"] = [dict(stage.example)]
     definitions[stage.name] = params
     reference = {"$ref": f"#/$defs/{stage.name}"}
     if _needs(stage.params):
-        return reference
-    return {"anyOf": [reference, {"type": "null"}]}
+        return reference, definitions
+    return {"anyOf": [reference, {"type": "null"}]}, definitions
 
 
 def _needs(params: type[Params]) -> bool:
@@ -111,11 +139,14 @@ def _needs(params: type[Params]) -> bool:
 
 def _model(model: type[BaseModel], prefix: str, definitions: dict[str, Any]) -> dict[str, Any]:
     """Return a model's schema; the models within go to the definitions, under its name."""
-    schema = model.model_json_schema(ref_template=f"#/$defs/{prefix}.{{model}}")
+    with warnings.catch_warnings():
+        # Of a default that cannot be written out; what is made of it below says so.
+        warnings.simplefilter("ignore", PydanticJsonSchemaWarning)
+        schema = model.model_json_schema(ref_template=f"#/$defs/{prefix}.{{model}}")
     for name, inner in schema.pop("$defs", {}).items():
         definitions[f"{prefix}.{name}"] = _tidied(inner)
     schema = dict(_tidied(schema))
-    shown = plain(model.model_construct())
+    shown = plain(model.model_construct())  # raises where a default is not of the field's type
     for name, field in model.model_fields.items():
         if not field.is_required() and name in shown:
             schema["properties"][name]["default"] = shown[name]  # as a recipe writes it

@@ -6,6 +6,7 @@ from dataclasses import dataclass, replace
 import yaml
 
 from waveassay.contract import Params, Stage
+from waveassay.recipe.fields import plain
 from waveassay.recipe.model import Place
 from waveassay.recipe.plain_words import validated
 from waveassay.recipe.problems import Report, nearest
@@ -119,6 +120,10 @@ class StepReader:
             report.error(place, "R104", self.registry.unknown(stage_name), self.chain)
         else:
             params = self._params(stage, body, place, where)
+            if others := ", ".join(self.registry.claims.get(stage_name, ())):
+                owner = self.registry.owners.get(stage_name, "unknown")
+                message = f"this is the stage of {owner}; its name is also claimed by {others}"
+                report.warn(place, "W404", message, where)
         alias = self._text(keys, "as", where)
         keep = keys["keep"][1] if "keep" in keys else None
         keeps = value_of(keep) if keep is not None else False
@@ -133,9 +138,12 @@ class StepReader:
         self, stage: Stage, body: yaml.Node | None, place: Place, where: str
     ) -> Params | None:
         try:
-            return validated(
+            params = validated(
                 stage.params, body, place, where, self.report, unknown="R201", missing="R202"
             )
+            if params is not None:
+                plain(params)  # fails where a default is not of its type
+            return params
         except Exception as error:  # a stranger's validator
             owner = self.registry.owners.get(stage.name, "unknown")
             message = (

@@ -1,11 +1,11 @@
 """What a window that slides sample by sample sees, and the time that such windows cover."""
 
-from collections.abc import Iterator
+from dataclasses import replace
 from fractions import Fraction
 
 import numpy as np
 
-from waveassay.contract import Bools, Exclusion, Floats, Signal, exact
+from waveassay.contract import Bools, Exclusion, Floats, Signal, exact, exclusions_of
 
 
 def sliding_max(x: Floats, width: int) -> Floats:
@@ -27,18 +27,13 @@ def sliding_max(x: Floats, width: int) -> Floats:
     return np.maximum(behind[:count], ahead[width - 1 : width - 1 + count])
 
 
-def runs(marked: Bools) -> Iterator[tuple[int, int]]:
-    """Yield start and stop of each run of marked places."""
-    edges = np.flatnonzero(np.diff(np.concatenate(([False], marked, [False])).astype(np.int8)))
-    for start, stop in edges.reshape(-1, 2):
-        yield int(start), int(stop)
-
-
 def covered(signal: Signal, windows: Bools, width: int, reason: str) -> list[Exclusion]:
     """Return as masked time all samples of the marked windows; window i starts at sample i."""
+    first = np.zeros(signal.x.size, np.bool_)
+    first[: windows.size] = windows
+    rest_s = (width - 1) / signal.rate_hz
     return [
-        Exclusion(signal.time_s(start), signal.time_s(stop - 1 + width), reason)
-        for start, stop in runs(windows)
+        replace(item, stop_s=item.stop_s + rest_s) for item in exclusions_of(signal, first, reason)
     ]
 
 

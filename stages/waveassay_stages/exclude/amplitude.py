@@ -19,6 +19,7 @@ from waveassay.contract import (
     SignalSpec,
     Stage,
     UnitError,
+    exclusions_of,
     unit_factor,
 )
 from waveassay_stages.exclude import _sliding
@@ -101,7 +102,7 @@ def run(params: AmplitudeParams, signal: Signal) -> Signal:
         return signal
     width = min(signal.x.size, _sliding.window_samples(params.window, signal.rate_hz))
     windows = beyond(signal.x, width, params.range.to(signal.unit), params.criterion)
-    unfit = _sliding.covered(signal, ~np.isfinite(signal.x), 1, "not finite")
+    unfit = exclusions_of(signal, ~np.isfinite(signal.x), "not finite")
     return signal.excluding((*_sliding.covered(signal, windows, width, "amplitude"), *unfit))
 
 

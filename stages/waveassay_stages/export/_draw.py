@@ -1,4 +1,7 @@
-"""The canvas of every figure: one style, whatever the user's own settings, and fixed bytes."""
+"""The canvas of every figure: one style whatever the user's own settings, and fixed bytes.
+
+All margins are constants, in pixels, so that a figure is laid out and drawn only once.
+"""
 
 import warnings
 from collections.abc import Iterator, Sequence
@@ -6,32 +9,27 @@ from contextlib import contextmanager
 from io import BytesIO
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
+
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
+    from matplotlib.axis import Axis
     from matplotlib.figure import Figure
 
-WIDTH_IN, HEIGHT_IN, DPI = 10.0, 5.0, 160
+WIDTH, HEIGHT, DPI = 1600, 800, 160
+LEFT, BOTTOM, TOP = 140, 88, HEIGHT - 54  # borders of the axes
+TITLE, NOTE = 12.0, 8.5  # font sizes, points
 
 INK = "#262626"
 QUIET = "#6b6b6b"
-EXCLUDED_FACE, EXCLUDED_LINES = "#ededed", "#a3a3a3"
-
-# Distinct for the common colour deficiencies, and in lightness, so that they survive greyscale.
-LINE_COLOURS = ("#1b4f8a", "#c8501e", "#3f8f5b", "#8c3b7a", "#b58900", "#4c9fc4", "#5b5b5b")
-LINE_STYLES = ("-", (0, (6, 2)), (0, (2, 1.5)), (0, (7, 2, 1.5, 2)))
-STRIP_COLOURS = ("#dbe4ee", "#f0dfd3", "#dcebe0", "#e8dce6", "#eee6cc", "#dcebf2", "#e4e4e4")
 
 _STYLE: dict[Any, Any] = {
     "font.family": "DejaVu Sans",  # comes with matplotlib, so it is the same everywhere
     "font.size": 10,
-    "axes.titlesize": 12,
-    "axes.titleweight": "bold",
-    "axes.titlelocation": "left",
     "axes.labelsize": 10.5,
     "axes.edgecolor": QUIET,
     "axes.labelcolor": INK,
     "axes.linewidth": 0.8,
-    "axes.unicode_minus": True,
     "text.color": INK,
     "text.parse_math": False,  # a signal's name may hold a dollar sign
     "xtick.color": QUIET,
@@ -39,9 +37,11 @@ _STYLE: dict[Any, Any] = {
     "xtick.labelcolor": INK,
     "ytick.labelcolor": INK,
     "hatch.linewidth": 0.6,
-    "legend.frameon": False,
-    "legend.fontsize": 9.5,
 }
+
+_CHARACTER = 0.7  # average width of a character by font size, as in a name in capitals
+# Measured on typical figures: level 6 packs for half as long again and saves a tenth of the bytes.
+_COMPRESS_LEVEL = 3
 
 
 @contextmanager
@@ -50,25 +50,48 @@ def canvas() -> Iterator["Figure"]:
     import matplotlib
     from matplotlib.backends.backend_agg import FigureCanvasAgg
     from matplotlib.figure import Figure
-    from matplotlib.layout_engine import ConstrainedLayoutEngine
 
-    with matplotlib.rc_context():
+    with matplotlib.rc_context(), warnings.catch_warnings():
         matplotlib.rcdefaults()
         matplotlib.rcParams.update(_STYLE)
-        layout = ConstrainedLayoutEngine(w_pad=0.12, h_pad=0.06, hspace=0.0)
-        figure = Figure(figsize=(WIDTH_IN, HEIGHT_IN), dpi=DPI, layout=layout)
+        # A name in a script that the font lacks is drawn with boxes; that is no failure.
+        warnings.filterwarnings("ignore", "Glyph .* missing from font")
+        figure = Figure(figsize=(WIDTH / DPI, HEIGHT / DPI), dpi=DPI)
         FigureCanvasAgg(figure)
-        with warnings.catch_warnings():
-            # A name in a script that the font lacks is drawn with boxes; that is no failure.
-            warnings.filterwarnings("ignore", "Glyph .* missing from font")
-            yield figure
+        yield figure
 
 
 def png(figure: "Figure") -> bytes:
-    """Return the picture's bytes, without the date and versions that would make them differ."""
+    """Return the picture's bytes: nothing transparent, and no date or versions that differ."""
+    from PIL import Image
+
+    canvas: Any = figure.canvas  # not typed as the one that holds pixels
+    canvas.draw()
     target = BytesIO()
-    figure.savefig(target, format="png", dpi=DPI, metadata={"Software": None})
+    picture = Image.fromarray(np.asarray(canvas.buffer_rgba())[..., :3])
+    picture.save(target, "png", dpi=(DPI, DPI), compress_level=_COMPRESS_LEVEL)
     return target.getvalue()
+
+
+def axes_at(figure: "Figure", left: int, bottom: int, right: int, top: int) -> "Axes":
+    """Add axes with these borders, in pixels from the lower left corner."""
+    return figure.add_axes(
+        (left / WIDTH, bottom / HEIGHT, (right - left) / WIDTH, (top - bottom) / HEIGHT)
+    )
+
+
+def rule(axis: "Axis", name: str, most: int = 8) -> None:
+    """Name an axis and give it round ticks, at most ``most`` steps of them."""
+    from matplotlib.ticker import MaxNLocator, ScalarFormatter
+
+    formatter = ScalarFormatter(useOffset=False)  # numbers in full
+    formatter.set_scientific(False)
+    axis.set_label_text(name)
+    axis.set_major_locator(MaxNLocator(nbins=most, steps=[1, 2, 2.5, 5, 10]))
+    axis.set_major_formatter(formatter)
+
+
+_BETWEEN = 30  # pixels between a title and its note
 
 
 def unit_label(unit: str) -> str:
@@ -82,32 +105,44 @@ def reference_label(unit: str) -> str:
     return f"dB re 1 {shown if unit.isalpha() else f'({shown})'}²/Hz"
 
 
+def width_of(text: str, size: float) -> float:
+    """Return about how many pixels a text takes; ``size`` in points."""
+    return len(text) * _CHARACTER * size * DPI / 72
+
+
 def shortened(text: str, length: int) -> str:
-    """Return a text of at most ``length`` characters, its end replaced by an ellipsis."""
-    return text if len(text) <= length else text[: length - 1] + "…"
+    """Return a text of at most ``length`` characters, its middle replaced by an ellipsis.
+
+    Names that belong together mostly differ at their ends.
+    """
+    if len(text) <= length:
+        return text
+    tail = (length - 1) // 3
+    return text[: length - 1 - tail].rstrip() + "…" + text[len(text) - tail :].lstrip()
 
 
-def title(axes: "Axes", signal: str, what: str) -> None:
-    """Write the signal's name and what is shown above the axes."""
-    axes.set_title(f"{shortened(signal, 50)}: {what}", pad=8)
+def fitted(text: str, room: float, size: float) -> str:
+    """Return a text shortened to about ``room`` pixels; empty where three characters are cut."""
+    length = int(room / width_of("x", size))
+    return shortened(text, length) if length >= min(4, len(text)) else ""
 
 
-def message(signal: str, what: str, text: Sequence[str]) -> bytes:
+def title(figure: "Figure", name: str, note: str, right: int = WIDTH) -> None:
+    """Write what the picture is of on top, and a note that ends at ``right``."""
+    height = (TOP + 20) / HEIGHT
+    beside = figure.text(right / WIDTH, height, note, fontsize=NOTE, color=QUIET, ha="right")
+    shown = figure.text(LEFT / WIDTH, height, name, fontsize=TITLE, fontweight="bold")
+    limit = beside.get_window_extent().x0 - _BETWEEN
+    length = len(name)
+    while shown.get_window_extent().x1 > limit and length > 4:
+        length -= 1
+        shown.set_text(shortened(name, length))
+
+
+def message(name: str, what: str, text: Sequence[str]) -> bytes:
     """Return a picture that says why there is nothing to see."""
     with canvas() as figure:
-        axes = figure.add_subplot()
-        title(axes, signal, what)
-        axes.set_xticks([])
-        axes.set_yticks([])
-        axes.text(
-            0.5,
-            0.5,
-            "\n".join(text),
-            ha="center",
-            va="center",
-            fontsize=13,
-            color=QUIET,
-            linespacing=1.6,
-            transform=axes.transAxes,
-        )
+        title(figure, name, what, WIDTH - 40)
+        shown = "\n".join(text)
+        figure.text(0.5, 0.5, shown, fontsize=13, color=QUIET, ha="center", linespacing=1.6)
         return png(figure)

@@ -16,6 +16,7 @@ MOST_BINS = 512
 class Gathered:
     """All rows of one signal. ``level_db`` is float32, shape (rows, f), NaN where there is none."""
 
+    recording: str
     signal: str
     unit: str
     freq_hz: Floats
@@ -26,6 +27,11 @@ class Gathered:
     kept: Bools
     epochs: Ints
     dof: Floats
+
+    @property
+    def name(self) -> str:
+        """What the picture is of: the recording, where it is known, and the signal."""
+        return f"{self.recording}, {self.signal}" if self.recording else self.signal
 
 
 def collect_rows(spectra: Spectra, within: tuple[float, float] | None) -> Part:
@@ -40,7 +46,8 @@ def collect_rows(spectra: Spectra, within: tuple[float, float] | None) -> Part:
         whole = freq.size // group * group
         freq = np.mean(freq[:whole].reshape(-1, group), axis=-1)
         density = np.mean(
-            np.ascontiguousarray(density[:, :whole]).reshape(len(density), -1, group), axis=-1
+            np.ascontiguousarray(density[:, :whole]).reshape(len(density), freq.size, group),
+            axis=-1,
         )
     level = np.full(density.shape, np.nan)
     np.log10(density, out=level, where=density > 0)
@@ -69,13 +76,14 @@ def joined(parts: Sequence[Part]) -> Gathered:
     level = stacked("level_db").astype(np.float32)
     has_level = np.any(np.isfinite(level), axis=-1)
     return Gathered(
+        recording=str(first.get("recording", "")),
         signal=str(first["signal"]),
         unit=str(first["unit"]),
         freq_hz=first["freq_hz"],
         level_db=level,
         start_s=stacked("start_s").astype(np.float64),
         duration_s=stacked("duration_s").astype(np.float64),
-        condition=tuple(str(name) for name in stacked("condition")),
+        condition=tuple(stacked("condition").astype(np.str_).tolist()),
         kept=stacked("kept").astype(np.bool_) & has_level,
         epochs=stacked("epochs").astype(np.int64),
         dof=stacked("dof").astype(np.float64),

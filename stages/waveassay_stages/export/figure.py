@@ -112,13 +112,13 @@ def _nothing(params: FigureParams, data: Gathered) -> Figure:
     else:
         what = "spectrogram"
         text = ["Nothing to show", f"None of {count} epochs is kept." if count else "No epochs."]
-    picture = message(data.signal, what, text)
+    picture = message(data.name, what, text)
     return Figure(data.signal, params.show, picture, f"{data.signal}, {what}: {text[1]}")
 
 
 STAGE = Stage(
     name="export.figure",
-    version=1,
+    version=2,
     params=FigureParams,
     takes=takes,
     gives=Kind.FIGURE,

@@ -51,6 +51,10 @@ class MultitaperParams(Params):
     zero_padding: _density.ZeroPadding = Field(default="none", description=_density.PADDING_TEXT)
 
 
+#: More independent estimates than this are better had from shorter epochs, and far sooner.
+MOST_TAPERS = 200
+
+
 def taper_count(time_bandwidth: Fraction) -> int:
     """Return how many tapers are used where none are asked: floor(2 NW) - 1, at least 1."""
     return max(1, floor(2 * time_bandwidth) - 1)
@@ -68,6 +72,8 @@ def degrees_of_freedom(weight: Floats) -> float:
     Source: Percival & Walden 1993, chapter 7 (independent chi-square estimates, weighted). At 0 Hz
     and at the Nyquist frequency it is half of that.
     """
+    if np.all(weight == weight[0]):
+        return 2.0 * weight.size  # without the rounding of 1 / K
     return float(2 / np.sum(weight * weight))
 
 
@@ -138,6 +144,13 @@ def spec(params: MultitaperParams, given: EpochsSpec, findings: Findings) -> Spe
             f"{given.length_s:g} s is NW = {number_text(float(time_bandwidth))}, below 1; ask for "
             f"at least {float(1 / length):g} Hz or lengthen the epochs",
             "half_bandwidth",
+        )
+    elif (params.tapers or taper_count(time_bandwidth)) > MOST_TAPERS:
+        findings.refuse(
+            f"{params.tapers or taper_count(time_bandwidth)} tapers an epoch are asked for (NW = "
+            f"{number_text(float(time_bandwidth))}), and at most {MOST_TAPERS} make sense: shorten "
+            "the epochs, narrow half_bandwidth, or use spectrum.welch",
+            "half_bandwidth" if params.tapers is None else "tapers",
         )
     elif params.tapers is not None and params.tapers > 2 * time_bandwidth - 1:
         findings.refuse(

@@ -1,17 +1,18 @@
 """Run jobs through Snakemake, embedded."""
 
-import getpass
-import os
 import signal
 import threading
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
-from typing import Any
 
 from waveassay.execute.runner import JobEvent
-
-_EXECUTOR, _EVENTS = "waveassay-warm", "waveassay-events"
+from waveassay.execute.snakemake.plugins import (
+    EVENTS,
+    EXECUTOR,
+    prepare_for_snakemake,
+    register_plugins,
+)
 
 
 def run_with_snakemake(
@@ -38,14 +39,16 @@ def run_with_snakemake(
     )
     from snakemake.settings.enums import RerunTrigger
 
-    events = _register()
-    _make_bearable_for_snakemake(folder)
+    from waveassay.execute.snakemake import events
+
+    register_plugins()
+    prepare_for_snakemake(folder)
     greedy = GreedySchedulerSettings(greediness=1.0, omit_prioritize_by_temp_and_input=True)
     output = OutputSettings(
         nocolor=True,
         enable_file_logging=False,
         log_handler_settings={
-            _EVENTS: events.LogHandlerSettings(
+            EVENTS: events.LogHandlerSettings(
                 callback=on_event, path=str(folder / "snakemake.jsonl")
             )
         },
@@ -69,7 +72,7 @@ def run_with_snakemake(
                 )
             )
             dag.execute_workflow(
-                executor=_EXECUTOR,
+                executor=EXECUTOR,
                 execution_settings=ExecutionSettings(
                     lock=False, keep_going=True, keep_metadata=False, latency_wait=0
                 ),
@@ -81,31 +84,6 @@ def run_with_snakemake(
         except Exception as error:  # Snakemake has one kind of error for all that can go wrong
             return f"{type(error).__name__}: {error}"
     return None
-
-
-def _register() -> Any:
-    from snakemake_interface_executor_plugins.registry import ExecutorPluginRegistry
-    from snakemake_interface_logger_plugins.registry import LoggerPluginRegistry
-
-    from waveassay.execute.snakemake import events, executor
-
-    prefix = "snakemake_{}_plugin_{}"
-    ExecutorPluginRegistry().register_plugin(
-        prefix.format("executor", _EXECUTOR.replace("-", "_")), executor
-    )
-    LoggerPluginRegistry().register_plugin(
-        prefix.format("logger", _EVENTS.replace("-", "_")), events
-    )
-    return events
-
-
-def _make_bearable_for_snakemake(folder: Path) -> None:
-    """Give Snakemake the cache folder and the user's name that it insists on."""
-    os.environ.setdefault("XDG_CACHE_HOME", str(folder / ".snakemake" / "cache"))
-    try:
-        getpass.getuser()
-    except (KeyError, OSError, ImportError):
-        os.environ["USER"] = os.environ["LOGNAME"] = f"uid{os.getuid()}"
 
 
 @contextmanager

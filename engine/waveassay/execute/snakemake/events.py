@@ -1,6 +1,7 @@
 """Snakemake's events, turned into ours; its own text goes to a file and never to the screen."""
 
 import json
+import os
 from collections.abc import Callable
 from dataclasses import dataclass, field
 from logging import LogRecord
@@ -16,10 +17,17 @@ from waveassay.execute.runner import JobEvent
 class LogHandlerSettings(LogHandlerSettingsBase):
     """Where events go."""
 
+    # Snakemake makes options of these for its command line, and needs a plain type for each.
     callback: Callable[[JobEvent], None] | None = field(
-        default=None, metadata={"help": "called with each event of a job"}
+        default=None, metadata={"help": "called with each event of a job", "type": str}
     )
-    path: str | None = field(default=None, metadata={"help": "file that keeps what Snakemake says"})
+    path: str | None = field(
+        default=None, metadata={"help": "file that keeps what Snakemake says", "type": str}
+    )
+    pipe: int | None = field(
+        default=None,
+        metadata={"help": "open file that gets each event as a line of JSON", "type": int},
+    )
 
 
 class LogHandler(LogHandlerBase):
@@ -28,6 +36,7 @@ class LogHandler(LogHandlerBase):
     def __post_init__(self) -> None:
         settings: Any = self.settings
         self._callback = settings.callback
+        self._pipe: int | None = settings.pipe
         self._file = open(settings.path, "a", encoding="utf-8") if settings.path else None  # noqa: SIM115 (closed in close)
         self._job_of: dict[int, str] = {}
 
@@ -62,6 +71,10 @@ class LogHandler(LogHandlerBase):
     def _tell(self, event: JobEvent) -> None:
         if self._callback:
             self._callback(event)
+        if self._pipe is not None:
+            line = (json.dumps(vars(event)) + "\n").encode()
+            while line:
+                line = line[os.write(self._pipe, line) :]
 
     def close(self) -> None:
         """Close the file."""

@@ -6,7 +6,6 @@ import numpy as np
 from pydantic import Field
 
 from waveassay.contract import (
-    Exclusion,
     Findings,
     Kind,
     Params,
@@ -16,6 +15,7 @@ from waveassay.contract import (
     SignalSpec,
     Stage,
     Whole,
+    exclusions_of,
 )
 
 
@@ -42,10 +42,8 @@ def combine(params: PeaksParams, parts: Sequence[Part]) -> Part:
 
 def apply(params: PeaksParams, signal: Signal, state: Part) -> Signal:
     """Exclude the samples of a stretch that come near it."""
-    near = np.flatnonzero(np.abs(signal.x) > params.above * state["largest"][0])
-    return signal.excluding(
-        Exclusion(signal.time_s(int(i)), signal.time_s(int(i) + 1), "peak") for i in near
-    )
+    near = np.abs(signal.x) > params.above * state["largest"][0]
+    return signal.excluding(exclusions_of(signal, near, "peak"))
 
 
 STAGE = Stage(

@@ -1,0 +1,1 @@
+"""Stages of a stranger who did not run the checks."""
