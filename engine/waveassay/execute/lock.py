@@ -8,7 +8,7 @@ from contextlib import contextmanager
 from datetime import UTC, datetime
 from pathlib import Path
 
-from waveassay.contract.errors import RefusedError
+from waveassay.contract.errors import MachineError, RefusedError
 from waveassay.provenance.files import machine_error
 
 
@@ -33,7 +33,12 @@ def one_run_in(folder: Path) -> Iterator[None]:
     with file:
         try:
             fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
-        except BlockingIOError:
+        except OSError as error:
+            if not isinstance(error, BlockingIOError):
+                raise MachineError(
+                    f"{folder}: cannot be locked ({error.strerror}); choose a folder on a disk "
+                    "that knows locks with --into"
+                ) from error
             file.seek(0)
             holder = file.read().strip() or "unknown"
             raise RefusedError(

@@ -12,7 +12,7 @@ import os
 import shutil
 import tempfile
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -142,12 +142,11 @@ class Store:
         except OSError as error:
             raise machine_error(error, self.root) or error from error
         with file:
-            try:
+            with suppress(OSError):  # another run is at work, or the disk knows no locks
                 fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
                 self._sweep()
-            except BlockingIOError:
-                pass
-            fcntl.flock(file, fcntl.LOCK_SH)
+            with suppress(OSError):
+                fcntl.flock(file, fcntl.LOCK_SH)
             yield
 
     def _sweep(self) -> None:

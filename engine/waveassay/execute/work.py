@@ -1,6 +1,7 @@
 """Do a job: its tasks one after another, each recording failing alone."""
 
 import json
+import socket
 import sys
 import traceback
 from collections.abc import Mapping
@@ -93,6 +94,23 @@ class Bench:
             )
         return self._ready[recording]
 
+    def task(self, recording: str, key: str) -> Task:
+        """Return a task as worked out here.
+
+        Raises
+        ------
+        MachineError
+            When it comes out otherwise here: another version, or code that changed meanwhile.
+        """
+        task = self.ready(recording).tasks.get(key)
+        if task is None:
+            raise MachineError(
+                f"{recording}: the code or the libraries here ({socket.gethostname()}) are not "
+                "those that planned the run. Use one installation everywhere and leave it alone "
+                "while a run goes on"
+            )
+        return task
+
 
 @lru_cache(maxsize=1)
 def _bench(folder: Path, stamp: int) -> Bench:
@@ -115,7 +133,7 @@ def run_job(folder: Path, job: str) -> None:
             continue
         task: Task | None = None
         try:
-            task = bench.ready(recording).tasks[key]
+            task = bench.task(recording, key)
             _do(bench, recording, task)
         except MissingArtefactError:
             continue  # the task that makes it failed in another job, and is told there
