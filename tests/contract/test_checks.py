@@ -52,7 +52,7 @@ def smooth_gain(params: Any, given: SignalSpec, freq_hz: Floats) -> Any:
 
 def smooth_mask(params: Any, signal: Signal) -> Signal:
     half_s = LENGTH // 2 / signal.rate_hz
-    return signal.widened(half_s, half_s)
+    return signal.widened(half_s, half_s).excluding_edges(half_s, half_s)
 
 
 HONEST_RESPONSE = replace(HONEST, response=Response(smooth_gain, smooth_mask))
