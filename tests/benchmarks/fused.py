@@ -13,12 +13,17 @@ import time
 from collections.abc import Callable
 from fractions import Fraction
 from itertools import pairwise
+from pathlib import Path
 from typing import Any
 
 import numpy as np
 
+if __name__ == "__main__":
+    sys.path.insert(0, str(Path(__file__).parents[1]))
+
 from chains import borders_s, program_of, run_by_form, run_plainly
 from waveassay.contract import Interval, Signal
+from waveassay.execute.memory import keep_freed_memory
 from waveassay.plan import fusing
 from waveassay.plan.program import Program
 
@@ -35,6 +40,7 @@ _BLOCK, _HALF = 65_536, 6144
 
 def measure(hours: float, channels: int, rounds: int) -> dict[str, Any]:
     """Return milliseconds per channel-hour of each way, ratios, and the error of the fused."""
+    keep_freed_memory()  # as every worker does
     signals = [_signal(hours, seed) for seed in range(channels)]
     return {
         "hours": hours,
