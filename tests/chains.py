@@ -77,9 +77,8 @@ def borders_s(piece: Interval, program: Program, stretch_s: Fraction) -> list[Fr
     return [piece.start_s, *dict.fromkeys(t for t in inner if t > piece.start_s), piece.stop_s]
 
 
-def run_by_form(program: Program, signal: Signal, start_s: Fraction, stop_s: Fraction) -> Signal:
+def run_by_form(form: Form, signal: Signal, start_s: Fraction, stop_s: Fraction) -> Signal:
     """Return what a pass keeps from start to stop, given what the plan says it reads."""
-    form = Form(program, 0)
     (kept,) = form.kept
     source = form.units[0].source
     window = form.window_s(signal.piece, start_s, stop_s)
@@ -90,8 +89,8 @@ def run_by_form(program: Program, signal: Signal, start_s: Fraction, stop_s: Fra
 
 def run_in_stretches(program: Program, signal: Signal, stretch_s: Fraction) -> Signal:
     """Return a piece run by stretches of about a length and joined, the last stretch first."""
-    borders = borders_s(signal.piece, program, stretch_s)
-    parts = [run_by_form(program, signal, *pair) for pair in list(pairwise(borders))[::-1]][::-1]
+    form, borders = Form(program, 0), borders_s(signal.piece, program, stretch_s)
+    parts = [run_by_form(form, signal, *pair) for pair in list(pairwise(borders))[::-1]][::-1]
     masks = merged(item for part in parts for item in part.excluded)
     x = np.concatenate([part.x for part in parts])
     return parts[0].with_samples(x).excluding(masks)

@@ -26,6 +26,7 @@ from waveassay.contract import Interval, Signal
 from waveassay.execute.memory import keep_freed_memory
 from waveassay.plan import fusing
 from waveassay.plan.program import Program
+from waveassay.plan.windows import Form
 
 RATE_HZ = 512
 #: Fused filter and resampling over the bound: what is acceptable, and what would be excellent.
@@ -77,8 +78,8 @@ def _compare(
 
 
 def _by_stretches(program: Program, signal: Signal) -> list[np.ndarray[Any, Any]]:
-    borders = borders_s(signal.piece, program, Fraction(600))
-    return [run_by_form(program, signal, *pair).x for pair in pairwise(borders)]
+    form, borders = Form(program, 0), borders_s(signal.piece, program, Fraction(600))
+    return [run_by_form(form, signal, *pair).x for pair in pairwise(borders)]
 
 
 def _in_turn(program: Program, signals: list[Signal]) -> None:

@@ -133,8 +133,8 @@ def test_more_on_either_side_changes_no_byte() -> None:
     program = program_of([BAND, DOWN], 512)
     signal = piece_of("512", 1900)
     borders = borders_s(signal.piece, program, Fraction(600))
-    alone = run_by_form(program, signal, borders[1], borders[2])
     form = Form(program, 0)
+    alone = run_by_form(form, signal, borders[1], borders[2])
     (unit,) = form.units
     own = form.own(signal.piece, borders[1], borders[2])
     from waveassay.execute.fused import run_unit
