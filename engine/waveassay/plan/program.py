@@ -112,7 +112,7 @@ class Program:
 
     def samples_reach(self, pass_no: int) -> Reach:
         """Return the summed reach of a pass's steps on samples, along the longest path."""
-        return self._samples_reaches[pass_no]
+        return self._samples_reaches[pass_no] if pass_no < self.passes else NO_REACH
 
     @cached_property
     def _samples_reaches(self) -> list[Reach]:

@@ -17,7 +17,7 @@ from typing import Any, Literal
 from waveassay.contract.digests import digest
 from waveassay.plan.passage import Lane, Passage
 from waveassay.plan.program import Level, Move
-from waveassay.plan.sources import engine, stage_source
+from waveassay.plan.sources import engine, stage_source, writers
 from waveassay.plan.stretches import Stretch, aligned
 
 Action = Literal["prepare", "rows", "combine", "finish"]
@@ -59,6 +59,7 @@ class _Planner:
             "recording": self.passage.recording,
             "chain": self.passage.chain.name,
             "columns": [column.name for column in self.passage.columns],
+            "writers": writers(),
             "pieces": [[p.start_s, p.stop_s] for p in self.passage.pieces],
             "conditions": _conditions(self.passage),
             "lanes": self._lanes("finish", 0),
