@@ -106,11 +106,13 @@ def test_the_stages_of_the_guide_work_as_printed(tmp_path: Path) -> None:
     (info / "entry_points.txt").write_text(f"[{group[1]}]\n{group[2]} = {group[3]}\n")
     (tmp_path / "all.yaml").write_text(ALL_STAGES)
 
+    path = os.pathsep.join(filter(None, [str(tmp_path), os.environ.get("PYTHONPATH", "")]))
+
     def child(*arguments: object) -> subprocess.CompletedProcess[str]:
         return subprocess.run(
             [sys.executable, "-m", *map(str, arguments)],
             capture_output=True, text=True, cwd=tmp_path,
-            env={**os.environ, "PYTHONPATH": str(tmp_path)},
+            env={**os.environ, "PYTHONPATH": path},
         )  # fmt: skip
 
     done = child("pytest", "-q", "-W", "error", "-p", "no:cacheprovider", tmp_path)

@@ -4,7 +4,7 @@ from dataclasses import replace
 from fractions import Fraction
 from functools import lru_cache
 from math import ceil
-from typing import Annotated, Literal
+from typing import Annotated, Any, Literal
 
 import numpy as np
 from pydantic import Field
@@ -18,11 +18,13 @@ from waveassay.contract import (
     Kind,
     Params,
     Reach,
+    Response,
     Share,
     Signal,
     SignalSpec,
     Stage,
     exact,
+    kernel_gain,
 )
 from waveassay_stages._finite import require_finite
 
@@ -231,6 +233,22 @@ def context(params: ResampleParams, given: SignalSpec) -> Reach:
     return Reach(span_s, span_s)
 
 
+def response_gain(params: ResampleParams, given: SignalSpec, freq_hz: Floats) -> Any:
+    """Return the gain of the anti-alias kernel at U times the input's rate."""
+    assert given.rate_hz is not None, "it is asked for once the rate is known"
+    factor = ratio(params, given.rate_hz)
+    if factor == 1:
+        return np.ones(freq_hz.shape)
+    kernel = _kernel(factor.numerator, factor.denominator, params.attenuation, params.transition)
+    return kernel_gain(kernel, kernel.size // 2, freq_hz, float(given.rate_hz * factor.numerator))
+
+
+def mask(params: ResampleParams, signal: Signal) -> Signal:
+    """Mask each moment whose kernel touches masked time or an end."""
+    half_s = half_length_s(params, signal.rate_hz)
+    return signal.widened(half_s, half_s).excluding_edges(half_s, half_s)
+
+
 def run(params: ResampleParams, signal: Signal) -> Signal:
     """Resample one signal, masking each sample whose kernel touches masked time or an end.
 
@@ -251,9 +269,7 @@ def run(params: ResampleParams, signal: Signal) -> Signal:
             "start on a whole sample"
         )
     samples = resample(signal.x, factor.numerator, factor.denominator, params)
-    half_s = half_length_s(params, signal.rate_hz)
-    wide = signal.with_samples(samples, rate_hz=rate_hz).widened(half_s, half_s)
-    return wide.excluding_edges(half_s, half_s)
+    return mask(params, signal).with_samples(samples, rate_hz=rate_hz)
 
 
 def derive(params: ResampleParams, given: SignalSpec) -> list[Derived]:
@@ -278,6 +294,7 @@ STAGE = Stage(
     spec=spec,
     run=run,
     context=context,
+    response=Response(gain=response_gain, mask=mask),
     derive=derive,
     example={"rate": "128 Hz"},
     source="J. F. Kaiser, Nonrecursive digital filter design using the I0-sinh window function, "

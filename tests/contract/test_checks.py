@@ -29,20 +29,41 @@ from waveassay.contract import (
     Exclusion,
     Features,
     Findings,
+    Floats,
     Params,
     Part,
     Reach,
+    Response,
     Signal,
     SignalSpec,
     Stage,
     Whole,
     checks,
+    kernel_gain,
 )
 from waveassay.contract.checks import CHECKS
 
 
+def smooth_gain(params: Any, given: SignalSpec, freq_hz: Floats) -> Any:
+    assert given.rate_hz is not None
+    kernel = np.full(LENGTH, params.weight / LENGTH)
+    return kernel_gain(kernel, LENGTH // 2, freq_hz, float(given.rate_hz))
+
+
+def smooth_mask(params: Any, signal: Signal) -> Signal:
+    half_s = LENGTH // 2 / signal.rate_hz
+    return signal.widened(half_s, half_s).excluding_edges(half_s, half_s)
+
+
+HONEST_RESPONSE = replace(HONEST, response=Response(smooth_gain, smooth_mask))
+
+
 @pytest.mark.parametrize("check", CHECKS, ids=lambda check: check.__name__)
-@pytest.mark.parametrize("stage", [HONEST, HONEST_ROWS, HONEST_WHOLE], ids=["reach", "rows", "all"])
+@pytest.mark.parametrize(
+    "stage",
+    [HONEST, HONEST_RESPONSE, HONEST_ROWS, HONEST_WHOLE],
+    ids=["reach", "response", "rows", "all"],
+)
 def test_an_honest_stage_passes(stage: Stage, check: Callable[[Stage], None]) -> None:
     check(stage)
 
@@ -101,6 +122,48 @@ def test_a_reach_too_short_for_the_masks_alone() -> None:
         return smooth(params, signal).widened(Fraction(1), Fraction(0))
 
     caught(checks.check_context, "excluded", replace(HONEST, run=run))
+
+
+def test_a_response_that_is_not_the_function() -> None:
+    def wider(params: Any, given: SignalSpec, freq_hz: Floats) -> Any:
+        assert given.rate_hz is not None
+        kernel = np.full(LENGTH + 2, params.weight / (LENGTH + 2))
+        return kernel_gain(kernel, LENGTH // 2 + 1, freq_hz, float(given.rate_hz))
+
+    def late(params: Any, given: SignalSpec, freq_hz: Floats) -> Any:
+        assert given.rate_hz is not None
+        delay = np.exp(-2j * np.pi * freq_hz / float(given.rate_hz))
+        return smooth_gain(params, given, freq_hz) * delay
+
+    def slightly(params: Any, given: SignalSpec, freq_hz: Floats) -> Any:
+        return smooth_gain(params, given, freq_hz) * (1 + 1e-7)
+
+    for gain in (wider, late, slightly):
+        lying = replace(HONEST, response=Response(gain, smooth_mask))
+        caught(checks.check_response, "not the same", lying)
+
+
+def test_a_response_of_what_is_not_linear() -> None:
+    def run(params: Any, signal: Signal) -> Signal:
+        return smooth(params, signal.with_samples(np.clip(signal.x, -500, 500)))
+
+    caught(checks.check_response, "not the same", replace(HONEST_RESPONSE, run=run))
+
+
+def test_a_mask_that_is_not_the_function_s() -> None:
+    def none(params: Any, signal: Signal) -> Signal:
+        return signal
+
+    def more(params: Any, signal: Signal) -> Signal:
+        return smooth_mask(params, signal.with_samples(2 * signal.x))
+
+    for mask, said in ((none, "exclude other times"), (more, "changes more")):
+        lying = replace(HONEST, response=Response(smooth_gain, mask))
+        caught(checks.check_response, said, lying)
+
+
+def test_a_response_without_a_reach() -> None:
+    caught(checks.check_response, "goes with a reach", replace(HONEST_RESPONSE, context=None))
 
 
 def test_a_reach_on_a_stage_that_needs_the_whole() -> None:

@@ -43,7 +43,8 @@ chains:
 
 
 def waveassay(*arguments: object, packages: str) -> subprocess.CompletedProcess[str]:
-    path = os.pathsep.join(str(HERE / name) for name in packages.split())
+    known = os.environ.get("PYTHONPATH", "").split(os.pathsep)
+    path = os.pathsep.join([*(str(HERE / name) for name in packages.split()), *filter(None, known)])
     return subprocess.run(
         [sys.executable, "-m", "waveassay", *map(str, arguments)],
         env={**os.environ, "PYTHONPATH": path},
@@ -122,6 +123,22 @@ def test_check_schema_and_help_know_it(made: Path) -> None:
     shown = waveassay("stages", "acme.smooth", packages="working").stdout
     assert "Length of the average." in shown
     assert "acme 1.2" in shown
+
+
+def test_its_response_is_one_with_its_neighbours(made: Path) -> None:
+    fused = made / "fused.yaml"
+    fused.write_text(
+        RECIPE.replace("    - acme.peaks: {above: 90 %}", "    - resample: {rate: 50 Hz}")
+    )
+    checked = waveassay("check", fused, "--plan", packages="working")
+    assert checked.returncode == 0, checked.stderr
+    assert "fused, as one response: acme.smooth + resample" in checked.stdout
+    assert "acme.centre  by its own function (declares no response)" in checked.stdout
+    done = waveassay(
+        "run", fused, made / "recordings", "--into", made / "fused", packages="working"
+    )
+    assert done.returncode == 0, done.stderr + done.stdout
+    assert len(rows(only_run(made / "fused"), "epochs/one")) == 150
 
 
 def test_a_package_that_fails_is_named_and_stops_no_other(made: Path) -> None:

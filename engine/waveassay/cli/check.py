@@ -4,14 +4,19 @@ from collections.abc import Sequence
 from pathlib import Path
 
 from waveassay.cli.loading import load_recipe
+from waveassay.cli.plan import from_passages, from_recipe, show_plan
 from waveassay.cli.screen import console, plural
 from waveassay.contract import SignalError
+from waveassay.plan.passage import Passage
 from waveassay.plan.recordings import find_recordings
 from waveassay.recipe.model import Recipe
 
 
-def check(argument: str, arguments: Sequence[Path]) -> int:
-    """Check a recipe, and whether recordings would go through it; return the exit code."""
+def check(argument: str, arguments: Sequence[Path], *, plan: bool = False) -> int:
+    """Check a recipe, and whether recordings would go through it; return the exit code.
+
+    With ``plan``, say how the steps on samples would be run.
+    """
     place = Path(argument)
     if (place / "recipe.yaml").exists() and not arguments:
         argument, arguments = str(place / "recipe.yaml"), [place / "recordings"]
@@ -26,26 +31,32 @@ def check(argument: str, arguments: Sequence[Path]) -> int:
     )
     screen.print(f"Digest: {recipe.digest}")
     if not arguments:
+        if plan:
+            show_plan(from_recipe(recipe))
         return 0
     found = find_recordings(arguments)
-    failing = sum(not _would_run(recipe, item.name, item.path) for item in found)
+    planned: list[Passage] = []
+    failing = sum(not _would_run(recipe, item.name, item.path, planned) for item in found)
+    if plan:
+        show_plan(from_passages(planned))
     screen.print(f"{len(found) - failing} of {plural(len(found), 'recording')} would run.")
     return 3 if failing else 0
 
 
-def _would_run(recipe: Recipe, name: str, path: Path) -> bool:
+def _would_run(recipe: Recipe, name: str, path: Path, planned: list[Passage]) -> bool:
     from waveassay.plan.columns import columns_by_chain
     from waveassay.plan.passage import passages
     from waveassay.recording import read_facts
 
     screen = console()
     try:
-        _, warnings = passages(
+        ways, warnings = passages(
             recipe, columns_by_chain(recipe), name, "", read_facts(path, truncated=recipe.truncated)
         )
     except SignalError as error:
         screen.print(f"would fail  {name}: {error}")
         return False
+    planned.extend(ways)
     for warning in warnings:
         screen.print(f"warning     {name}: {warning}")
     return True

@@ -110,11 +110,17 @@ def check_command(
         ),
     ],
     recordings: Recordings = None,
+    plan: Annotated[
+        bool,
+        typer.Option(
+            "--plan", help="Say which steps run as one frequency response, and why others do not."
+        ),
+    ] = False,
 ) -> None:
     """Check a recipe, alone or against recordings, before anything is computed."""
     from waveassay.cli.check import check
 
-    _leave(check(recipe, recordings or []))
+    _leave(check(recipe, recordings or [], plan=plan))
 
 
 @app.command("describe")

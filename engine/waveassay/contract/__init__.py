@@ -33,6 +33,7 @@ from waveassay.contract.quantity import (
     number_text,
     unit_factor,
 )
+from waveassay.contract.response import Response, kernel_gain
 from waveassay.contract.spec import (
     ColumnSpec,
     Derived,
@@ -80,6 +81,7 @@ __all__ = [
     "Part",
     "Quantity",
     "Reach",
+    "Response",
     "Rows",
     "Seconds",
     "Share",
@@ -99,6 +101,7 @@ __all__ = [
     "exact",
     "exclusions_of",
     "features_of",
+    "kernel_gain",
     "merged",
     "number_text",
     "unit_factor",

@@ -30,6 +30,7 @@ from waveassay.contract.checks_data import RATES_HZ, UNITS, Given, given
 from waveassay.contract.checks_defaults import unsound_defaults
 from waveassay.contract.checks_form import why_unfit
 from waveassay.contract.checks_masks import prove_masks
+from waveassay.contract.checks_response import RESPONSE_TOLERANCE, prove_response
 from waveassay.contract.checks_running import (
     Refused,
     announced,
@@ -42,7 +43,13 @@ from waveassay.contract.params import Params
 from waveassay.contract.spec import Derived, Findings, SignalSpec, Spec, SpectraSpec
 from waveassay.contract.stage import EachRow, Stage, Whole
 
-__all__ = ["CHECKS", "example_params", "run_by_stretches", "run_whole"]
+__all__ = [
+    "CHECKS",
+    "RESPONSE_TOLERANCE",
+    "example_params",
+    "run_by_stretches",
+    "run_whole",
+]
 
 #: Slow to import; listing stages and checking a recipe must stay fast.
 HEAVY = ("scipy", "pandas", "pyarrow", "matplotlib", "pint")
@@ -259,6 +266,15 @@ def check_context(stage: Stage) -> None:
             prove_reach(stage, params, case)
 
 
+def check_response(stage: Stage) -> None:
+    """Prove a declared frequency response against the stage's own function, masks to the letter."""
+    if stage.response is None:
+        return
+    for case in cases(stage):
+        assert isinstance(case.spec, SignalSpec), f"{stage.name}: a response is for signals"
+        prove_response(stage, example_params(stage), case.spec)
+
+
 def check_masks(stage: Stage) -> None:
     """Prove that a filter widens masks, and masks the ends of a piece, by its response."""
     params = example_params(stage)
@@ -283,4 +299,5 @@ CHECKS: tuple[Callable[[Stage], None], ...] = (
     check_same_twice,
     check_context,
     check_masks,
+    check_response,
 )

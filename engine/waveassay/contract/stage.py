@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from waveassay.contract.kinds import Data, Kind
 from waveassay.contract.params import Params
+from waveassay.contract.response import Response
 from waveassay.contract.spec import Derived, Findings, Spec
 
 #: A moment of a filter's output may depend on samples outside its reach by at most this share
@@ -73,6 +74,8 @@ class Stage:
     context : what a moment of the output depends on. `EachRow`; a function
         ``(params, spec) -> Reach``; or a `Whole`. None: the whole piece is given at once, which is
         always right but not bounded in memory.
+    response : for a stage that is linear and time-invariant on samples, its frequency response, so
+        that it runs as one with such neighbours; it goes with a `Reach`. None: `run` is run.
     example : parameters as a recipe writes them, for help, schema and the contract's checks.
     source : the published source of the method, or 'common practice, no source'.
     derive : ``derive(params, given)``: numbers that the parameters leave to the data's rate, such
@@ -90,6 +93,7 @@ class Stage:
     spec: Callable[[Any, Any, Findings], Spec]
     run: Callable[[Any, Any], Data] | None = None
     context: Context | None = None
+    response: Response | None = None
     example: Mapping[str, Any] = field(default_factory=dict)
     source: str = "common practice, no source"
     derive: Callable[[Any, Any], Sequence[Derived]] | None = None

@@ -5,7 +5,10 @@ from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any, cast
 
-from waveassay.contract import Data, Epochs, Part, SignalError
+import numpy as np
+from numpy.typing import NDArray
+
+from waveassay.contract import Data, Epochs, Floats, Part, Response, Signal, SignalError
 from waveassay.contract.agreement import disagreements
 from waveassay.contract.errors import MachineError
 from waveassay.plan.program import Move
@@ -34,6 +37,47 @@ def run_move(move: Move, data: Any, state: Part | None = None) -> Data:
     if run is None:
         raise StepError(move.step.name, "the stage has nothing to run")
     return _agreed(move, data, _guarded(move, lambda: run(params, data)))
+
+
+def mask_move(move: Move, signal: Signal) -> Signal:
+    """Return the signal with its masks as a step that declares its response leaves them.
+
+    Samples and rate stay as they are; what the step announces of them is made elsewhere.
+    """
+    response = _response(move)
+    made = _guarded(move, lambda: response.mask(move.step.params, signal))
+    if not isinstance(made, Signal) or _but_for_masks(made) != _but_for_masks(signal):
+        raise _fault(move, "the mask of its response changes more than the excluded time")
+    return made
+
+
+def gain_move(move: Move, freq_hz: Floats) -> NDArray[Any]:
+    """Return the gain of a step that declares its response.
+
+    Raises
+    ------
+    StepError
+        When it is not one finite number a frequency.
+    """
+    response = _response(move)
+    gain = _guarded(move, lambda: response.gain(move.step.params, move.spec_in, freq_hz))
+    gain = np.asarray(gain)
+    if gain.shape != freq_hz.shape or gain.dtype.kind not in "fc":
+        raise _fault(move, f"{gain.shape} gains come for {freq_hz.shape} frequencies")
+    if not np.isfinite(gain).all():
+        at = float(freq_hz[np.flatnonzero(~np.isfinite(gain))[0]])
+        raise _fault(move, f"the gain of its response at {at:g} Hz is not a finite number")
+    return gain
+
+
+def _but_for_masks(signal: Signal) -> tuple[object, ...]:
+    return (signal.name, signal.unit, signal.rate_hz, signal.start_s, signal.x.size, signal.piece)
+
+
+def _response(move: Move) -> Response:
+    response = move.step.stage.response
+    assert response is not None, f"{move.step.name} declares a response"
+    return response
 
 
 def collect_move(move: Move, data: Any) -> Part:

@@ -15,6 +15,7 @@ from waveassay.contract import SignalError
 from waveassay.contract.errors import MachineError
 from waveassay.execute.finish import combine, finish, read_states
 from waveassay.execute.gathered import gather
+from waveassay.execute.memory import keep_freed_memory
 from waveassay.execute.moves import StepError
 from waveassay.execute.prepare import prepare
 from waveassay.execute.rows import make_rows
@@ -128,6 +129,7 @@ def run_job(folder: Path, job: str) -> None:
     MachineError
         When the disk or the memory ends: no task would fare better.
     """
+    keep_freed_memory()
     bench = _bench(folder, (folder / PLAN_FILE).stat().st_mtime_ns)
     failures: dict[str, Failure] = {}
     for recording, key in bench.tasks_of_job(job):

@@ -11,6 +11,7 @@ from waveassay.plan.conditions import resolve_conditions
 from waveassay.plan.labels import match_signals, unit_scale
 from waveassay.plan.program import Program, compile_program
 from waveassay.plan.stretches import Stretch, bounds_s
+from waveassay.plan.windows import Form
 from waveassay.recipe.fold import fold
 from waveassay.recipe.model import Chain, Recipe
 from waveassay.recording import Facts, SignalFacts
@@ -43,6 +44,11 @@ class Lane:
         """Return this signal's own borders of a stretch."""
         borders = self.borders_s[stretch.piece]
         return borders[stretch.number], borders[stretch.number + 1]
+
+    @cached_property
+    def forms(self) -> tuple[Form, ...]:
+        """How each pass over its samples is carried out."""
+        return tuple(Form(self.program, pass_no) for pass_no in range(self.program.passes))
 
 
 @dataclass(frozen=True)

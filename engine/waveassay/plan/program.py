@@ -110,25 +110,6 @@ class Program:
         """Tell whether a pass changes samples, so that keeping what it makes pays."""
         return any(m.source is not None for m in self.samples_moves(pass_no))
 
-    def samples_reach(self, pass_no: int) -> Reach:
-        """Return the summed reach of a pass's steps on samples, along the longest path."""
-        return self._samples_reaches[pass_no] if pass_no < self.passes else NO_REACH
-
-    @cached_property
-    def _samples_reaches(self) -> list[Reach]:
-        return [self._longest_path(pass_no) for pass_no in range(self.passes)]
-
-    def _longest_path(self, pass_no: int) -> Reach:
-        before: dict[int, Fraction] = {}
-        after: dict[int, Fraction] = {}
-        for move in self.samples_moves(pass_no):
-            reach = NO_REACH if move.source is None else move.reach()
-            source = -1 if move.source is None else move.source
-            before[move.index] = before.get(source, Fraction(0)) + reach.before_s
-            after[move.index] = after.get(source, Fraction(0)) + reach.after_s
-        zero = Fraction(0)
-        return Reach(max(before.values(), default=zero), max(after.values(), default=zero))
-
     @cached_property
     def rows_reach(self) -> Reach:
         """Return the longest reach of the steps that cut rows from samples."""

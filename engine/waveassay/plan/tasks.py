@@ -15,15 +15,19 @@ from fractions import Fraction
 from typing import Any, Literal
 
 from waveassay.contract.digests import digest
+from waveassay.plan.blocks import BLOCK_S, MARGIN_S
+from waveassay.plan.fusing import FORM
 from waveassay.plan.passage import Lane, Passage
 from waveassay.plan.program import Level, Move
 from waveassay.plan.sources import engine, stage_source, writers
-from waveassay.plan.stretches import Stretch, aligned
+from waveassay.plan.stretches import Stretch
 
 Action = Literal["prepare", "rows", "combine", "finish"]
 
 # Rough CPU seconds, only to balance jobs: they change no byte.
-_PREPARE_COST_S = 1.5e-7  # a sample and step
+_READ_COST_S = 1.0e-8  # a sample
+_PLAIN_COST_S = 6.0e-8  # a sample and step
+_FUSED_COST_S = 2.0e-8  # a sample and fused group
 _ROWS_COST_S = 1.0e-7  # a sample and step
 _TASK_COST_S = 0.01
 _FINISH_COST_S = 0.5
@@ -104,8 +108,7 @@ class _Planner:
         windows = [window_s(self.passage, lane, pass_no, stretch) for lane in lanes]
         cost = 0.0
         for lane, (low, high) in zip(lanes, windows, strict=True):
-            steps = max(1, len(lane.program.samples_moves(pass_no)))
-            cost += _samples(lane, low, high) * steps * _PREPARE_COST_S
+            cost += _samples(lane, low, high) * _sample_cost_s(lane, pass_no)
         identity = {
             "piece": _piece(self.passage, stretch),
             "bounds": [lane.bounds_s(stretch) for lane in lanes],
@@ -229,11 +232,10 @@ def window_s(
     passage: Passage, lane: Lane, pass_no: int, stretch: Stretch
 ) -> tuple[Fraction, Fraction]:
     """Return what a stretch reads: itself and the context of the pass's steps on samples."""
+    if pass_no >= len(lane.forms):
+        return lane.bounds_s(stretch)
     piece = passage.pieces[stretch.piece]
-    reach = lane.program.samples_reach(pass_no)
-    start, stop = lane.bounds_s(stretch)
-    low = aligned(start - reach.before_s, piece, lane.program.grid_step_s)
-    return low, min(piece.stop_s, stop + reach.after_s)
+    return lane.forms[pass_no].window_s(piece, *lane.bounds_s(stretch))
 
 
 def overlapping(lane: Lane, piece: int, start_s: Fraction, stop_s: Fraction) -> list[Stretch]:
@@ -262,6 +264,12 @@ def _lane(lane: Lane, action: Action, pass_no: int) -> dict[str, Any]:
     if action == "prepare":
         known["steps"] = [_step(move) for move in lane.program.samples_moves(pass_no)]
         known["kept"] = lane.program.kept_signals(pass_no)
+        if pass_no < len(lane.forms):
+            known["fused"] = [
+                [FORM, [move.index for move in unit.moves], BLOCK_S, MARGIN_S]
+                for unit in lane.forms[pass_no].units
+                if unit.fused
+            ]
     elif action == "rows":
         known["steps"] = [_step(move) for move in rows_moves(lane, pass_no)]
         known["collected"] = [_step(move) for move in collected(lane, pass_no)]
@@ -293,6 +301,11 @@ def _conditions(passage: Passage) -> list[list[Any]]:
 def _piece(passage: Passage, stretch: Stretch) -> list[Fraction]:
     piece = passage.pieces[stretch.piece]
     return [piece.start_s, piece.stop_s]
+
+
+def _sample_cost_s(lane: Lane, pass_no: int) -> float:
+    units = lane.forms[pass_no].units if pass_no < len(lane.forms) else ()
+    return _READ_COST_S + sum(_FUSED_COST_S if u.fused else _PLAIN_COST_S for u in units)
 
 
 def _samples(lane: Lane, start_s: Fraction, stop_s: Fraction) -> float:

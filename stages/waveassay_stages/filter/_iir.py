@@ -70,14 +70,32 @@ def cascade(sections: Iterable[tuple[complex, complex, complex, complex]], at: c
     return Cascade(sos, zeros, poles, dc)
 
 
+def response(
+    filters: Cascade, freq_hz: ArrayLike, rate_hz: float, passes: Passes
+) -> Floats | Complex:
+    r"""Return the gain of all passes, from the coefficients that are run; real both ways.
+
+    .. math::
+
+        H(z) = \prod \frac{b_0 + b_1 z^{-1} + b_2 z^{-2}}{1 + a_1 z^{-1} + a_2 z^{-2}}, \qquad
+        |H|^2 \;\text{both ways}
+
+    in powers of :math:`u = 1 - z^{-1} = 2 i \sin(\omega / 2) e^{-i \omega / 2}`: the coefficients
+    of a slow filter nearly cancel at 0 Hz, and their sums are exact while their products are not.
+    """
+    half = np.pi * np.asarray(freq_hz, np.float64) / rate_hz
+    u = 2j * np.sin(half) * np.exp(-1j * half)
+    once: Complex = np.ones(half.shape, np.complex128)
+    for b0, b1, b2, _, a1, a2 in filters.sos:
+        above = (b0 + b1) + b2 - u * ((b1 + 2 * b2) - u * b2)
+        below = (1 + a1) + a2 - u * ((a1 + 2 * a2) - u * a2)
+        once = once * (above / below)
+    return once.real**2 + once.imag**2 if passes == "both_ways" else once
+
+
 def gain(filters: Cascade, freq_hz: ArrayLike, rate_hz: float, passes: Passes) -> Floats:
     """Return the gain in amplitude after all passes, from the coefficients that are run."""
-    freq = np.asarray(freq_hz, np.float64)
-    delay = np.exp(-2j * np.pi * freq / rate_hz)
-    total = np.ones(freq.shape)
-    for b0, b1, b2, _, a1, a2 in filters.sos:
-        total = total * np.abs((b0 + delay * (b1 + delay * b2)) / (1 + delay * (a1 + delay * a2)))
-    return total**2 if passes == "both_ways" else total
+    return np.abs(response(filters, freq_hz, rate_hz, passes))
 
 
 def modes(filters: Cascade, passes: Passes) -> tuple[Complex, Complex]:
@@ -194,11 +212,10 @@ def run_sections(x: Floats, filters: Cascade, passes: Passes, edges: Edges, pad:
     return np.ascontiguousarray(one_pass(once[::-1])[::-1][pad : pad + x.size])
 
 
-def masked(signal: Signal, filtered: Floats, passes: Passes, widen_s: Fraction) -> Signal:
-    """Return the filtered signal, its masks widened and the ends of its piece masked."""
+def masked(signal: Signal, passes: Passes, widen_s: Fraction) -> Signal:
+    """Return the signal with its masks widened and the ends of its piece masked."""
     before_s = widen_s if passes == "both_ways" else Fraction(0)
-    wide = signal.with_samples(filtered).widened(before_s, widen_s)
-    return wide.excluding_edges(before_s, widen_s)
+    return signal.widened(before_s, widen_s).excluding_edges(before_s, widen_s)
 
 
 def reach(

@@ -2,7 +2,7 @@
 
 from fractions import Fraction
 from functools import lru_cache
-from typing import Annotated, Literal, Self
+from typing import Annotated, Any, Literal, Self
 
 import numpy as np
 from numpy.typing import ArrayLike
@@ -17,6 +17,7 @@ from waveassay.contract import (
     Kind,
     Params,
     Reach,
+    Response,
     Seconds,
     Signal,
     SignalSpec,
@@ -254,11 +255,23 @@ def context(params: ButterworthParams, given: SignalSpec) -> Reach:
     )
 
 
+def response_gain(params: ButterworthParams, given: SignalSpec, freq_hz: Floats) -> Any:
+    """Return the gain of all passes: real both ways, complex forward."""
+    assert given.rate_hz is not None, "it is asked for once the rate is known"
+    rate_hz = float(given.rate_hz)
+    return _iir.response(design(params, rate_hz), freq_hz, rate_hz, params.passes)
+
+
+def mask(params: ButterworthParams, signal: Signal) -> Signal:
+    """Widen the masks by the filter's response, and mask the ends of the piece."""
+    return _iir.masked(signal, params.passes, _widen_s(params, signal.rate_hz))
+
+
 def run(params: ButterworthParams, signal: Signal) -> Signal:
     """Filter one signal through its masks, widen them, and mask the ends of its piece."""
     require_finite(signal, "filter.butterworth")
     filtered = butterworth(signal.x, float(signal.rate_hz), params)
-    return _iir.masked(signal, filtered, params.passes, _widen_s(params, signal.rate_hz))
+    return mask(params, signal.with_samples(filtered))
 
 
 def derive(params: ButterworthParams, given: SignalSpec) -> list[Derived]:
@@ -284,6 +297,7 @@ STAGE = Stage(
     spec=spec,
     run=run,
     context=context,
+    response=Response(gain=response_gain, mask=mask),
     derive=derive,
     example={"high_pass": "0.5 Hz", "low_pass": "40 Hz"},
     source="S. Butterworth, On the theory of filter amplifiers, Wireless Engineer 7, 536-541, 1930",

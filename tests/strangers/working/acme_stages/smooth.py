@@ -1,6 +1,7 @@
 """Smooth a signal by a moving average."""
 
 from fractions import Fraction
+from typing import Any
 
 import numpy as np
 from pydantic import Field
@@ -11,11 +12,13 @@ from waveassay.contract import (
     Kind,
     Params,
     Reach,
+    Response,
     Seconds,
     Signal,
     SignalSpec,
     Stage,
     exact,
+    kernel_gain,
 )
 
 
@@ -51,6 +54,18 @@ def context(params: SmoothParams, given: SignalSpec) -> Reach:
     return Reach(half, half)
 
 
+def gain(params: SmoothParams, given: SignalSpec, freq_hz: Floats) -> Any:
+    """Return what the average leaves of each frequency."""
+    rate_hz = float(given.rate_hz or 1)
+    half = max(1, round(params.length * rate_hz)) // 2
+    return kernel_gain(np.full(2 * half + 1, 1 / (2 * half + 1)), half, freq_hz, rate_hz)
+
+
+def mask(params: SmoothParams, signal: Signal) -> Signal:
+    """Exclude nothing more."""
+    return signal
+
+
 STAGE = Stage(
     name="acme.smooth",
     version=1,
@@ -60,5 +75,6 @@ STAGE = Stage(
     spec=spec,
     run=run,
     context=context,
+    response=Response(gain, mask),
     example={"length": "50 ms"},
 )
