@@ -21,6 +21,7 @@ def run(
     *,
     runner: Runner = run_in_process,
     workers: int = 2,
+    store: Path | None = None,
 ) -> RunOutcome:
     """Run a recipe's text over recordings, in this process unless told otherwise."""
     checked = check_recipe(recipe_text, "recipe.yaml")
@@ -28,7 +29,7 @@ def run(
         raise RecipeError(checked.problems)
     found = find_recordings(recordings)
     return run_recipe(
-        checked.recipe, found, into, store_folder=None, workers=workers, runner=runner
+        checked.recipe, found, into, store_folder=store, workers=workers, runner=runner
     )
 
 

@@ -3,7 +3,6 @@
 import json
 from collections import defaultdict
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
@@ -11,19 +10,18 @@ import numpy as np
 
 from waveassay.contract import (
     Data,
-    Exclusion,
     Features,
     FeaturesSpec,
     Figure,
     Kind,
     Part,
+    Rows,
     Spectra,
     Table,
-    merged,
 )
-from waveassay.execute.arrays import Arrays, exclusions_from_json, load_arrays, save_arrays
+from waveassay.execute.arrays import Arrays, load_arrays, save_arrays
+from waveassay.execute.gathered import Gathered, LaneRows
 from waveassay.execute.moves import collect_move, combine_move, run_move
-from waveassay.execute.rows import FILE as ROWS_FILE
 from waveassay.execute.rows import features_from_arrays
 from waveassay.execute.store import Store
 from waveassay.execute.tables import (
@@ -35,7 +33,7 @@ from waveassay.execute.tables import (
 )
 from waveassay.plan.columns import column_name
 from waveassay.plan.passage import Lane, Passage
-from waveassay.plan.program import Level
+from waveassay.plan.program import Level, Move
 from waveassay.plan.tasks import barriers
 from waveassay.provenance.tables import write_parquet
 
@@ -43,57 +41,13 @@ STATE_FILE = "state.npz"
 FACTS_FILE = "passage.json"
 
 
-@dataclass(frozen=True)
-class Gathered:
-    """What all stretches gave, in order of time."""
-
-    arrays: Sequence[Arrays]
-    masks: Sequence[Mapping[str, Mapping[str, list[list[str]]]]]
-    outside: frozenset[int]
-
-    def named(self, prefix: str) -> dict[str, list[Any]]:
-        """Return the arrays below a prefix, each name with its parts."""
-        found: dict[str, list[Any]] = defaultdict(list)
-        for arrays in self.arrays:
-            for name, array in arrays.items():
-                if name.startswith(prefix):
-                    found[name.removeprefix(prefix)].append(array)
-        return found
-
-    def parts(self, prefix: str) -> list[Part]:
-        """Return what one step collected, one part a stretch."""
-        parts = (
-            {n.removeprefix(prefix): a for n, a in arrays.items() if n.startswith(prefix)}
-            for arrays in self.arrays
-        )
-        return [part for part in parts if part]
-
-    def excluded(self, lane_no: int) -> tuple[Exclusion, ...]:
-        """Return the masks on a signal where epochs were cut."""
-        return merged(
-            item
-            for masks in self.masks
-            for items in masks[str(lane_no)].values()
-            for item in exclusions_from_json(items)
-        )
-
-
-def gather(store: Store, keys: Sequence[str]) -> Gathered:
-    """Read the rows of all stretches."""
-    read = [load_arrays(store.read(key).path(ROWS_FILE)) for key in keys]
-    return Gathered(
-        [arrays for arrays, _ in read],
-        [facts["masks"] for _, facts in read],
-        frozenset(lane for _, facts in read for lane in facts["outside"]),
-    )
-
-
 def combine(passage: Passage, pass_no: int, gathered: Gathered, folder: Path) -> None:
     """Turn what the pass before collected into what this pass applies."""
     state: Arrays = {}
     for lane_no, lane in enumerate(passage.lanes):
+        rows = gathered.lane(lane_no)
         for move in barriers(lane, pass_no):
-            parts = gathered.parts(f"{lane_no}.{move.index}.part.")
+            parts = rows.parts(f"{move.index}.part.")
             made: Part = combine_move(move, parts)
             state |= {f"{lane_no}.{move.index}.{name}": array for name, array in made.items()}
     save_arrays(folder / STATE_FILE, state, {})
@@ -103,8 +57,7 @@ def read_states(store: Store, keys: Sequence[str]) -> dict[tuple[int, int], Part
     """Read what `combine` wrote: (lane, move) -> named arrays."""
     states: dict[tuple[int, int], dict[str, Any]] = defaultdict(dict)
     for key in keys:
-        arrays, _ = load_arrays(store.read(key).path(STATE_FILE))
-        for place, array in arrays.items():
+        for place, array in load_arrays(store.read(key).path(STATE_FILE)).items():
             lane, move, name = place.split(".", 2)
             states[int(lane), int(move)][name] = array
     return dict(states)
@@ -119,8 +72,9 @@ def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
     figures: list[dict[str, str]] = []
     units: dict[tuple[str, str], str] = {}
     for lane_no, lane in enumerate(passage.lanes):
-        values = _recording_values(passage.recording, lane_no, lane, gathered)
-        blocks += _epoch_blocks(lane_no, lane, gathered)
+        rows = gathered.lane(lane_no)
+        values = _recording_values(passage.recording, lane, rows)
+        blocks += _epoch_blocks(lane, rows)
         average_blocks += _average_blocks(lane, values)
         figures += _save_figures(lane, values, folder)
         averages += [
@@ -148,8 +102,10 @@ def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
         "summary": [],
         "csv": _csv_choice(passage),
     }
-    tables = [s for s in passage.chain.steps if s.given is Kind.TABLE]
-    if tables:
+    tabled = {lane.signal for lane in passage.lanes if _table_moves(lane)}
+    if tabled:
+        blocks = [block for block in blocks if block.signal in tabled]
+        average_blocks = [block for block in average_blocks if block.signal in tabled]
         own = [c for c in passage.columns if not c.averaged]
         for averaged, name, some in (
             (False, "epochs.parquet", blocks),
@@ -189,22 +145,22 @@ def _without_epochs(passage: Passage, blocks: Sequence[Block]) -> Iterator[str]:
                 yield f"{passage.chain.name}: condition {name} of {block.signal}: {why}"
 
 
-def _recording_values(
-    recording: str, lane_no: int, lane: Lane, gathered: Gathered
-) -> dict[int, Data]:
-    """Run the steps that need the whole, and those that follow them."""
+def _recording_values(recording: str, lane: Lane, rows: LaneRows) -> dict[int, Data]:
+    """Run the steps that need the whole, and those that follow, as far as there is anything."""
     values: dict[int, Data] = {}
     for move in lane.program.moves.values():
         if move.level is not Level.RECORDING or move.step.given is Kind.TABLE:
             continue
         assert move.source is not None, "only a source takes nothing"
-        if move.gather is None:
+        if lane.program.moves[move.source].level is not Level.RECORDING:
+            parts = rows.parts(f"{move.index}.part.")
+        elif move.source not in values:  # no condition meets a piece
+            continue
+        elif move.gather is None:
             values[move.index] = run_move(move, values[move.source])
             continue
-        if lane.program.moves[move.source].level is Level.RECORDING:
-            parts = [collect_move(move, values[move.source])]
         else:
-            parts = gathered.parts(f"{lane_no}.{move.index}.part.")
+            parts = [collect_move(move, values[move.source])]
         if move.step.given is Kind.FIGURE:
             parts = [{**part, "recording": np.array(recording)} for part in parts]
         if parts:
@@ -212,16 +168,27 @@ def _recording_values(
     return values
 
 
-def _epoch_blocks(lane_no: int, lane: Lane, gathered: Gathered) -> list[Block]:
+def _epoch_blocks(lane: Lane, rows: LaneRows) -> list[Block]:
     cut = lane.program.rows_step
     by_cut: dict[int, dict[int, Features]] = defaultdict(dict)
     for move in lane.program.moves.values():
         if move.step.given is not Kind.FEATURES or move.level is not Level.ROWS:
             continue
-        named = gathered.named(f"{lane_no}.{move.index}.feature.")
-        if named:
-            by_cut[cut[move.index]][move.index] = features_from_arrays(lane.signal, named)
+        named = rows.named(f"{move.index}.feature.")
+        by_cut[cut[move.index]][move.index] = (
+            features_from_arrays(lane.signal, named) if named else _no_features(lane, move)
+        )
     return [Block(lane.signal, features) for _, features in sorted(by_cut.items())]
+
+
+def _no_features(lane: Lane, move: Move) -> Features:
+    """Return the features of a signal none of whose time lies in a condition."""
+    spec = move.spec_out
+    parts = [column.part for column in spec.columns] if isinstance(spec, FeaturesSpec) else []
+    none = np.empty(0)
+    whole, flags = np.empty(0, np.int64), np.empty(0, np.bool_)
+    rows = Rows(none, none, (), flags, (), whole)
+    return Features(lane.signal, rows, {part: np.empty(0) for part in parts}, ())
 
 
 def _average_blocks(lane: Lane, values: Mapping[int, Data]) -> list[Block]:
@@ -261,14 +228,18 @@ def _units(lane: Lane) -> dict[tuple[str, str], str]:
     }
 
 
+def _table_moves(lane: Lane) -> list[Move]:
+    return [move for move in lane.program.moves.values() if move.step.given is Kind.TABLE]
+
+
 def _csv_choice(passage: Passage) -> str:
-    """Return what the chain's table steps ask for; the most eager one decides.
+    """Return what the table steps ask for; the most eager one decides.
 
     Without one there are averaged spectra at most, written as the sizes suggest.
     """
     asked = set()
-    for step in passage.chain.steps:
-        if step.given is Kind.TABLE and step.stage.run is not None:
+    for step in (move.step for lane in passage.lanes for move in _table_moves(lane)):
+        if step.stage.run is not None:
             table = step.stage.run(step.params, None)
             assert isinstance(table, Table), f"{step.name} gives a table"
             asked.add(table.csv)

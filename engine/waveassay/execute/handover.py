@@ -9,6 +9,8 @@ from pathlib import Path
 from typing import Any, Literal
 
 from waveassay.contract import SignalError
+from waveassay.contract.digests import digest
+from waveassay.execute.stamps import require_unchanged, stamp_of
 from waveassay.execute.store import Store
 from waveassay.execute.work import JOBS_FILE, OUTCOMES, PLAN_FILE
 from waveassay.plan.jobs import Job
@@ -35,12 +37,15 @@ def read_recording(
         When it cannot be read, or is not what it should be.
     """
     try:
+        stamp = stamp_of(found.path)
         facts = digests.facts(
             found.path,
             lambda: read_facts(found.path, truncated=truncated).to_json(),
             version=f"{_own_version()} {truncated}",
         )
-        return ReadRecording(digests.digest(found.path), Facts.from_json(facts))
+        sha256 = digests.digest(found.path)
+        require_unchanged(found.path, stamp)
+        return ReadRecording(sha256, Facts.from_json(facts), stamp)
     except OSError as error:
         raise SignalError(
             f"{found.path}: cannot be read: {error.strerror}. Check the file and your right to "
@@ -54,16 +59,18 @@ def _own_version() -> str:
 
 
 def write_work(
-    store: Store, plan: Plan, jobs: Sequence[Job], env: dict[str, Any], run_name: str
+    store: Store, plan: Plan, jobs: Sequence[Job], env: dict[str, Any], run: Path
 ) -> Path:
-    """Write the work folder of a run afresh and return it."""
+    """Write the work folder of a run afresh and return it; ``run`` is the run folder."""
     identifier = environment_id(env)
-    folder = store.root / "work" / run_name
+    # Runs of several places may share a store, and their folders a name.
+    folder = store.root / "work" / f"{run.name}-{digest(str(run))[:8]}"
     recordings = {
         item.found.name: {
             "path": str(item.found.path.resolve()),
             "sha256": item.read.sha256,
             "facts": item.read.facts.to_json(),
+            "stamp": item.read.stamp,
         }
         for item in plan.recordings
         if item.read is not None

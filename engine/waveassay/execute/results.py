@@ -5,7 +5,7 @@ from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
-from waveassay.contract import number_text
+from waveassay.contract import SignalError, number_text
 from waveassay.contract.digests import digest
 from waveassay.execute.finish import FACTS_FILE
 from waveassay.execute.store import Store
@@ -74,9 +74,16 @@ def _result(item: PlannedRecording, store: Store, failures: Mapping[str, Failure
     if item.problem is not None:
         return Result(**known, status="failed", message=item.problem)
     finishing = {task.chain: task.key for task in item.tasks if task.action == "finish"}
-    failure = failures.get(item.found.name)
-    if failure is None and not all(store.has(key) for key in finishing.values()):
-        failure = Failure(item.found.name, "", "", "it was not finished. Run again.")
+    failure: Failure | None = None
+    outputs: list[Output] = []
+    if not all(store.has(key) for key in finishing.values()):
+        unknown = Failure(item.found.name, "", "", "it was not finished. Run again.")
+        failure = failures.get(item.found.name, unknown)
+    else:  # whatever happened to its job, all of it was done
+        try:
+            outputs = [_output(store, chain, key) for chain, key in finishing.items()]
+        except SignalError as error:
+            failure = Failure(item.found.name, "", "", str(error))
     if failure is not None:
         return Result(
             **known,
@@ -85,11 +92,6 @@ def _result(item: PlannedRecording, store: Store, failures: Mapping[str, Failure
             step=failure.step,
             message=failure.message,
         )
-    outputs = []
-    for chain, key in finishing.items():
-        artefact = store.read(key)
-        text = artefact.path(FACTS_FILE).read_text(encoding="utf-8")
-        outputs.append(Output(chain, artefact.folder, json.loads(text)))
     told = [warning for output in outputs for warning in output.facts["warnings"]]
     warnings = list(dict.fromkeys((*item.warnings, *told)))
     return Result(
@@ -98,6 +100,12 @@ def _result(item: PlannedRecording, store: Store, failures: Mapping[str, Failure
         message="; ".join(warnings),
         outputs=tuple(outputs),
     )
+
+
+def _output(store: Store, chain: str, key: str) -> Output:
+    artefact = store.read(key)
+    text = artefact.path(FACTS_FILE).read_text(encoding="utf-8")
+    return Output(chain, artefact.folder, json.loads(text))
 
 
 def step_rows(

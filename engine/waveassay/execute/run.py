@@ -171,7 +171,7 @@ class _Run:
         self, plan: Plan, jobs: Sequence[Job], env: dict[str, Any], folder: RunFolder
     ) -> dict[str, Failure]:
         """Have the jobs done; return the recordings that failed."""
-        work = write_work(self.store, plan, jobs, env, folder.path.name)
+        work = write_work(self.store, plan, jobs, env, folder.path)
         costs_s = {job.identifier: job.cost_s for job in jobs}
         ended: dict[str, str] = {}
 

@@ -15,6 +15,7 @@ from waveassay.execute.arrays import (
     exclusions_from_json,
     exclusions_to_json,
     load_arrays,
+    load_facts,
     save_arrays,
 )
 from waveassay.execute.store import Store
@@ -106,8 +107,9 @@ class SignalSource:
         found: dict[tuple[int, int], Signal] = {}
         from_file: dict[int, Window] = {}
         for (lane_no, move_no), window in wanted.items():
-            pass_no = self.passage.lanes[lane_no].program.moves[move_no].pass_no
-            if any(held == pass_no for held, _ in self.prepared):
+            program = self.passage.lanes[lane_no].program
+            pass_no = program.moves[move_no].pass_no
+            if program.prepares(pass_no) and any(held == pass_no for held, _ in self.prepared):
                 found[lane_no, move_no] = self._assemble(lane_no, move_no, pass_no, window)
             else:
                 from_file[lane_no] = self._within(window)
@@ -150,7 +152,8 @@ class SignalSource:
 
     def _load(self, key: str) -> tuple[Arrays, dict[str, Any]]:
         if key not in self._loaded:
-            self._loaded[key] = load_arrays(self.store.read(key).path(FILE))
+            path = self.store.read(key).path(FILE)
+            self._loaded[key] = load_arrays(path), load_facts(path)
             self.outside |= set(self._loaded[key][1]["outside"])
         return self._loaded[key]
 

@@ -112,17 +112,24 @@ class Store:
         place = self._place(key)
         try:
             facts = json.loads((place / _FACTS).read_text())
+            files = dict(facts["files"])
         except FileNotFoundError:
             raise MissingArtefactError(f"result {key[:12]} is not in the store") from None
-        for name, sha256 in facts["files"].items():
+        except (ValueError, KeyError, TypeError):
+            raise self._damaged(place / _FACTS) from None
+        for name, sha256 in files.items():
             path = place / name
             if not path.exists() or _sha256(path) != sha256:
-                shutil.rmtree(place, ignore_errors=True)
-                raise SignalError(
-                    f"{path}: a stored result was changed or lost. It has been removed; run again "
-                    "and it is computed afresh."
-                )
+                raise self._damaged(path)
         return Artefact(key, place, facts["digest"], facts["environment"])
+
+    def _damaged(self, path: Path) -> SignalError:
+        """Remove the result that a damaged file belongs to, and say so."""
+        shutil.rmtree(path.parent, ignore_errors=True)
+        return SignalError(
+            f"{path}: a stored result was changed or lost. It has been removed; run again and it "
+            "is computed afresh."
+        )
 
     def facts(self, key: str) -> tuple[str, str]:
         """Return a result's digest and environment without reading its files."""

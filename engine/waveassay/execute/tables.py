@@ -1,5 +1,6 @@
 """The rows of a passage's tables, as Arrow tables and plain rows."""
 
+from bisect import bisect_right
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
@@ -94,7 +95,9 @@ def feature_table(
         kind = pa.float64() if name in features else kinds.get(name, pa.string())
         values = [value for part in parts for value in part[name]]
         arrays.append(pa.array(values, kind, from_pandas=name in features))
-    return pa.table(dict(zip([*names, *features, "missing_reason"], arrays, strict=True)))
+    every = [*names, *features, "missing_reason"]
+    assert len(set(every)) == len(every), f"columns have distinct names ({every})"
+    return pa.table(dict(zip(every, arrays, strict=True)))
 
 
 def _block_columns(
@@ -207,16 +210,24 @@ def excluded_rows(
     for name in dict.fromkeys(c.name for c in conditions):
         windows = [c for c in conditions if c.name == name]
         total_s = sum((c.length_s for c in windows), Fraction(0))
-        reasons = dict.fromkeys(sorted({e.reason for e in everything}))
-        for reason in (*reasons, "any"):
+        for reason in (*sorted({e.reason for e in everything}), "any"):
             source = together if reason == "any" else everything
-            excluded_s = sum(
-                (_shared_s(e, c) for e in source if e.reason == reason for c in windows),
-                Fraction(0),
-            )
+            excluded_s = _overlap_s([e for e in source if e.reason == reason], windows)
             if excluded_s or reason == "any":
                 share = float(excluded_s / total_s) if total_s else None
                 yield [recording, chain, signal, name, reason, float(excluded_s), share]
+
+
+def _overlap_s(masks: Sequence[Interval], windows: Sequence[Interval]) -> Fraction:
+    """Return the time that windows share with masks, which are sorted and do not overlap."""
+    stops = [mask.stop_s for mask in masks]
+    shared = Fraction(0)
+    for window in windows:
+        for mask in masks[bisect_right(stops, window.start_s) :]:
+            if mask.start_s >= window.stop_s:
+                break
+            shared += _shared_s(mask, window)
+    return shared
 
 
 def _shared_s(one: Interval, other: Interval) -> Fraction:

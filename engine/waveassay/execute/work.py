@@ -13,12 +13,14 @@ from typing import Any
 
 from waveassay.contract import SignalError
 from waveassay.contract.errors import MachineError
-from waveassay.execute.finish import combine, finish, gather, read_states
+from waveassay.execute.finish import combine, finish, read_states
+from waveassay.execute.gathered import gather
 from waveassay.execute.memory import keep_freed_memory
 from waveassay.execute.moves import StepError
 from waveassay.execute.prepare import prepare
 from waveassay.execute.rows import make_rows
 from waveassay.execute.signals import SignalSource, prepared_keys
+from waveassay.execute.stamps import Stamp, require_unchanged
 from waveassay.execute.store import MissingArtefactError, Store
 from waveassay.plan.columns import FeatureColumn, columns_by_chain
 from waveassay.plan.passage import Passage, passages
@@ -48,6 +50,7 @@ class Ready:
     """A recording made ready for work: its passages and tasks."""
 
     path: Path
+    stamp: Stamp
     facts: Facts
     passages: Mapping[str, Passage]
     tasks: Mapping[str, Task]
@@ -88,10 +91,11 @@ class Bench:
             facts = Facts.from_json(known["facts"])
             ways, _ = passages(self.recipe, self.columns, recording, known["sha256"], facts)
             tasks = {task.key: task for way in ways for task in tasks_of(way)}
+            size, changed, touched = known["stamp"]
             self._ready.clear()  # jobs take recordings one after another
-            self._ready[recording] = Ready(
-                Path(known["path"]), facts, {way.chain.name: way for way in ways}, tasks
-            )
+            by_chain = {way.chain.name: way for way in ways}
+            stamp = (size, changed, touched)
+            self._ready[recording] = Ready(Path(known["path"]), stamp, facts, by_chain, tasks)
         return self._ready[recording]
 
     def task(self, recording: str, key: str) -> Task:
@@ -186,7 +190,9 @@ def _do(bench: Bench, recording: str, task: Task) -> None:
             )
             states = read_states(store, by_action["combine"])
             make = prepare if task.action == "prepare" else make_rows
+            require_unchanged(ready.path, ready.stamp)
             make(source, task.pass_no, task.stretch, states, folder)
+            require_unchanged(ready.path, ready.stamp)
 
 
 def warm_up() -> None:

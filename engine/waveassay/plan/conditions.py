@@ -20,6 +20,7 @@ from dataclasses import dataclass
 from datetime import datetime
 from difflib import get_close_matches
 from fractions import Fraction
+from itertools import pairwise
 
 from waveassay.contract import Condition, SignalError, exact
 from waveassay.recipe.model import Anchor, ConditionRule
@@ -62,7 +63,8 @@ def resolve_conditions(
     problems: list[str] = []
     for name, rule in rules.items():
         try:
-            spans = list(_spans(name, rule, notes, start, duration_s))
+            spans = sorted(_spans(name, rule, notes, start, duration_s))
+            _require_apart(name, spans)
             found.extend(_inside(name, *span, duration_s) for span in spans)
         except _Unresolved as problem:
             problems.append(str(problem))
@@ -254,6 +256,16 @@ def _clock_s(name: str, edge: str, text: str, start: datetime | None) -> Fractio
     of_day = hours * 3600 + minutes * 60 + seconds
     begun = start.hour * 3600 + start.minute * 60 + start.second
     return (of_day - begun - Fraction(start.microsecond, 1_000_000)) % _DAY_S
+
+
+def _require_apart(name: str, spans: Sequence[tuple[Fraction, Fraction]]) -> None:
+    """Refuse stretches of one condition that overlap: their epochs would be counted twice."""
+    for (first_s, stop_s), (next_s, _) in pairwise(spans):
+        if next_s < stop_s:
+            raise _Unresolved(
+                f"condition {name}: the stretch from {_time(first_s)} to {_time(stop_s)} overlaps "
+                f"the next, from {_time(next_s)}; make its length shorter"
+            )
 
 
 def _inside(name: str, start_s: Fraction, stop_s: Fraction, duration_s: Fraction) -> Condition:

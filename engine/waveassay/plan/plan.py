@@ -16,10 +16,11 @@ from waveassay.recording import Facts
 
 @dataclass(frozen=True)
 class ReadRecording:
-    """What is known of a recording before it is computed on."""
+    """What is known of a recording before it is computed on; the stamp is that of its file."""
 
     sha256: str
     facts: Facts
+    stamp: tuple[int, int, int] = (0, 0, 0)
 
 
 @dataclass(frozen=True)

@@ -21,6 +21,12 @@ def engine() -> dict[str, str]:
     return known | {"source": source_digest(Path(waveassay.__file__).parent, "*.py")}
 
 
+@lru_cache(maxsize=1)
+def writers() -> dict[str, str]:
+    """Return the versions of what writes tables and figures: they can change bytes, no number."""
+    return {name: version(name) for name in ("pyarrow", "matplotlib")}
+
+
 def stage_source(stage: Stage) -> str:
     """Return the digest of the package of stages that a stage comes from."""
     return _package_source(stage.params.__module__.split(".")[0])

@@ -19,7 +19,7 @@ from waveassay.plan.blocks import BLOCK_S, MARGIN_S
 from waveassay.plan.fusing import FORM
 from waveassay.plan.passage import Lane, Passage
 from waveassay.plan.program import Level, Move
-from waveassay.plan.sources import engine, stage_source
+from waveassay.plan.sources import engine, stage_source, writers
 from waveassay.plan.stretches import Stretch
 
 Action = Literal["prepare", "rows", "combine", "finish"]
@@ -63,6 +63,7 @@ class _Planner:
             "recording": self.passage.recording,
             "chain": self.passage.chain.name,
             "columns": [column.name for column in self.passage.columns],
+            "writers": writers(),
             "pieces": [[p.start_s, p.stop_s] for p in self.passage.pieces],
             "conditions": _conditions(self.passage),
             "lanes": self._lanes("finish", 0),

@@ -4,11 +4,13 @@ import csv
 import json
 import shutil
 from collections.abc import Iterable, Sequence
+from contextlib import suppress
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
+from waveassay.contract.errors import RefusedError
 from waveassay.plan.columns import columns_by_chain
 from waveassay.provenance.environment import environment_id
 from waveassay.provenance.files import machine_errors, write_text
@@ -65,8 +67,9 @@ class RunFolder:
         """Go on with the newest unfinished run of the same recipe, or make a new folder."""
         for folder in reversed(_folders(runs, recipe)):
             if not (folder / MANIFEST).exists() and _same_recipe(folder, recipe):
-                _clear(folder)
-                return cls(folder, Log(folder / LOG))
+                with suppress(RefusedError, OSError):  # else what is left of it is left alone
+                    _clear(folder)
+                    return cls(folder, Log(folder / LOG))
         stamp = datetime.now(UTC).strftime("%Y%m%dT%H%M%SZ")
         name = f"{recipe.name}-{recipe.edition}-{stamp}"
         for number in range(1, 1000):
@@ -184,8 +187,12 @@ def notes_on(runs: Path, recipe: Recipe) -> list[str]:
 
 
 def _events(folder: Path) -> list[dict[str, Any]]:
-    lines = (folder / LOG).read_text(encoding="utf-8").splitlines()
-    return [json.loads(line) for line in lines]
+    """Return a log's lines; none where it cannot be read, which is told elsewhere."""
+    try:
+        lines = (folder / LOG).read_text(encoding="utf-8").rstrip("\n").split("\n")
+        return [json.loads(line) for line in lines]
+    except (OSError, ValueError):
+        return []
 
 
 def _read_results(folder: Path) -> list[Result]:
@@ -205,8 +212,8 @@ def _folders(runs: Path, recipe: Recipe) -> list[Path]:
 
 def _same_recipe(folder: Path, recipe: Recipe) -> bool:
     try:
-        return (folder / SOURCE).read_text(encoding="utf-8") == recipe.text
-    except (OSError, UnicodeDecodeError):
+        return (folder / SOURCE).read_bytes() == recipe.text.encode()
+    except OSError:
         return False
 
 
@@ -214,18 +221,29 @@ def _clear(folder: Path) -> None:
     """Remove what a run that was cut off had written, but its recipe and its log."""
     for path in folder.iterdir():
         if path.name not in (SOURCE, LOG):
-            shutil.rmtree(path) if path.is_dir() else path.unlink()
+            shutil.rmtree(path) if path.is_dir() and not path.is_symlink() else path.unlink()
+
+
+def _free(path: Path, taken: set[Path]) -> Path:
+    """Return the path, numbered where another figure has it already; note it as taken."""
+    number, free = 1, path
+    while free in taken:
+        number += 1
+        free = path.with_name(f"{path.stem}-{number}{path.suffix}")
+    taken.add(free)
+    return free
 
 
 def _copy_figures(folder: Path, results: Sequence[Result]) -> None:
     rows = []
+    taken: set[Path] = set()
     for result in results:
         for output in result.outputs:
             for figure in output.facts["figures"]:
                 # The whole name stands in the file's: figures are sent on one by one.
                 file = f"{Path(result.recording).name}.{figure['signal']}.{figure['name']}.png"
                 safe = "".join(c if c.isalnum() or c in "-_." else "_" for c in file)
-                path = Path("figures", output.chain, result.recording).with_name(safe)
+                path = _free(Path("figures", output.chain, result.recording).with_name(safe), taken)
                 (folder / path).parent.mkdir(parents=True, exist_ok=True)
                 shutil.copyfile(output.folder / figure["file"], folder / path)
                 rows.append([path.as_posix(), figure["caption"]])

@@ -5,7 +5,7 @@ from collections.abc import Collection, Sequence
 from dataclasses import dataclass
 
 from waveassay.contract import Kind
-from waveassay.recipe.model import NAME_PATTERN, Step
+from waveassay.recipe.model import NAME_PATTERN, TABLE_COLUMNS, Step
 from waveassay.recipe.problems import Report, nearest
 from waveassay.recipe.registry import STEP_KEYS, Registry
 from waveassay.recipe.steps import ReadStep
@@ -178,6 +178,8 @@ class _Resolver:
             self.report.error(place, "R304", f"'{name}' already names a signal", where)
         elif name in self.registry.stages or name in {step.name for step in self.read}:
             self.report.error(place, "R304", f"'{name}' is the name of a stage", where)
+        elif name in TABLE_COLUMNS:
+            self.report.error(place, "R304", f"'{name}' is a column of every table", where)
         elif (other_step := self._unnamed(name, index)) is not None:
             message = (
                 f"'{name}' is what the output of {other_step.name} (line {other_step.place.line}) "

@@ -13,6 +13,15 @@ Name = Annotated[str, Field(pattern=NAME_PATTERN)]
 RecipeName = Annotated[str, Field(pattern=r"^[a-z0-9][a-z0-9-]*$")]
 
 
+#: Columns that every table of epochs or averages has; no feature may take their names.
+TABLE_COLUMNS = frozenset(
+    {
+        "recording", "signal", "signal_2", "condition", "epoch", "epochs", "start_s", "duration_s",
+        "kept", "reason", "missing_reason",
+    }
+)  # fmt: skip
+
+
 class _Part(BaseModel):
     model_config = ConfigDict(frozen=True, extra="forbid", strict=True, allow_inf_nan=False)
 
