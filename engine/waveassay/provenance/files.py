@@ -96,7 +96,7 @@ def write_beside(path: Path) -> Iterator[BinaryIO]:
                 file.flush()
                 os.fsync(file.fileno())
             os.replace(part, path)
-        except BaseException:
+        except BaseException:  # Ctrl-C too: nothing half written stays behind
             with suppress(OSError):
                 part.unlink()
             raise

@@ -86,7 +86,7 @@ class ClusterRunner:
         process = SnakemakeProcess(folder, self._options(folder, workers))
         try:
             patient = self._follow(process, state, on_event)
-        except BaseException:
+        except BaseException:  # Ctrl-C too: no job may stay behind on the cluster
             self._cancel(process)
             raise
         whole = None
