@@ -212,7 +212,7 @@ def test_resolved_recipe_gives_the_same_numbers(folder: Path) -> None:
 
 def test_a_stored_result_that_was_changed_is_found_and_made_again(folder: Path) -> None:
     first = run(RECIPE, [folder / "in"], folder / "out")
-    for path in (folder / "out" / "store" / "objects").rglob("signals.npz"):
+    for path in (folder / "out" / "store" / "objects").rglob("signals.arrays"):
         path.write_bytes(path.read_bytes()[:-1] + b"!")
     text = RECIPE.replace("13 Hz", "12 Hz")
     second = run(text, [folder / "in"], folder / "out")

@@ -1,130 +1,109 @@
-"""The tasks that see a whole recording: combining for the next pass, and finishing a passage."""
+"""The task that turns all rows of a passage into its tables, averages and figures."""
 
 import json
 from collections import defaultdict
 from collections.abc import Iterator, Mapping, Sequence
+from contextlib import ExitStack
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-from waveassay.contract import (
-    Data,
-    Features,
-    FeaturesSpec,
-    Figure,
-    Kind,
-    Part,
-    Rows,
-    Spectra,
-    Table,
-)
-from waveassay.execute.arrays import Arrays, load_arrays, save_arrays
+from waveassay.contract import Data, Features, FeaturesSpec, Figure, Kind, Rows, Spectra, Table
 from waveassay.execute.gathered import Gathered, LaneRows
 from waveassay.execute.moves import collect_move, combine_move, run_move
-from waveassay.execute.rows import features_from_arrays
-from waveassay.execute.store import Store
 from waveassay.execute.tables import (
     Block,
+    TableOfFeatures,
     excluded_rows,
-    feature_table,
     spectra_table,
     summary_rows,
 )
 from waveassay.plan.columns import column_name
 from waveassay.plan.passage import Lane, Passage
 from waveassay.plan.program import Level, Move
-from waveassay.plan.tasks import barriers
-from waveassay.provenance.tables import write_parquet
+from waveassay.provenance.tables import parquet_writer, write_parquet
 
-STATE_FILE = "state.npz"
 FACTS_FILE = "passage.json"
 
 
-def combine(passage: Passage, pass_no: int, gathered: Gathered, folder: Path) -> None:
-    """Turn what the pass before collected into what this pass applies."""
-    state: Arrays = {}
-    for lane_no, lane in enumerate(passage.lanes):
-        rows = gathered.lane(lane_no)
-        for move in barriers(lane, pass_no):
-            parts = rows.parts(f"{move.index}.part.")
-            made: Part = combine_move(move, parts)
-            state |= {f"{lane_no}.{move.index}.{name}": array for name, array in made.items()}
-    save_arrays(folder / STATE_FILE, state, {})
+@dataclass
+class _Told:
+    """What is told of a passage beside its tables; grows signal by signal."""
 
-
-def read_states(store: Store, keys: Sequence[str]) -> dict[tuple[int, int], Part]:
-    """Read what `combine` wrote: (lane, move) -> named arrays."""
-    states: dict[tuple[int, int], dict[str, Any]] = defaultdict(dict)
-    for key in keys:
-        for place, array in load_arrays(store.read(key).path(STATE_FILE)).items():
-            lane, move, name = place.split(".", 2)
-            states[int(lane), int(move)][name] = array
-    return dict(states)
+    warnings: list[str] = field(default_factory=list)
+    excluded: list[list[Any]] = field(default_factory=list)
+    figures: list[dict[str, str]] = field(default_factory=list)
+    summary: list[list[Any]] = field(default_factory=list)
+    averages: list[tuple[str, Spectra]] = field(default_factory=list)
 
 
 def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
-    """Write a passage's tables, figures, summary and excluded time."""
-    blocks: list[Block] = []
-    average_blocks: list[Block] = []
-    averages: list[tuple[str, Spectra]] = []
-    excluded: list[list[Any]] = []
-    figures: list[dict[str, str]] = []
-    units: dict[tuple[str, str], str] = {}
-    for lane_no, lane in enumerate(passage.lanes):
-        rows = gathered.lane(lane_no)
-        values = _recording_values(passage.recording, lane, rows)
-        blocks += _epoch_blocks(lane, rows)
-        average_blocks += _average_blocks(lane, values)
-        figures += _save_figures(lane, values, folder)
-        averages += [
-            (lane.program.moves[index].step.name, data)
-            for index, data in values.items()
-            if isinstance(data, Spectra)
+    """Write a passage's tables, figures, summary and excluded time, one signal after another."""
+    told = _Told(
+        [
+            f"{passage.lanes[lane].label}: some samples lie outside the digital limits of the "
+            "header; they are used as they are"
+            for lane in sorted(gathered.outside)
         ]
-        units |= _units(lane)
-        masks = gathered.excluded(lane_no)
-        excluded += excluded_rows(
-            passage.recording, passage.chain.name, lane.signal, masks, passage.pieces,
-            passage.conditions,
-        )  # fmt: skip
+    )
+    with ExitStack() as stack:
+        tables = {}
+        if any(_table_moves(lane) for lane in passage.lanes):
+            for averaged, name in ((False, "epochs.parquet"), (True, "averages.parquet")):
+                columns = [c for c in passage.columns if c.averaged is averaged]
+                if columns:
+                    table = TableOfFeatures(
+                        passage.recording, columns, passage.conditions, averaged
+                    )
+                    write = stack.enter_context(parquet_writer(folder / name, table.schema))
+                    tables[averaged] = (table, write)
+        for lane_no, lane in enumerate(passage.lanes):
+            rows = gathered.lane(lane_no, lane.signal)
+            values = _recording_values(passage.recording, lane, rows)
+            blocks = {False: _epoch_blocks(lane, rows), True: _average_blocks(lane, values)}
+            if _table_moves(lane):
+                for averaged, (table, write) in tables.items():
+                    for block in blocks[averaged]:
+                        write(table.of(block))
+            _tell(told, passage, lane, rows, values, blocks[False], folder)
+    if told.averages:
+        write_parquet(folder / "spectra.parquet", spectra_table(passage.recording, told.averages))
     facts: dict[str, Any] = {
-        "warnings": [
-            *(
-                f"{passage.lanes[lane].label}: some samples lie outside the digital limits of the "
-                "header; they are used as they are"
-                for lane in sorted(gathered.outside)
-            ),
-            *_without_epochs(passage, blocks),
-        ],
-        "excluded": excluded,
-        "figures": figures,
-        "summary": [],
+        "warnings": told.warnings,
+        "excluded": told.excluded,
+        "figures": told.figures,
+        "summary": told.summary,
         "csv": _csv_choice(passage),
     }
-    tabled = {lane.signal for lane in passage.lanes if _table_moves(lane)}
-    if tabled:
-        blocks = [block for block in blocks if block.signal in tabled]
-        average_blocks = [block for block in average_blocks if block.signal in tabled]
-        own = [c for c in passage.columns if not c.averaged]
-        for averaged, name, some in (
-            (False, "epochs.parquet", blocks),
-            (True, "averages.parquet", average_blocks),
-        ):
-            wanted = [c for c in passage.columns if c.averaged is averaged]
-            if wanted:
-                table = feature_table(
-                    passage.recording, some, wanted, passage.conditions, averaged=averaged
-                )
-                write_parquet(folder / name, table)
-        facts["summary"] = list(
-            summary_rows(
-                passage.recording, passage.chain.name, blocks, own, units, passage.conditions
-            )
-        )
-    if averages:
-        write_parquet(folder / "spectra.parquet", spectra_table(passage.recording, averages))
     (folder / FACTS_FILE).write_text(json.dumps(facts, sort_keys=True))
+
+
+def _tell(
+    told: _Told,
+    passage: Passage,
+    lane: Lane,
+    rows: LaneRows,
+    values: Mapping[int, Data],
+    blocks: Sequence[Block],
+    folder: Path,
+) -> None:
+    """Add what one signal gave beside its rows of tables."""
+    recording, chain, conditions = passage.recording, passage.chain.name, passage.conditions
+    told.figures += _save_figures(lane, values, folder)
+    told.averages += [
+        (lane.program.moves[index].step.name, data)
+        for index, data in values.items()
+        if isinstance(data, Spectra)
+    ]
+    told.excluded += excluded_rows(
+        recording, chain, lane.signal, rows.excluded, passage.pieces, conditions
+    )
+    told.warnings += _without_epochs(passage, blocks)
+    if _table_moves(lane):
+        own = [c for c in passage.columns if not c.averaged]
+        told.summary += summary_rows(recording, chain, blocks, own, _units(lane), conditions)
 
 
 def _without_epochs(passage: Passage, blocks: Sequence[Block]) -> Iterator[str]:
@@ -153,7 +132,7 @@ def _recording_values(recording: str, lane: Lane, rows: LaneRows) -> dict[int, D
             continue
         assert move.source is not None, "only a source takes nothing"
         if lane.program.moves[move.source].level is not Level.RECORDING:
-            parts = rows.parts(f"{move.index}.part.")
+            parts = rows.parts(move.index)
         elif move.source not in values:  # no condition meets a piece
             continue
         elif move.gather is None:
@@ -172,12 +151,9 @@ def _epoch_blocks(lane: Lane, rows: LaneRows) -> list[Block]:
     cut = lane.program.rows_step
     by_cut: dict[int, dict[int, Features]] = defaultdict(dict)
     for move in lane.program.moves.values():
-        if move.step.given is not Kind.FEATURES or move.level is not Level.ROWS:
-            continue
-        named = rows.named(f"{move.index}.feature.")
-        by_cut[cut[move.index]][move.index] = (
-            features_from_arrays(lane.signal, named) if named else _no_features(lane, move)
-        )
+        if move.step.given is Kind.FEATURES and move.level is Level.ROWS:
+            features = rows.features.get(move.index)
+            by_cut[cut[move.index]][move.index] = features or _no_features(lane, move)
     return [Block(lane.signal, features) for _, features in sorted(by_cut.items())]
 
 

@@ -1,71 +1,66 @@
 """What all stretches of a passage gave, read back one signal at a time."""
 
-from collections import defaultdict
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
-from pathlib import Path
-from typing import Any
+from functools import cached_property
 
-from waveassay.contract import Exclusion, Part, merged
-from waveassay.execute.arrays import Arrays, exclusions_from_json, load_arrays, load_facts
-from waveassay.execute.rows import FILE
+from waveassay.contract import Exclusion, Features, Part, merged
+from waveassay.execute.arrays import ArrayFile, Group, exclusions_from_json
+from waveassay.execute.feature_arrays import features_from_groups
+from waveassay.execute.rows import FILE, MASKS, OUTSIDE
 from waveassay.execute.store import Store
 
 
 @dataclass(frozen=True)
 class LaneRows:
-    """The arrays of one signal, by stretch, in order of time."""
+    """What the stretches gave of one signal, in order of time."""
 
-    arrays: Sequence[Arrays]
+    signal: str
+    groups: Sequence[Group]
 
-    def named(self, prefix: str) -> dict[str, list[Any]]:
-        """Return the arrays below a prefix, each name with its parts."""
-        found: dict[str, list[Any]] = defaultdict(list)
-        for part in self.parts(prefix):
-            for name, array in part.items():
-                found[name].append(array)
-        return found
+    @cached_property
+    def features(self) -> dict[int, Features]:
+        """Features by the number of their step."""
+        return features_from_groups(self.signal, self.groups)
 
-    def parts(self, prefix: str) -> list[Part]:
-        """Return the arrays below a prefix, one part a stretch that has some."""
+    def parts(self, index: int) -> list[Part]:
+        """Return what was collected for a step, one part a stretch that has some."""
+        prefix = f"{index}.part."
         parts = (
-            {n.removeprefix(prefix): a for n, a in arrays.items() if n.startswith(prefix)}
-            for arrays in self.arrays
+            {n.removeprefix(prefix): a for n, a in group.arrays.items() if n.startswith(prefix)}
+            for group in self.groups
         )
         return [part for part in parts if part]
+
+    @property
+    def excluded(self) -> tuple[Exclusion, ...]:
+        """The masks on the signal where epochs were cut."""
+        return merged(
+            item
+            for group in self.groups
+            for items in group.facts[MASKS].values()
+            for item in exclusions_from_json(items)
+        )
 
 
 @dataclass(frozen=True)
 class Gathered:
-    """Where the rows of all stretches are, in order of time, with their masks.
+    """Where the rows of all stretches are, in order of time.
 
     Attributes
     ----------
     outside : signals with samples outside the digital limits of their header.
     """
 
-    paths: Sequence[Path]
-    masks: Sequence[Mapping[str, Mapping[str, list[list[str]]]]]
+    files: Sequence[ArrayFile]
     outside: frozenset[int]
 
-    def lane(self, lane_no: int) -> LaneRows:
-        """Read one signal's arrays: all signals at once would fill the memory."""
-        prefix = f"{lane_no}."
-        return LaneRows([load_arrays(path, prefix) for path in self.paths])
-
-    def excluded(self, lane_no: int) -> tuple[Exclusion, ...]:
-        """Return the masks on a signal where epochs were cut."""
-        return merged(
-            item
-            for masks in self.masks
-            for items in masks[str(lane_no)].values()
-            for item in exclusions_from_json(items)
-        )
+    def lane(self, lane_no: int, signal: str) -> LaneRows:
+        """Read what there is of one signal: all signals at once would fill the memory."""
+        return LaneRows(signal, [file.group(str(lane_no)) for file in self.files])
 
 
 def gather(store: Store, keys: Sequence[str]) -> Gathered:
     """Find the rows of all stretches, checked against their digests."""
-    paths = [store.read(key).path(FILE) for key in keys]
-    facts = [load_facts(path) for path in paths]
-    outside = frozenset(lane for known in facts for lane in known["outside"])
-    return Gathered(paths, [known["masks"] for known in facts], outside)
+    files = [ArrayFile(store.read(key).path(FILE)) for key in keys]
+    return Gathered(files, frozenset(lane for file in files for lane in file.facts[OUTSIDE]))

@@ -1,13 +1,13 @@
 """The task that cuts the epochs that start in a stretch, down to their features, and collects."""
 
 from collections.abc import Mapping
+from fractions import Fraction
 from pathlib import Path
 from typing import Any
 
-import numpy as np
-
-from waveassay.contract import Data, Features, Kind, Rows, Signal
-from waveassay.execute.arrays import Arrays, exclusions_to_json, save_arrays
+from waveassay.contract import Data, Features, Part, Signal
+from waveassay.execute.arrays import Group, exclusions_to_json, save_groups
+from waveassay.execute.feature_arrays import ROWS_OF, features_to_arrays
 from waveassay.execute.moves import collect_move, run_move, starting_in
 from waveassay.execute.prepare import States
 from waveassay.execute.signals import SignalSource
@@ -16,7 +16,11 @@ from waveassay.plan.program import Level
 from waveassay.plan.stretches import Stretch
 from waveassay.plan.tasks import collected, rows_moves
 
-FILE = "rows.npz"
+FILE = "rows.arrays"
+#: In the facts of a signal: number of a step -> masks where it cut epochs.
+MASKS = "masks"
+#: In the facts of the whole: signals with samples outside the digital limits of their header.
+OUTSIDE = "outside"
 
 
 def make_rows(
@@ -24,35 +28,51 @@ def make_rows(
 ) -> None:
     """Run the steps on rows over a stretch; keep features, what is collected, and masks."""
     signals = source.over(_wanted(source, pass_no, stretch))
-    arrays: Arrays = {}
-    facts: dict[str, Any] = {}
+    groups: dict[str, Group] = {}
     for lane_no, lane in enumerate(source.passage.lanes):
         values: dict[int, Data] = {
             move_no: signal for (owner, move_no), signal in signals.items() if owner == lane_no
         }
-        bounds = lane.bounds_s(stretch)
-        masks = {}
-        for move in rows_moves(lane, pass_no):
-            assert move.source is not None, "only a source takes nothing"
-            taken = values[move.source]
-            made = starting_in(run_move(move, taken, states.get((lane_no, move.index))), bounds)
-            values[move.index] = made
-            if move.pass_no != pass_no:
-                continue
-            place = f"{lane_no}.{move.index}"
-            if isinstance(taken, Signal):
-                masks[str(move.index)] = exclusions_to_json(taken.cut(*bounds).excluded)
-            if isinstance(made, Features):
-                arrays |= features_to_arrays(f"{place}.feature", made)
-        for move in collected(lane, pass_no):
-            assert move.source is not None, "only a source takes nothing"
-            data = values[move.source]
-            if isinstance(data, Signal):
-                data = data.cut(*bounds)
-            part = collect_move(move, data)
-            arrays |= {f"{lane_no}.{move.index}.part.{name}": x for name, x in part.items()}
-        facts[str(lane_no)] = masks
-    save_arrays(folder / FILE, arrays, {"masks": facts, "outside": sorted(source.outside)})
+        groups[str(lane_no)] = _lane_rows(
+            lane,
+            pass_no,
+            lane.bounds_s(stretch),
+            values,
+            {index: state for (owner, index), state in states.items() if owner == lane_no},
+        )
+    save_groups(folder / FILE, groups, {OUTSIDE: sorted(source.outside)})
+
+
+def _lane_rows(
+    lane: Lane,
+    pass_no: int,
+    bounds_s: tuple[Fraction, Fraction],
+    values: dict[int, Data],
+    states: Mapping[int, Part],
+) -> Group:
+    """Run one signal's steps on rows; ``values`` holds the signals that they take."""
+    masks: dict[str, Any] = {}
+    features: dict[int, Features] = {}
+    for move in rows_moves(lane, pass_no):
+        assert move.source is not None, "only a source takes nothing"
+        taken = values[move.source]
+        made = starting_in(run_move(move, taken, states.get(move.index)), bounds_s)
+        values[move.index] = made
+        if move.pass_no != pass_no:
+            continue
+        if isinstance(taken, Signal):
+            masks[str(move.index)] = exclusions_to_json(taken.cut(*bounds_s).excluded)
+        if isinstance(made, Features):
+            features[move.index] = made
+    arrays, rows_of = features_to_arrays(features)
+    for move in collected(lane, pass_no):
+        assert move.source is not None, "only a source takes nothing"
+        data = values[move.source]
+        if isinstance(data, Signal):
+            data = data.cut(*bounds_s)
+        part = collect_move(move, data)
+        arrays |= {f"{move.index}.part.{name}": x for name, x in part.items()}
+    return Group(arrays, {MASKS: masks, ROWS_OF: rows_of})
 
 
 def _wanted(
@@ -72,43 +92,3 @@ def _signals_taken(lane: Lane, pass_no: int) -> list[int]:
     takers = [*rows_moves(lane, pass_no), *collected(lane, pass_no)]
     sources = {move.source for move in takers if move.source is not None}
     return sorted(i for i in sources if lane.program.moves[i].level is Level.SAMPLES)
-
-
-def features_to_arrays(prefix: str, features: Features) -> Arrays:
-    """Return features and what their rows say, as named arrays."""
-    rows = features.rows
-    named: Arrays = {
-        "start_s": rows.start_s,
-        "duration_s": rows.duration_s,
-        "condition": np.array(rows.condition, np.str_),
-        "kept": rows.kept,
-        "reason": np.array(rows.reason, np.str_),
-        "epochs": rows.epochs,
-        "missing": np.array(features.missing, np.str_),
-    }
-    named |= {f"column.{part}": values for part, values in features.columns.items()}
-    return {f"{prefix}.{name}": array for name, array in named.items()}
-
-
-def features_from_arrays(signal: str, named: Mapping[str, list[Any]]) -> Features:
-    """Join features that several stretches gave; each value of ``named`` lists their arrays."""
-    whole = {name: np.concatenate(parts) for name, parts in named.items()}
-    rows = Rows(
-        start_s=whole["start_s"],
-        duration_s=whole["duration_s"],
-        condition=tuple(str(text) for text in whole["condition"]),
-        kept=whole["kept"],
-        reason=tuple(str(text) for text in whole["reason"]),
-        epochs=whole["epochs"],
-    )
-    prefix = "column."
-    columns = {
-        name.removeprefix(prefix): values
-        for name, values in whole.items()
-        if name.startswith(prefix)
-    }
-    missing = tuple(str(text) for text in whole["missing"])
-    return Features(signal, rows, columns, missing)
-
-
-KINDS_OF_FEATURES = (Kind.FEATURES, Kind.AVERAGE_FEATURES)

@@ -5,25 +5,23 @@ from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from math import ceil
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 
 from waveassay.contract import Floats, Interval, Signal, merged
 from waveassay.execute.arrays import (
-    Arrays,
+    ArrayFile,
+    Group,
     exclusions_from_json,
     exclusions_to_json,
-    load_arrays,
-    load_facts,
-    save_arrays,
+    save_groups,
 )
 from waveassay.execute.store import Store
 from waveassay.plan.passage import Lane, Passage
 from waveassay.plan.tasks import Task, overlapping
 from waveassay.recording import Facts, open_recording
 
-FILE = "signals.npz"
+FILE = "signals.arrays"
 
 Window = tuple[Fraction, Fraction]
 
@@ -70,17 +68,19 @@ def save_prepared(
     folder: Path, prepared: Mapping[tuple[int, int], Signal], outside: set[int]
 ) -> None:
     """Write prepared signals, by lane and move, and the lanes outside their digital limits."""
-    arrays: Arrays = {}
-    facts: dict[str, Any] = {"outside": sorted(outside)}
-    for (lane, move), signal in prepared.items():
-        arrays[f"{lane}.{move}"] = signal.x
-        facts[f"{lane}.{move}"] = {
-            "rate_hz": str(signal.rate_hz),
-            "start_s": str(signal.start_s),
-            "unit": signal.unit,
-            "excluded": exclusions_to_json(signal.excluded),
-        }
-    save_arrays(folder / FILE, arrays, facts)
+    groups = {
+        f"{lane}.{move}": Group(
+            {"x": signal.x},
+            {
+                "rate_hz": str(signal.rate_hz),
+                "start_s": str(signal.start_s),
+                "unit": signal.unit,
+                "excluded": exclusions_to_json(signal.excluded),
+            },
+        )
+        for (lane, move), signal in prepared.items()
+    }
+    save_groups(folder / FILE, groups, {"outside": sorted(outside)})
 
 
 @dataclass
@@ -100,7 +100,7 @@ class SignalSource:
     piece_no: int
     prepared: Mapping[tuple[int, int], str]
     outside: set[int] = field(default_factory=set)
-    _loaded: dict[str, tuple[Arrays, dict[str, Any]]] = field(default_factory=dict)
+    _files: dict[str, ArrayFile] = field(default_factory=dict)
 
     def over(self, wanted: Mapping[tuple[int, int], Window]) -> dict[tuple[int, int], Signal]:
         """Return signals by (lane, move), each over its own window."""
@@ -130,16 +130,16 @@ class SignalSource:
         start_s, stop_s = self._within(window)
         parts: list[Signal] = []
         for stretch in overlapping(lane, self.piece_no, start_s, stop_s):
-            arrays, facts = self._load(self.prepared[pass_no, stretch.number])
-            name = f"{lane_no}.{move_no}"
-            known = facts[name]
+            file = self._file(self.prepared[pass_no, stretch.number])
+            group = file.group(f"{lane_no}.{move_no}")
+            known = group.facts
             parts.append(
                 Signal(
                     lane.signal,
                     str(known["unit"]),
                     Fraction(str(known["rate_hz"])),
                     Fraction(str(known["start_s"])),
-                    arrays[name],
+                    group.arrays["x"],
                     piece,
                     exclusions_from_json(known["excluded"]),
                 )
@@ -150,12 +150,11 @@ class SignalSource:
         piece = self.passage.pieces[self.piece_no]
         return max(window[0], piece.start_s), min(window[1], piece.stop_s)
 
-    def _load(self, key: str) -> tuple[Arrays, dict[str, Any]]:
-        if key not in self._loaded:
-            path = self.store.read(key).path(FILE)
-            self._loaded[key] = load_arrays(path), load_facts(path)
-            self.outside |= set(self._loaded[key][1]["outside"])
-        return self._loaded[key]
+    def _file(self, key: str) -> ArrayFile:
+        if key not in self._files:
+            self._files[key] = ArrayFile(self.store.read(key).path(FILE))
+            self.outside |= set(self._files[key].facts["outside"])
+        return self._files[key]
 
 
 def _joined(parts: Sequence[Signal]) -> Signal:

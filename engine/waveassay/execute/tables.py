@@ -69,87 +69,91 @@ class Block:
         return features.columns[wanted.part]
 
 
-def feature_table(
-    recording: str,
-    blocks: Sequence[Block],
-    columns: Sequence[FeatureColumn],
-    conditions: Sequence[Condition],
-    *,
-    averaged: bool,
-) -> "pa.Table":
-    """Return a wide table: one row an epoch (or condition), sorted, one column a feature."""
+class TableOfFeatures:
+    """A wide table, made signal by signal: one row an epoch (or condition), one column a feature.
+
+    Rows of a signal are sorted by condition, in the order in which conditions begin, then by time.
+    """
+
+    def __init__(
+        self,
+        recording: str,
+        columns: Sequence[FeatureColumn],
+        conditions: Sequence[Condition],
+        averaged: bool,
+    ) -> None:
+        import pyarrow as pa
+
+        self.recording, self.columns, self.averaged = recording, columns, averaged
+        names = dict.fromkeys(condition.name for condition in conditions)
+        self._rank = {name: place for place, name in enumerate(names)}
+        kinds: dict[str, Any] = {
+            "epoch": pa.int64(),
+            "epochs": pa.int64(),
+            "start_s": pa.float64(),
+            "duration_s": pa.float64(),
+            "kept": pa.bool_(),
+        }
+        first = AVERAGE_COLUMNS if averaged else EPOCH_COLUMNS
+        fields = [(name, kinds.get(name, pa.string())) for name in first]
+        fields += [(column.name, pa.float64()) for column in columns]
+        fields.append(("missing_reason", pa.string()))
+        every = [name for name, _ in fields]
+        assert len(set(every)) == len(every), f"columns have distinct names ({every})"
+        self.schema: pa.Schema = pa.schema(fields)
+
+    def of(self, block: Block) -> "pa.Table":
+        """Return the rows of one block."""
+        import pyarrow as pa
+
+        rows, last = block.rows, len(self._rank)
+        rank = np.array([self._rank.get(name, last) for name in rows.condition], np.int64)
+        order = np.lexsort((rows.start_s, rank))
+        count = order.size
+        values: dict[str, Any] = {
+            "recording": pa.repeat(self.recording, count),
+            "signal": pa.repeat(block.signal, count),
+            "signal_2": pa.nulls(count, pa.string()),
+            "condition": _texts(rows.condition, order),
+            "start_s": rows.start_s[order],
+            "duration_s": rows.duration_s[order],
+            "kept": rows.kept[order],
+            "reason": _texts(rows.reason, order),
+            "missing_reason": _texts(_missing(block, self.columns, count), order),
+        }
+        if self.averaged:
+            values["epochs"] = rows.epochs[order]
+        else:
+            sorted_rank = rank[order]
+            begun = np.searchsorted(sorted_rank, sorted_rank, side="left")
+            values["epoch"] = np.arange(count) - begun
+        values |= {column.name: block.column(column)[order] for column in self.columns}
+        arrays = [pa.array(values[f.name], f.type, from_pandas=True) for f in self.schema]
+        return pa.Table.from_arrays(arrays, schema=self.schema)
+
+
+def _texts(texts: Sequence[str], order: Ints) -> Any:
+    """Return texts in an order; an empty one is missing."""
     import pyarrow as pa
 
-    parts = [_block_columns(recording, block, columns, conditions, averaged) for block in blocks]
-    kinds: dict[str, Any] = {
-        "epoch": pa.int64(),
-        "epochs": pa.int64(),
-        "start_s": pa.float64(),
-        "duration_s": pa.float64(),
-        "kept": pa.bool_(),
-    }
-    names = list(AVERAGE_COLUMNS if averaged else EPOCH_COLUMNS)
-    features = [column.name for column in columns]
-    arrays = []
-    for name in [*names, *features, "missing_reason"]:
-        kind = pa.float64() if name in features else kinds.get(name, pa.string())
-        values = [value for part in parts for value in part[name]]
-        arrays.append(pa.array(values, kind, from_pandas=name in features))
-    every = [*names, *features, "missing_reason"]
-    assert len(set(every)) == len(every), f"columns have distinct names ({every})"
-    return pa.table(dict(zip(every, arrays, strict=True)))
-
-
-def _block_columns(
-    recording: str,
-    block: Block,
-    columns: Sequence[FeatureColumn],
-    conditions: Sequence[Condition],
-    averaged: bool,
-) -> dict[str, list[Any]]:
-    rows = block.rows
-    rank = {name: place for place, name in enumerate(dict.fromkeys(c.name for c in conditions))}
-    ranks = np.array([rank.get(name, len(rank)) for name in rows.condition], np.int64)
-    order = np.lexsort((rows.start_s, ranks))
-    count = len(order)
-    table: dict[str, list[Any]] = {
-        "recording": [recording] * count,
-        "signal": [block.signal] * count,
-        "signal_2": [None] * count,
-        "condition": [rows.condition[i] for i in order],
-        "start_s": rows.start_s[order].tolist(),
-        "duration_s": rows.duration_s[order].tolist(),
-        "kept": rows.kept[order].tolist(),
-        "reason": [rows.reason[i] or None for i in order],
-    }
-    if averaged:
-        table["epochs"] = rows.epochs[order].tolist()
-    else:
-        table["epoch"] = _numbers(ranks[order])
-    for column in columns:
-        table[column.name] = block.column(column)[order].tolist()
-    missing = _missing(block, columns, count)
-    table["missing_reason"] = [missing[i] or None for i in order]
-    return table
-
-
-def _numbers(ranks: Ints) -> list[int]:
-    """Return each row's number within its condition, from 0; ``ranks`` are sorted."""
-    starts = np.searchsorted(ranks, ranks, side="left")
-    return [int(i) for i in np.arange(ranks.size) - starts]
+    number = {text: place for place, text in enumerate(dict.fromkeys(texts))}
+    codes = np.fromiter(map(number.__getitem__, texts), np.int32, len(texts))[order]
+    known = pa.array([text or None for text in number], pa.string())
+    return pa.DictionaryArray.from_arrays(codes, known).cast(pa.string())
 
 
 def _missing(block: Block, columns: Sequence[FeatureColumn], count: int) -> list[str]:
     steps = dict.fromkeys((c.step_index, c.name.split(".")[0]) for c in columns)
-    texts: list[list[str]] = [[] for _ in range(count)]
+    texts: list[str] = [""] * count
     for step_index, feature in steps:
         features = block.features.get(step_index)
-        if features is None:
+        if features is None or not any(features.missing):
             continue
         for place, reason in enumerate(features.missing):
             if reason:
-                texts[place].append(f"{feature}: {reason}")
-    return ["; ".join(items) for items in texts]
+                before = f"{texts[place]}; " if texts[place] else ""
+                texts[place] = f"{before}{feature}: {reason}"
+    return texts
 
 
 def summary_rows(

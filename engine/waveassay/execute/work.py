@@ -13,7 +13,7 @@ from typing import Any
 
 from waveassay.contract import SignalError
 from waveassay.contract.errors import MachineError
-from waveassay.execute.finish import combine, finish, read_states
+from waveassay.execute.finish import finish
 from waveassay.execute.gathered import gather
 from waveassay.execute.memory import keep_freed_memory
 from waveassay.execute.moves import StepError
@@ -21,6 +21,7 @@ from waveassay.execute.prepare import prepare
 from waveassay.execute.rows import make_rows
 from waveassay.execute.signals import SignalSource, prepared_keys
 from waveassay.execute.stamps import Stamp, require_unchanged
+from waveassay.execute.states import combine, read_states
 from waveassay.execute.store import MissingArtefactError, Store
 from waveassay.plan.columns import FeatureColumn, columns_by_chain
 from waveassay.plan.passage import Passage, passages

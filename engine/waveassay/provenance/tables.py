@@ -1,6 +1,7 @@
 """Tables as files: CSV for people, Parquet for many rows; the same table, the same bytes."""
 
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, BinaryIO, Literal
@@ -82,11 +83,24 @@ def write_csv(path: Path, columns: Sequence[Column], rows: Any) -> None:
 
 
 def write_parquet(path: Path, table: Any) -> None:
-    """Write a pyarrow Table as Parquet; equal tables give equal bytes.
+    """Write a pyarrow Table as Parquet, as `parquet_writer` does.
 
-    Zstandard, dictionaries for text only, row groups of 131,072; NaN is written as missing. How a
-    table is cut into chunks, and its metadata, leave no trace. The bytes hold the version of the
-    pyarrow that wrote them.
+    Raises
+    ------
+    MachineError
+        When the disk or a permission declines.
+    """
+    with parquet_writer(path, table.schema) as write:
+        write(table)
+
+
+@contextmanager
+def parquet_writer(path: Path, schema: Any) -> Iterator[Callable[[Any], None]]:
+    """Give a function that adds a pyarrow Table to a Parquet file; equal rows give equal bytes.
+
+    Zstandard, dictionaries for text only, row groups of 131,072; NaN is written as missing. How
+    the rows are cut into tables, and their metadata, leave no trace. The bytes hold the version of
+    the pyarrow that wrote them. No more than a row group is held.
 
     Raises
     ------
@@ -95,23 +109,39 @@ def write_parquet(path: Path, table: Any) -> None:
     """
     import pyarrow as pa
 
-    pq = _parquet()
+    plain = schema.remove_metadata()
+    text = [field.name for field in plain if pa.types.is_string(field.type)]
+    waiting: list[Any] = []
 
-    whole = table.replace_schema_metadata(None).combine_chunks()
-    arrays = [_without_nan(whole.column(name)) for name in whole.column_names]
-    whole = pa.Table.from_arrays(arrays, names=whole.column_names)
-    text = [field.name for field in whole.schema if pa.types.is_string(field.type)]
-    with write_beside(path) as file:
-        pq.write_table(
-            whole,
+    with (
+        write_beside(path) as file,
+        _parquet().ParquetWriter(
             file,
-            row_group_size=_GROUP_ROWS,
+            plain,
             compression="zstd",
             use_dictionary=text,
             store_schema=False,
             version="2.6",
             data_page_version="1.0",
-        )
+        ) as writer,
+    ):
+
+        def write_groups(least: int) -> None:
+            while waiting and sum(table.num_rows for table in waiting) >= least:
+                whole = pa.concat_tables(waiting)
+                writer.write_table(
+                    whole.slice(0, _GROUP_ROWS).combine_chunks(), row_group_size=_GROUP_ROWS
+                )
+                waiting[:] = [whole.slice(_GROUP_ROWS)] if whole.num_rows > _GROUP_ROWS else []
+
+        def write(table: Any) -> None:
+            arrays = [_without_nan(column) for column in table.columns]
+            if table.num_rows:
+                waiting.append(pa.Table.from_arrays(arrays, schema=plain))
+            write_groups(_GROUP_ROWS)
+
+        yield write
+        write_groups(0)
 
 
 def read_parquet(path: Path) -> Any:
