@@ -83,6 +83,33 @@ def save_prepared(
     save_groups(folder / FILE, groups, {"outside": sorted(outside)})
 
 
+class PreparedFiles:
+    """Files of prepared signals in a store, the last few known to be what was written.
+
+    A process that prepares a stretch cuts its epochs next: checking a file's digest once a process
+    is enough.
+    """
+
+    _KEPT = 4
+
+    def __init__(self, store: Store) -> None:
+        self._store = store
+        self._known: dict[str, ArrayFile] = {}
+
+    def file(self, key: str) -> ArrayFile:
+        """Return a result's file, checked against its digest unless it is known."""
+        if key not in self._known:
+            self._store.read(key)
+            self.know(key)
+        return self._known[key]
+
+    def know(self, key: str) -> None:
+        """Note a result that was just written, or checked."""
+        self._known[key] = ArrayFile(self._store.place(key) / FILE)
+        while len(self._known) > self._KEPT:
+            del self._known[next(iter(self._known))]
+
+
 @dataclass
 class SignalSource:
     """Signals of a passage over any interval of a piece, whatever holds them.
@@ -96,11 +123,10 @@ class SignalSource:
     passage: Passage
     path: Path
     facts: Facts
-    store: Store
+    files: PreparedFiles
     piece_no: int
     prepared: Mapping[tuple[int, int], str]
     outside: set[int] = field(default_factory=set)
-    _files: dict[str, ArrayFile] = field(default_factory=dict)
 
     def over(self, wanted: Mapping[tuple[int, int], Window]) -> dict[tuple[int, int], Signal]:
         """Return signals by (lane, move), each over its own window."""
@@ -130,7 +156,8 @@ class SignalSource:
         start_s, stop_s = self._within(window)
         parts: list[Signal] = []
         for stretch in overlapping(lane, self.piece_no, start_s, stop_s):
-            file = self._file(self.prepared[pass_no, stretch.number])
+            file = self.files.file(self.prepared[pass_no, stretch.number])
+            self.outside |= set(file.facts["outside"])
             group = file.group(f"{lane_no}.{move_no}")
             known = group.facts
             parts.append(
@@ -149,12 +176,6 @@ class SignalSource:
     def _within(self, window: Window) -> Window:
         piece = self.passage.pieces[self.piece_no]
         return max(window[0], piece.start_s), min(window[1], piece.stop_s)
-
-    def _file(self, key: str) -> ArrayFile:
-        if key not in self._files:
-            self._files[key] = ArrayFile(self.store.read(key).path(FILE))
-            self.outside |= set(self._files[key].facts["outside"])
-        return self._files[key]
 
 
 def _joined(parts: Sequence[Signal]) -> Signal:

@@ -46,12 +46,13 @@ class Store:
     def __init__(self, root: Path) -> None:
         self.root = root
 
-    def _place(self, key: str) -> Path:
+    def place(self, key: str) -> Path:
+        """Return the folder that a result has, or would have."""
         return self.root / "objects" / key[:2] / key
 
     def has(self, key: str) -> bool:
         """Tell whether a result is there, whole."""
-        return (self._place(key) / _FACTS).exists()
+        return (self.place(key) / _FACTS).exists()
 
     @contextmanager
     def writing(self, key: str, environment: str) -> Iterator[Path]:
@@ -62,7 +63,7 @@ class Store:
         MachineError
             When the disk is full or may not be written.
         """
-        place = self._place(key)
+        place = self.place(key)
         try:
             place.parent.mkdir(parents=True, exist_ok=True)
             part = Path(tempfile.mkdtemp(prefix=PART_PREFIX, dir=place.parent))
@@ -78,7 +79,7 @@ class Store:
             raise told from error
 
     def _put(self, key: str, environment: str, part: Path) -> None:
-        place = self._place(key)
+        place = self.place(key)
         files = {
             path.relative_to(part).as_posix(): _sha256(path)
             for path in sorted(part.rglob("*"))
@@ -109,7 +110,7 @@ class Store:
         SignalError
             When a file was changed or lost; the result is removed, so that the next run makes it.
         """
-        place = self._place(key)
+        place = self.place(key)
         try:
             facts = json.loads((place / _FACTS).read_text())
             files = dict(facts["files"])
@@ -133,7 +134,7 @@ class Store:
 
     def facts(self, key: str) -> tuple[str, str]:
         """Return a result's digest and environment without reading its files."""
-        facts = json.loads((self._place(key) / _FACTS).read_text())
+        facts = json.loads((self.place(key) / _FACTS).read_text())
         return facts["digest"], facts["environment"]
 
     @contextmanager

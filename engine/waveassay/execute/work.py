@@ -19,7 +19,7 @@ from waveassay.execute.memory import keep_freed_memory
 from waveassay.execute.moves import StepError
 from waveassay.execute.prepare import prepare
 from waveassay.execute.rows import make_rows
-from waveassay.execute.signals import SignalSource, prepared_keys
+from waveassay.execute.signals import PreparedFiles, SignalSource, prepared_keys
 from waveassay.execute.stamps import Stamp, require_unchanged
 from waveassay.execute.states import combine, read_states
 from waveassay.execute.store import MissingArtefactError, Store
@@ -65,6 +65,7 @@ class Bench:
         plan = json.loads((folder / PLAN_FILE).read_text(encoding="utf-8"))
         self.environment: str = plan["environment"]
         self.store = Store(Path(plan["store"]))
+        self.prepared = PreparedFiles(self.store)
         self._plan: dict[str, Any] = plan
         self._ready: dict[str, Ready] = {}
 
@@ -185,7 +186,7 @@ def _do(bench: Bench, recording: str, task: Task) -> None:
                 passage,
                 ready.path,
                 ready.facts,
-                store,
+                bench.prepared,
                 task.stretch.piece,
                 prepared_keys(task, ready.tasks),
             )
@@ -194,6 +195,8 @@ def _do(bench: Bench, recording: str, task: Task) -> None:
             require_unchanged(ready.path, ready.stamp)
             make(source, task.pass_no, task.stretch, states, folder)
             require_unchanged(ready.path, ready.stamp)
+    if task.action == "prepare":
+        bench.prepared.know(task.key)
 
 
 def warm_up() -> None:
