@@ -22,6 +22,7 @@ from waveassay.contract.errors import MachineError
 from waveassay.provenance.tables import (
     Column,
     concat_parquet_to_csv,
+    parquet_writer,
     read_parquet,
     table_of,
     write_csv,
@@ -222,6 +223,21 @@ from waveassay.provenance.tables import Column, table_of, write_parquet
 columns = [Column("a", "text"), Column("x", "number")]
 write_parquet(Path(sys.argv[1]), table_of(columns, [(f"r{i % 3}", i / 7) for i in range(5000)]))
 """
+
+
+def test_a_table_added_in_pieces_is_the_same_file(tmp_path: Path) -> None:
+    count = 300_000  # more than two row groups
+    table = table_of(
+        [Column("name", "text"), Column("value", "number")],
+        {"name": [f"s{i // 1000}" for i in range(count)], "value": np.arange(count) * 0.1},
+    )
+    write_parquet(tmp_path / "whole.parquet", table)
+    with parquet_writer(tmp_path / "pieces.parquet", table.schema) as write:
+        for start, stop in ((0, 7), (7, 100_000), (100_000, 100_000), (100_000, count)):
+            write(table.slice(start, stop - start))
+    whole, pieces = (tmp_path / f"{name}.parquet" for name in ("whole", "pieces"))
+    assert pieces.read_bytes() == whole.read_bytes()
+    assert read_parquet(whole).equals(table)
 
 
 def test_another_process_writes_the_same_parquet_bytes(tmp_path: Path) -> None:

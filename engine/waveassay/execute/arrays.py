@@ -7,7 +7,7 @@ to open than to read.
 """
 
 import json
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from fractions import Fraction
 from itertools import chain
@@ -115,11 +115,16 @@ def _padded(size: int) -> int:
     return -(-size // _ALIGNED) * _ALIGNED
 
 
-def texts_to_arrays(name: str, texts: tuple[str, ...]) -> Arrays:
+def texts_to_arrays(name: str, texts: Sequence[str]) -> Arrays:
     """Return texts of which many are alike as two arrays: which ones there are, and which where."""
+    known, codes = coded(texts)
+    return {f"{name}.texts": np.array(known, np.str_), f"{name}.codes": codes}
+
+
+def coded(texts: Sequence[str]) -> tuple[list[str], NDArray[np.int32]]:
+    """Return which texts there are, in the order first met, and for each place which one."""
     number = {text: place for place, text in enumerate(dict.fromkeys(texts))}
-    codes = np.fromiter(map(number.__getitem__, texts), np.uint32, len(texts))
-    return {f"{name}.texts": np.array(list(number), np.str_), f"{name}.codes": codes}
+    return list(number), np.fromiter(map(number.__getitem__, texts), np.int32, len(texts))
 
 
 def texts_from_arrays(name: str, arrays: Mapping[str, NDArray[Any]]) -> tuple[str, ...]:

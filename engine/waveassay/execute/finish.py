@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 
 from waveassay.contract import Data, Features, FeaturesSpec, Figure, Kind, Rows, Spectra, Table
+from waveassay.execute.arrays import coded
 from waveassay.execute.gathered import Gathered, LaneRows
 from waveassay.execute.moves import collect_move, combine_move, run_move
 from waveassay.execute.tables import (
@@ -109,18 +110,12 @@ def _tell(
 def _without_epochs(passage: Passage, blocks: Sequence[Block]) -> Iterator[str]:
     """Yield a warning for each condition of a signal that gave nothing."""
     for block in blocks:
-        kept = dict.fromkeys((c.name for c in passage.conditions), 0)
-        rows = dict(kept)
-        for name, is_kept in zip(block.rows.condition, block.rows.kept, strict=True):
-            rows[name] += 1
-            kept[name] += int(is_kept)
-        for name, count in kept.items():
-            if count == 0:
-                why = (
-                    "no epoch fits in it"
-                    if rows[name] == 0
-                    else f"none of {rows[name]} epochs is kept"
-                )
+        names, codes = coded(block.rows.condition)
+        for name in dict.fromkeys(c.name for c in passage.conditions):
+            of_it = codes == (names.index(name) if name in names else -1)
+            rows, kept = np.count_nonzero(of_it), np.count_nonzero(of_it & block.rows.kept)
+            if kept == 0:
+                why = "no epoch fits in it" if rows == 0 else f"none of {rows} epochs is kept"
                 yield f"{passage.chain.name}: condition {name} of {block.signal}: {why}"
 
 

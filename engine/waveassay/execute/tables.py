@@ -20,6 +20,7 @@ from waveassay.contract import (
     Spectra,
     merged,
 )
+from waveassay.execute.arrays import coded
 from waveassay.plan.columns import FeatureColumn
 
 if TYPE_CHECKING:
@@ -107,7 +108,8 @@ class TableOfFeatures:
         import pyarrow as pa
 
         rows, last = block.rows, len(self._rank)
-        rank = np.array([self._rank.get(name, last) for name in rows.condition], np.int64)
+        names, codes = coded(rows.condition)
+        rank = np.array([self._rank.get(name, last) for name in names], np.int64)[codes]
         order = np.lexsort((rows.start_s, rank))
         count = order.size
         values: dict[str, Any] = {
@@ -136,10 +138,9 @@ def _texts(texts: Sequence[str], order: Ints) -> Any:
     """Return texts in an order; an empty one is missing."""
     import pyarrow as pa
 
-    number = {text: place for place, text in enumerate(dict.fromkeys(texts))}
-    codes = np.fromiter(map(number.__getitem__, texts), np.int32, len(texts))[order]
-    known = pa.array([text or None for text in number], pa.string())
-    return pa.DictionaryArray.from_arrays(codes, known).cast(pa.string())
+    known, codes = coded(texts)
+    dictionary = pa.array([text or None for text in known], pa.string())
+    return pa.DictionaryArray.from_arrays(codes[order], dictionary).cast(pa.string())
 
 
 def _missing(block: Block, columns: Sequence[FeatureColumn], count: int) -> list[str]:
@@ -170,9 +171,10 @@ def summary_rows(
     statistics (type 7 of Hyndman and Fan, The American Statistician 50:361-365, 1996).
     """
     for block in blocks:
-        names = np.array(block.rows.condition, np.str_)
+        names, codes = coded(block.rows.condition)
         for condition in dict.fromkeys(c.name for c in conditions):
-            inside = (names == condition) & block.rows.kept
+            number = names.index(condition) if condition in names else -1
+            inside = (codes == number) & block.rows.kept
             for column in columns:
                 if column.step_index not in block.features:
                     continue

@@ -1,0 +1,80 @@
+"""Arrays and facts in one file: what is written is read, and equal content is equal bytes."""
+
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from hypothesis.extra import numpy as arrays_of
+
+from waveassay.execute.arrays import (
+    ArrayFile,
+    Group,
+    coded,
+    save_groups,
+    texts_from_arrays,
+    texts_to_arrays,
+)
+
+NAMES = st.text(st.characters(exclude_categories=("Cs",)), max_size=6)
+ARRAYS = st.one_of(
+    arrays_of.arrays(kind, arrays_of.array_shapes(min_dims=0, max_dims=3, min_side=0))
+    for kind in (np.float64, np.float32, np.int64, np.uint8, np.bool_, "<U5")
+)
+GROUPS = st.dictionaries(
+    NAMES,
+    st.builds(Group, st.dictionaries(NAMES, ARRAYS, max_size=4), st.none() | st.integers()),
+    max_size=4,
+)
+
+
+@settings(max_examples=60)
+@given(GROUPS, st.dictionaries(NAMES, st.integers()))
+def test_what_is_written_is_read(
+    tmp_path_factory: pytest.TempPathFactory, groups: dict[str, Group], facts: dict[str, Any]
+) -> None:
+    folder = tmp_path_factory.mktemp("arrays")
+    save_groups(folder / "one", groups, facts)
+    save_groups(folder / "two", groups, facts)
+    assert (folder / "one").read_bytes() == (folder / "two").read_bytes()
+    file = ArrayFile(folder / "one")
+    assert file.facts == facts
+    assert sorted(file) == sorted(groups)
+    for name, group in groups.items():
+        found = file.group(name)
+        assert found.facts == group.facts
+        assert sorted(found.arrays) == sorted(group.arrays)
+        for key, array in group.arrays.items():
+            assert found.arrays[key].dtype == array.dtype
+            assert found.arrays[key].shape == array.shape
+            np.testing.assert_array_equal(found.arrays[key], array)
+
+
+def test_arrays_that_are_not_contiguous_are_written_as_they_are_seen(tmp_path: Path) -> None:
+    array = np.arange(24.0).reshape(4, 6).T[::2]
+    save_groups(tmp_path / "file", {"a": Group({"x": array})})
+    np.testing.assert_array_equal(ArrayFile(tmp_path / "file").group("a").arrays["x"], array)
+
+
+def test_a_group_is_read_without_the_others(tmp_path: Path) -> None:
+    groups = {name: Group({"x": np.full(5, float(place))}) for place, name in enumerate("abc")}
+    save_groups(tmp_path / "file", groups)
+    data = bytearray((tmp_path / "file").read_bytes())
+    data[-1] ^= 255  # in the padding or the arrays of the last group
+    (tmp_path / "file").write_bytes(data[:-64])
+    np.testing.assert_array_equal(ArrayFile(tmp_path / "file").group("b").arrays["x"], np.ones(5))
+
+
+def test_python_objects_are_refused(tmp_path: Path) -> None:
+    with pytest.raises(ValueError, match="array x holds Python objects"):
+        save_groups(tmp_path / "file", {"a": Group({"x": np.array([None])})})
+
+
+@given(st.lists(st.text(st.characters(exclude_categories=("Cs",), exclude_characters="\0"))))
+def test_texts_come_back(texts: list[str]) -> None:
+    assert texts_from_arrays("name", texts_to_arrays("name", texts)) == tuple(texts)
+    known, codes = coded(texts)
+    assert [known[code] for code in codes] == texts
+    assert len(set(known)) == len(known)
