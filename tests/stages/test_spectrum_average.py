@@ -68,7 +68,7 @@ def powers(n: int, bins: int, dof: float, seed: int = 0) -> Floats:
     kind=st.sampled_from(KINDS),
     seed=st.integers(0, 1000),
 )
-def test_same_bytes_however_the_recording_is_cut(
+def test_the_same_however_the_recording_is_cut(
     cuts: list[int], kind: dict[str, str], seed: int
 ) -> None:
     rng = np.random.default_rng(seed)
@@ -80,7 +80,10 @@ def test_same_bytes_however_the_recording_is_cut(
     whole = stage.combine(params, [stage.collect(params, spectra)])
     parts = [stage.collect(params, part_of(spectra, a, b)) for a, b in pairwise([0, *cuts, 60])]
     pieces = stage.combine(params, parts)
-    assert pieces.density.tobytes() == whole.density.tobytes()
+    if params.of == "median":
+        assert pieces.density.tobytes() == whole.density.tobytes()
+    else:  # sums of stretches, added up: the last bits depend on the cut, which is always the same
+        np.testing.assert_allclose(pieces.density, whole.density, rtol=1e-13)
     assert pieces.dof.tobytes() == whole.dof.tobytes()
     assert pieces.rows.condition == whole.rows.condition
     for one, other in (

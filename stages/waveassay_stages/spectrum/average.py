@@ -53,7 +53,7 @@ class AverageParams(Params):
 def to_decibels(power: Floats) -> Floats:
     """Return ``10 log10(power)``, dB against the unit of power; minus infinity for no power."""
     with np.errstate(divide="ignore"):
-        return np.asarray(10 * np.log10(power), np.float64)
+        return np.asarray(10 * np.log10(power, dtype=np.float64))
 
 
 def from_decibels(level_db: Floats) -> Floats:
@@ -100,29 +100,37 @@ def average(density: Floats, dof: float, params: AverageParams) -> Floats:
     extension to any nu is by order statistics. M. S. Bartlett, D. G. Kendall, Suppl. J. R. Stat.
     Soc. 8(1), 128-138, 1946, for logarithms.
     """
+    if params.of == "median":
+        return median(density, dof, params)
+    return mean(_sum(density, params), density.shape[0], dof, params)
+
+
+def mean(total: Floats, count: int, dof: float, params: AverageParams) -> Floats:
+    """Return the mean of ``count`` rows from their sum: of power, or of its decibels."""
+    middle = np.asarray(total / count, np.float64)
+    return middle if params.over == "power" else _from_level(middle, 0.0, dof, params)
+
+
+def median(density: Floats, dof: float, params: AverageParams) -> Floats:
+    """Return the median of the rows, shape (n, f), in float64."""
     count = density.shape[0]
-    corrected = params.of == "median" and params.median_bias == "corrected"
+    corrected = params.median_bias == "corrected"
+    rows = np.asarray(density, np.float64)
     if params.over == "power":
-        if params.of == "mean":
-            return _mean(density)
         bias = chi_square_median(count, dof)[0] if corrected else 1.0
-        return np.asarray(np.median(density, axis=0) / bias, np.float64)
-    level = to_decibels(density)
-    middle = _mean(level) if params.of == "mean" else _median(level)
-    shift = mean_log_bias(dof) if params.decibel_bias == "corrected" else 0.0
-    if corrected:
-        shift += log_chi_square_median(count, dof)[0] - mean_log_bias(dof)
-    return from_decibels(middle - shift * 10 / np.log(10))
-
-
-def _mean(rows: Floats) -> Floats:
-    return np.asarray(np.sum(rows, axis=0) / rows.shape[0], np.float64)
-
-
-def _median(level: Floats) -> Floats:
+        return np.asarray(np.median(rows, axis=0) / bias, np.float64)
     with np.errstate(invalid="ignore"):  # between two levels of minus infinity
-        middle = np.median(level, axis=0)
-    return np.where(np.isnan(middle), -np.inf, middle)
+        middle = np.median(to_decibels(rows), axis=0)
+    middle = np.where(np.isnan(middle), -np.inf, middle)
+    shift = log_chi_square_median(count, dof)[0] - mean_log_bias(dof) if corrected else 0.0
+    return _from_level(middle, shift, dof, params)
+
+
+def _from_level(level_db: Floats, shift: float, dof: float, params: AverageParams) -> Floats:
+    """Return the power of an average level, less its biases in logarithms."""
+    if params.decibel_bias == "corrected":
+        shift += mean_log_bias(dof)
+    return from_decibels(level_db - shift * 10 / np.log(10))
 
 
 def degrees_of_freedom(count: int, dof: float, share: float, params: AverageParams) -> float:
@@ -179,27 +187,38 @@ def spec(params: AverageParams, given: SpectraSpec, findings: Findings) -> Spect
 
 
 def collect(params: AverageParams, spectra: Spectra) -> Part:
-    """Return the rows of a stretch, with the densities of the kept ones."""
+    """Return what a stretch gives: the sum of its kept rows by condition, or all of them.
+
+    A median needs every row. Of a mean no more is kept than a row a condition, however long the
+    recording; another cut into stretches would change its last bits, so there is but one.
+    """
     rows = spectra.rows
-    return {
+    names = np.array(rows.condition, np.str_)
+    part = {
         "signal": np.array([spectra.signal], np.str_),
         "unit": np.array([spectra.unit], np.str_),
         "freq_hz": spectra.freq_hz,
         "resolution_hz": np.array([spectra.resolution_hz]),
-        "density": spectra.density[rows.kept],
         "dof": spectra.dof[rows.kept],
         "kept": rows.kept,
         "start_s": rows.start_s,
         "duration_s": rows.duration_s,
-        "condition": np.array(rows.condition, np.str_),
+        "condition": names,
     }
+    if params.of == "median":
+        return {**part, "density": spectra.density[rows.kept]}
+    present = np.unique(names)
+    sums = [_sum(spectra.density[rows.kept & (names == name)], params) for name in present]
+    return {**part, "summed": present, "sum": np.array(sums).reshape(-1, spectra.freq_hz.size)}
+
+
+def _sum(density: Floats, params: AverageParams) -> Floats:
+    level = density if params.over == "power" else to_decibels(density)
+    return np.asarray(np.sum(level, axis=0, dtype=np.float64))
 
 
 def combine(params: AverageParams, parts: Sequence[Part]) -> Spectra:
     """Return the average of each condition, in the order in which conditions begin.
-
-    All rows are put together before anything is summed, so that the result does not depend on
-    where the recording was cut.
 
     Raises
     ------
@@ -208,14 +227,14 @@ def combine(params: AverageParams, parts: Sequence[Part]) -> Spectra:
     """
     if not parts:
         raise ValueError("an average needs at least one part")
-    kept, start_s, duration_s, names, density, dof = (
+    kept, start_s, duration_s, names, dof = (
         np.concatenate([part[key] for part in parts])
-        for key in ("kept", "start_s", "duration_s", "condition", "density", "dof")
+        for key in ("kept", "start_s", "duration_s", "condition", "dof")
     )
     first = parts[0]
     freq_hz, resolution_hz = first["freq_hz"], float(first["resolution_hz"][0])
     order = np.argsort(start_s, kind="stable")
-    place = np.cumsum(kept) - 1  # of a kept row among the densities
+    place = np.cumsum(kept) - 1  # of a kept row among all kept ones
     conditions = tuple(dict.fromkeys(str(name) for name in names[order]))
     count = len(conditions)
     out = np.full((count, freq_hz.size), np.nan)
@@ -233,7 +252,10 @@ def combine(params: AverageParams, parts: Sequence[Part]) -> Spectra:
         # Epochs of one chain have one length and one estimator, hence one dof.
         nu, length_s = float(dof[place[used[0]]]), float(duration_s[used[0]])
         share = independent_share(start_s[used], length_s, nu, resolution_hz * length_s)
-        out[c] = average(density[place[used]], nu, params)
+        if params.of == "median":
+            out[c] = median(_rows_of(parts, condition), nu, params)
+        else:
+            out[c] = mean(_total(parts, condition), used.size, nu, params)
         out_dof[c] = degrees_of_freedom(used.size, nu, share, params)
     any_kept = epochs > 0
     return Spectra(
@@ -254,9 +276,22 @@ def combine(params: AverageParams, parts: Sequence[Part]) -> Spectra:
     )
 
 
+def _rows_of(parts: Sequence[Part], condition: str) -> Floats:
+    """Return a condition's kept rows; a median does not ask for their order."""
+    return np.concatenate(
+        [part["density"][(part["condition"] == condition)[part["kept"]]] for part in parts]
+    )
+
+
+def _total(parts: Sequence[Part], condition: str) -> Floats:
+    """Return the sum of a condition's kept rows, added up stretch by stretch."""
+    sums = [part["sum"][part["summed"] == condition] for part in parts]
+    return np.asarray(np.sum(np.concatenate(sums), axis=0))
+
+
 STAGE = Stage(
     name="spectrum.average",
-    version=1,
+    version=2,
     params=AverageParams,
     takes=(Kind.SPECTRA,),
     gives=Kind.AVERAGES,
