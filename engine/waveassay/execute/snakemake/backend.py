@@ -1,5 +1,6 @@
 """Run jobs through Snakemake, embedded."""
 
+import json
 import signal
 import threading
 from collections.abc import Callable, Iterator
@@ -13,6 +14,7 @@ from waveassay.execute.snakemake.plugins import (
     prepare_for_snakemake,
     register_plugins,
 )
+from waveassay.execute.snakemake.workers import Workers, at_hand
 
 
 def run_with_snakemake(
@@ -23,6 +25,12 @@ def run_with_snakemake(
     Every failed job is told through ``on_event``. The jobs' work is described by other files in the
     folder, which Snakemake never sees.
     """
+    needs = json.loads((folder / "jobs.json").read_text(encoding="utf-8"))
+    with _workers(folder, min(workers, len(needs))):
+        return _run(folder, workers, on_event)
+
+
+def _run(folder: Path, workers: int, on_event: Callable[[JobEvent], None]) -> str | None:
     from snakemake.api import (
         ConfigSettings,
         DAGSettings,
@@ -84,6 +92,22 @@ def run_with_snakemake(
         except Exception as error:  # Snakemake has one kind of error for all that can go wrong
             return f"{type(error).__name__}: {error}"
     return None
+
+
+@contextmanager
+def _workers(folder: Path, count: int) -> Iterator[None]:
+    """Start the workers that the executor will use; none outlives this."""
+    workers = Workers(folder)
+    workers.start(count)
+    at_hand.append(workers)
+    try:
+        yield
+    except BaseException:
+        workers.cancel()
+        raise
+    finally:
+        at_hand.remove(workers)
+        workers.shutdown()
 
 
 @contextmanager

@@ -1,16 +1,7 @@
-"""A Snakemake executor of long-lived worker processes, with the libraries loaded.
+"""A Snakemake executor that hands jobs to workers which are running already."""
 
-Starting a process and importing scipy costs half a second; a job often takes less.
-"""
-
-import concurrent.futures
-import multiprocessing
-import os
-import signal
-import threading
 import traceback
 from concurrent.futures.process import BrokenProcessPool
-from multiprocessing.connection import wait
 from pathlib import Path
 from typing import Any
 
@@ -22,8 +13,7 @@ from snakemake_interface_executor_plugins.settings import (
     ExecutorSettingsBase,
 )
 
-#: A job is a process; threads in it would only get in each other's way.
-THREAD_VARIABLES = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
+from waveassay.execute.snakemake.workers import Done, at_hand
 
 common_settings = CommonSettings(
     non_local_exec=False, implies_no_shared_fs=False, job_deploy_sources=False
@@ -34,39 +24,11 @@ class ExecutorSettings(ExecutorSettingsBase):  # type: ignore[misc]  # untyped u
     """No settings: what a job is, the work folder says."""
 
 
-def _start_worker() -> None:
-    """Prepare a worker: it dies with its parent, and leaves Ctrl-C to it."""
-
-    def die_with_parent() -> None:
-        parent = multiprocessing.parent_process()
-        if parent is not None:
-            wait([parent.sentinel])
-            os._exit(1)
-
-    threading.Thread(target=die_with_parent, daemon=True).start()
-    signal.signal(signal.SIGINT, signal.SIG_IGN)
-    signal.signal(signal.SIGTERM, signal.SIG_DFL)
-    from waveassay.execute import work
-
-    work.warm_up()
-
-
-def _run(folder: str, job: str) -> None:
-    from waveassay.execute import work
-
-    work.run_job(Path(folder), job)
-
-
 class Executor(RealExecutor):  # type: ignore[misc]  # untyped upstream
     """Gives each running job a process of its own, so that one that is killed fails alone."""
 
     def __post_init__(self) -> None:
-        for name in THREAD_VARIABLES:
-            os.environ[name] = "1"  # before the workers load numpy
-        self.folder = os.getcwd()
-        self._idle: list[concurrent.futures.ProcessPoolExecutor] = []
-        self._all: list[concurrent.futures.ProcessPoolExecutor] = []
-        self._cancelled = False
+        self._workers = at_hand[-1]
 
     @property
     def cores(self) -> Any:
@@ -83,68 +45,34 @@ class Executor(RealExecutor):  # type: ignore[misc]  # untyped upstream
 
         return sys.executable
 
-    def _take(self) -> concurrent.futures.ProcessPoolExecutor:
-        if self._idle:
-            return self._idle.pop()
-        pool = concurrent.futures.ProcessPoolExecutor(
-            1, mp_context=multiprocessing.get_context("spawn"), initializer=_start_worker
-        )
-        self._all.append(pool)
-        return pool
-
     def run_job(self, job: Any) -> None:
-        """Hand a job to an idle worker, or to a new one."""
+        """Hand a job to a worker."""
         info = SubmittedJobInfo(job=job)
         self.workflow.async_run(job.prepare())
         if job.is_norun:
             self.report_job_submission(info)
             self.report_job_success(info)
             return
-        while True:
-            pool = self._take()
-            try:
-                future = pool.submit(_run, self.folder, job.wildcards.job)
-                break
-            except BrokenProcessPool:  # killed while idle
-                self._all.remove(pool)
         self.report_job_submission(info)
-        future.add_done_callback(lambda done: self._finished(info, pool, done))
+        self._workers.run(job.wildcards.job, lambda done: self._finished(info, done))
 
-    def _finished(
-        self,
-        info: SubmittedJobInfo,
-        pool: concurrent.futures.ProcessPoolExecutor,
-        done: "concurrent.futures.Future[None]",
-    ) -> None:
-        if self._cancelled:
-            return
+    def _finished(self, info: SubmittedJobInfo, done: Done) -> None:
         try:
             done.result()
             for output in info.job.output:
                 Path(output).touch()
         except BrokenProcessPool:
-            self._all.remove(pool)
             self.report_job_error(info, msg="its process was killed, or ran out of memory")
             return
         except BaseException as error:  # whatever it was, this job alone has failed
-            self._idle.append(pool)
             self.report_job_error(info, msg="".join(traceback.format_exception(error)))
             return
-        self._idle.append(pool)
         self.report_job_success(info)
 
     def shutdown(self) -> None:
         """Let the workers go."""
-        for pool in self._all:
-            pool.shutdown(wait=False)
-        for pool in self._all:
-            pool.shutdown(wait=True)
+        self._workers.shutdown()
 
     def cancel(self) -> None:
         """End the workers at once: Ctrl-C, or a fault of the scheduler."""
-        self._cancelled = True
-        for pool in self._all:
-            processes = list((pool._processes or {}).values())
-            pool.shutdown(wait=False, cancel_futures=True)
-            for process in processes:
-                process.terminate()
+        self._workers.cancel()
