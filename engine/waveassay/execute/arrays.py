@@ -1,16 +1,17 @@
 """Named arrays and facts in one file of the store, by signal.
 
-The file is the length of its index (8 bytes, little-endian), the index (JSON), and a block for
-each group of arrays: its own index and the arrays' bytes, each from a multiple of 64 bytes on. One
-group is read with one call and none of the others; an archive of as many arrays (npz) takes longer
-to open than to read.
+The file is a block for each group of arrays (its own index and the arrays' bytes), the index of
+the blocks (JSON), and where that begins (8 bytes, little-endian); blocks and arrays begin at
+multiples of 64 bytes. One group is written or read without the others in memory. An archive of as
+many arrays (npz) takes longer to open than to read.
 """
 
 import json
+import os
 from collections.abc import Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass, field
 from fractions import Fraction
-from itertools import chain
 from pathlib import Path
 from typing import Any, BinaryIO
 
@@ -33,51 +34,76 @@ class Group:
     facts: Any = None
 
 
-def save_groups(path: Path, groups: Mapping[str, Group], facts: Any = None) -> None:
-    """Write groups of arrays, and facts about all of them; equal content gives equal bytes.
+class GroupWriter:
+    """Writes groups of arrays one after another; equal content gives equal bytes.
 
-    Raises
-    ------
-    ValueError
-        When an array holds Python objects.
+    A group is on its way to the disk when `add` returns, and need not be held.
     """
-    packed = {name: _packed(group) for name, group in groups.items()}
-    places, offset = {}, 0
-    for name, pieces in packed.items():
-        size = sum(_padded(piece.nbytes) for piece in pieces)
-        places[name] = [offset, size]
-        offset += size
+
+    def __init__(self, file: BinaryIO) -> None:
+        self._file = file
+        self._places: dict[str, tuple[int, int]] = {}
+        self._offset = 0
+
+    def add(self, name: str, group: Group) -> None:
+        """Write a group.
+
+        Raises
+        ------
+        ValueError
+            When an array holds Python objects.
+        """
+        begun = self._offset
+        for piece in _packed(group):
+            self._file.write(piece)
+            self._file.write(bytes(_padded(piece.nbytes) - piece.nbytes))
+            self._offset += _padded(piece.nbytes)
+        self._places[name] = (begun, self._offset - begun)
+
+    def end(self, facts: Any) -> None:
+        """Write the index, with facts about all groups."""
+        self._file.write(_json({"facts": facts, "groups": self._places}))
+        self._file.write(self._offset.to_bytes(_LENGTH, "little"))
+
+
+@contextmanager
+def group_writer(path: Path) -> Iterator[GroupWriter]:
+    """Open a file for groups; the caller ends it with its facts."""
     with path.open("wb") as file:
-        for piece in chain(_index({"facts": facts, "groups": places}), *packed.values()):
-            file.write(piece)
-            file.write(bytes(_padded(piece.nbytes) - piece.nbytes))
+        yield GroupWriter(file)
+
+
+def save_groups(path: Path, groups: Mapping[str, Group], facts: Any = None) -> None:
+    """Write groups that are all at hand, and facts about all of them."""
+    with group_writer(path) as writer:
+        for name, group in groups.items():
+            writer.add(name, group)
+        writer.end(facts)
 
 
 class ArrayFile:
-    """A file that `save_groups` wrote: its facts, and its groups when asked for."""
+    """A file of groups: its facts, and its groups when asked for."""
 
     def __init__(self, path: Path) -> None:
         self.path = path
         with path.open("rb") as file:
-            length = int.from_bytes(file.read(_LENGTH), "little")
-            index = json.loads(file.read(length))
+            end = file.seek(-_LENGTH, os.SEEK_END)
+            begin = int.from_bytes(file.read(_LENGTH), "little")
+            index = json.loads(_read(file, begin, end - begin))
         self.facts: Any = index["facts"]
         self._places: dict[str, tuple[int, int]] = index["groups"]
-        self._first = _padded(_LENGTH + length)
 
     def __iter__(self) -> Iterator[str]:
         return iter(self._places)
 
     def group(self, name: str) -> Group:
         """Read one group; its arrays may not be written."""
-        offset, size = self._places[name]
         with self.path.open("rb") as file:
-            return _unpacked(_read(file, self._first + offset, size))
+            return _unpacked(_read(file, *self._places[name]))
 
 
-def _index(known: Any) -> list[memoryview]:
-    text = json.dumps(known, sort_keys=True).encode()
-    return [memoryview(len(text).to_bytes(_LENGTH, "little") + text)]
+def _json(known: Any) -> bytes:
+    return json.dumps(known, sort_keys=True).encode()
 
 
 def _packed(group: Group) -> list[memoryview]:
@@ -90,7 +116,8 @@ def _packed(group: Group) -> list[memoryview]:
         index[name] = [plain.dtype.str, array.shape, offset]
         pieces.append(plain.reshape(-1).view(np.uint8).data)
         offset += _padded(plain.nbytes)
-    return [*_index({"facts": group.facts, "arrays": index}), *pieces]
+    text = _json({"facts": group.facts, "arrays": index})
+    return [memoryview(len(text).to_bytes(_LENGTH, "little") + text), *pieces]
 
 
 def _unpacked(block: bytes) -> Group:

@@ -7,7 +7,8 @@ from functools import cached_property
 from waveassay.contract import Exclusion, Features, Part, merged
 from waveassay.execute.arrays import ArrayFile, Group, exclusions_from_json
 from waveassay.execute.feature_arrays import features_from_groups
-from waveassay.execute.rows import FILE, MASKS, OUTSIDE
+from waveassay.execute.rows import FILE, MASKS
+from waveassay.execute.signals import OUTSIDE
 from waveassay.execute.store import Store
 
 

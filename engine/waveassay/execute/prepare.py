@@ -5,9 +5,10 @@ from fractions import Fraction
 from pathlib import Path
 
 from waveassay.contract import Interval, Part, Signal
+from waveassay.execute.arrays import group_writer
 from waveassay.execute.fused import run_unit
 from waveassay.execute.moves import run_move
-from waveassay.execute.signals import SignalSource, save_prepared
+from waveassay.execute.signals import FILE, OUTSIDE, SignalSource, prepared_group
 from waveassay.plan.stretches import Stretch
 from waveassay.plan.tasks import window_s
 from waveassay.plan.windows import Form
@@ -25,27 +26,30 @@ def prepare(
     states : (lane, move) -> what a barrier combined.
     """
     passage = source.passage
-    wanted = {}
-    for lane_no, lane in enumerate(passage.lanes):
+    wanted: list[dict[int, tuple[Fraction, Fraction]]] = []
+    for lane in passage.lanes:
         window = window_s(passage, lane, pass_no, stretch)
-        for move in lane.program.samples_moves(pass_no):
-            taken = move.index if move.source is None else move.source
-            before = lane.program.moves[taken]
-            if before.source is None or before.pass_no < pass_no:
-                wanted[lane_no, taken] = window
-    read = source.over(wanted)
-    prepared: dict[tuple[int, int], Signal] = {}
-    for lane_no, lane in enumerate(passage.lanes):
-        values: dict[int, Signal] = {
-            move_no: signal for (owner, move_no), signal in read.items() if owner == lane_no
-        }
-        bounds = lane.bounds_s(stretch)
-        if pass_no < len(lane.forms):
-            piece = passage.pieces[stretch.piece]
-            run_form(lane.forms[pass_no], lane_no, values, states, piece, bounds)
-        for index in lane.program.kept_signals(pass_no):
-            prepared[lane_no, index] = values[index].cut(*bounds)
-    save_prepared(folder, prepared, source.outside)
+        taken = [
+            m.index if m.source is None else m.source for m in lane.program.samples_moves(pass_no)
+        ]
+        before = {index: lane.program.moves[index] for index in taken}
+        wanted.append(
+            {
+                i: window
+                for i, move in before.items()
+                if move.source is None or move.pass_no < pass_no
+            }
+        )
+    with group_writer(folder / FILE) as writer:
+        for lane_no, values in source.by_lane(wanted):
+            lane = passage.lanes[lane_no]
+            bounds = lane.bounds_s(stretch)
+            if pass_no < len(lane.forms):
+                piece = passage.pieces[stretch.piece]
+                run_form(lane.forms[pass_no], lane_no, values, states, piece, bounds)
+            for index in lane.program.kept_signals(pass_no):
+                writer.add(f"{lane_no}.{index}", prepared_group(values[index].cut(*bounds)))
+        writer.end({OUTSIDE: sorted(source.outside)})
 
 
 def run_form(

@@ -6,11 +6,11 @@ from pathlib import Path
 from typing import Any
 
 from waveassay.contract import Data, Features, Part, Signal
-from waveassay.execute.arrays import Group, exclusions_to_json, save_groups
+from waveassay.execute.arrays import Group, exclusions_to_json, group_writer
 from waveassay.execute.feature_arrays import ROWS_OF, features_to_arrays
 from waveassay.execute.moves import collect_move, run_move, starting_in
 from waveassay.execute.prepare import States
-from waveassay.execute.signals import SignalSource
+from waveassay.execute.signals import OUTSIDE, SignalSource
 from waveassay.plan.passage import Lane
 from waveassay.plan.program import Level
 from waveassay.plan.stretches import Stretch
@@ -19,28 +19,20 @@ from waveassay.plan.tasks import collected, rows_moves
 FILE = "rows.arrays"
 #: In the facts of a signal: number of a step -> masks where it cut epochs.
 MASKS = "masks"
-#: In the facts of the whole: signals with samples outside the digital limits of their header.
-OUTSIDE = "outside"
 
 
 def make_rows(
     source: SignalSource, pass_no: int, stretch: Stretch, states: States, folder: Path
 ) -> None:
     """Run the steps on rows over a stretch; keep features, what is collected, and masks."""
-    signals = source.over(_wanted(source, pass_no, stretch))
-    groups: dict[str, Group] = {}
-    for lane_no, lane in enumerate(source.passage.lanes):
-        values: dict[int, Data] = {
-            move_no: signal for (owner, move_no), signal in signals.items() if owner == lane_no
-        }
-        groups[str(lane_no)] = _lane_rows(
-            lane,
-            pass_no,
-            lane.bounds_s(stretch),
-            values,
-            {index: state for (owner, index), state in states.items() if owner == lane_no},
-        )
-    save_groups(folder / FILE, groups, {OUTSIDE: sorted(source.outside)})
+    with group_writer(folder / FILE) as writer:
+        for lane_no, signals in source.by_lane(_wanted(source, pass_no, stretch)):
+            lane = source.passage.lanes[lane_no]
+            applied = {index: s for (owner, index), s in states.items() if owner == lane_no}
+            values: dict[int, Data] = {**signals}
+            group = _lane_rows(lane, pass_no, lane.bounds_s(stretch), values, applied)
+            writer.add(str(lane_no), group)
+        writer.end({OUTSIDE: sorted(source.outside)})
 
 
 def _lane_rows(
@@ -77,14 +69,14 @@ def _lane_rows(
 
 def _wanted(
     source: SignalSource, pass_no: int, stretch: Stretch
-) -> Mapping[tuple[int, int], tuple[Any, Any]]:
-    """Return the signals that the pass's rows and collecting steps take, with their windows."""
-    wanted = {}
-    for lane_no, lane in enumerate(source.passage.lanes):
+) -> list[dict[int, tuple[Fraction, Fraction]]]:
+    """Return for each lane the signals that the pass's steps take, with their windows."""
+    wanted = []
+    for lane in source.passage.lanes:
         start_s, stop_s = lane.bounds_s(stretch)
         reach = lane.program.rows_reach
-        for index in _signals_taken(lane, pass_no):
-            wanted[lane_no, index] = (start_s - reach.before_s, stop_s + reach.after_s)
+        window = (start_s - reach.before_s, stop_s + reach.after_s)
+        wanted.append(dict.fromkeys(_signals_taken(lane, pass_no), window))
     return wanted
 
 

@@ -1,6 +1,6 @@
 """Get a signal over any interval: from its file, or from what earlier tasks prepared."""
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from math import ceil
@@ -14,7 +14,6 @@ from waveassay.execute.arrays import (
     Group,
     exclusions_from_json,
     exclusions_to_json,
-    save_groups,
 )
 from waveassay.execute.store import Store
 from waveassay.plan.passage import Lane, Passage
@@ -22,32 +21,32 @@ from waveassay.plan.tasks import Task, overlapping
 from waveassay.recording import Facts, open_recording
 
 FILE = "signals.arrays"
+#: In a file's facts: lanes with samples outside the digital limits of their header.
+OUTSIDE = "outside"
 
 Window = tuple[Fraction, Fraction]
 
 
 def read_from_file(
     passage: Passage, path: Path, facts: Facts, piece_no: int, windows: Mapping[int, Window]
-) -> tuple[dict[int, Signal], set[int]]:
+) -> tuple[dict[int, Floats], set[int]]:
     """Read lanes from the recording, each over its own window, in one pass for equal windows.
 
-    Returns the signals, and the lanes with samples outside the digital limits of their header.
+    Returns the samples, and the lanes with samples outside the digital limits of their header.
 
     Parameters
     ----------
     windows : index of a lane -> (start, stop), s; the samples at or after start and before stop.
     """
-    piece = passage.pieces[piece_no]
     groups: dict[Window, list[int]] = {}
     for index, window in windows.items():
         groups.setdefault(window, []).append(index)
-    read: dict[int, Signal] = {}
+    read: dict[int, Floats] = {}
     with open_recording(path, facts=facts, truncated="read") as recording:
         for (start_s, stop_s), lanes in groups.items():
             channels = [passage.lanes[index].channel for index in lanes]
             arrays = recording.read(channels, piece_no, start_s, stop_s)
-            for index, x in zip(lanes, arrays, strict=True):
-                read[index] = _as_signal(passage.lanes[index], piece, start_s, x)
+            read.update(zip(lanes, arrays, strict=True))
         outside = {i for i in read if recording.out_of_range.get(passage.lanes[i].channel)}
     return read, outside
 
@@ -64,23 +63,17 @@ def _as_signal(lane: Lane, piece: Interval, start_s: Fraction, x: Floats) -> Sig
     )
 
 
-def save_prepared(
-    folder: Path, prepared: Mapping[tuple[int, int], Signal], outside: set[int]
-) -> None:
-    """Write prepared signals, by lane and move, and the lanes outside their digital limits."""
-    groups = {
-        f"{lane}.{move}": Group(
-            {"x": signal.x},
-            {
-                "rate_hz": str(signal.rate_hz),
-                "start_s": str(signal.start_s),
-                "unit": signal.unit,
-                "excluded": exclusions_to_json(signal.excluded),
-            },
-        )
-        for (lane, move), signal in prepared.items()
-    }
-    save_groups(folder / FILE, groups, {"outside": sorted(outside)})
+def prepared_group(signal: Signal) -> Group:
+    """Return a prepared signal as it is stored."""
+    return Group(
+        {"x": signal.x},
+        {
+            "rate_hz": str(signal.rate_hz),
+            "start_s": str(signal.start_s),
+            "unit": signal.unit,
+            "excluded": exclusions_to_json(signal.excluded),
+        },
+    )
 
 
 class PreparedFiles:
@@ -128,36 +121,56 @@ class SignalSource:
     prepared: Mapping[tuple[int, int], str]
     outside: set[int] = field(default_factory=set)
 
-    def over(self, wanted: Mapping[tuple[int, int], Window]) -> dict[tuple[int, int], Signal]:
-        """Return signals by (lane, move), each over its own window."""
-        found: dict[tuple[int, int], Signal] = {}
+    def by_lane(
+        self, wanted: Sequence[Mapping[int, Window]]
+    ) -> Iterator[tuple[int, dict[int, Signal]]]:
+        """Yield each lane's number and signals, by step, each over its own window.
+
+        Only one lane's signals are held as such: of many channels, the rest stays as it was read.
+
+        Parameters
+        ----------
+        wanted : for each lane, number of a step -> window of what the step gives.
+        """
         from_file: dict[int, Window] = {}
-        for (lane_no, move_no), window in wanted.items():
-            program = self.passage.lanes[lane_no].program
-            pass_no = program.moves[move_no].pass_no
-            if program.prepares(pass_no) and any(held == pass_no for held, _ in self.prepared):
-                found[lane_no, move_no] = self._assemble(lane_no, move_no, pass_no, window)
-            else:
-                from_file[lane_no] = self._within(window)
+        for lane_no, windows in enumerate(wanted):
+            for move_no, window in windows.items():
+                if not self._is_prepared(lane_no, move_no):
+                    from_file[lane_no] = self._within(window)
+        read: dict[int, Floats] = {}
         if from_file:
             read, outside = read_from_file(
                 self.passage, self.path, self.facts, self.piece_no, from_file
             )
             self.outside |= outside
-            for lane_no, move_no in wanted:
-                if (lane_no, move_no) not in found:
-                    found[lane_no, move_no] = read[lane_no]
-        conditions = self.passage.conditions
-        return {place: replace(signal, conditions=conditions) for place, signal in found.items()}
+        for lane_no, windows in enumerate(wanted):
+            found: dict[int, Signal] = {}
+            raw: Signal | None = None
+            if lane_no in read:
+                lane, piece = self.passage.lanes[lane_no], self.passage.pieces[self.piece_no]
+                raw = _as_signal(lane, piece, from_file[lane_no][0], read.pop(lane_no))
+            for move_no, window in windows.items():
+                if raw is not None and not self._is_prepared(lane_no, move_no):
+                    signal = raw
+                else:
+                    signal = self._assemble(lane_no, move_no, window)
+                found[move_no] = replace(signal, conditions=self.passage.conditions)
+            yield lane_no, found
 
-    def _assemble(self, lane_no: int, move_no: int, pass_no: int, window: Window) -> Signal:
+    def _is_prepared(self, lane_no: int, move_no: int) -> bool:
+        program = self.passage.lanes[lane_no].program
+        pass_no = program.moves[move_no].pass_no
+        return program.prepares(pass_no) and any(held == pass_no for held, _ in self.prepared)
+
+    def _assemble(self, lane_no: int, move_no: int, window: Window) -> Signal:
         lane = self.passage.lanes[lane_no]
+        pass_no = lane.program.moves[move_no].pass_no
         piece = self.passage.pieces[self.piece_no]
         start_s, stop_s = self._within(window)
         parts: list[Signal] = []
         for stretch in overlapping(lane, self.piece_no, start_s, stop_s):
             file = self.files.file(self.prepared[pass_no, stretch.number])
-            self.outside |= set(file.facts["outside"])
+            self.outside |= set(file.facts[OUTSIDE])
             group = file.group(f"{lane_no}.{move_no}")
             known = group.facts
             parts.append(
