@@ -12,6 +12,7 @@ from bisect import bisect_left, bisect_right
 from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, field
 from fractions import Fraction
+from functools import cached_property, lru_cache
 from typing import Any, Literal
 
 from waveassay.contract.digests import digest
@@ -55,6 +56,11 @@ class _Planner:
     tasks: dict[tuple[str, int, Stretch | None], Task] = field(default_factory=dict)
     _steps: dict[tuple[str, int], list[str]] = field(default_factory=dict)
 
+    @cached_property
+    def conditions(self) -> str:
+        """A digest of the recording's conditions, of which there may be thousands."""
+        return digest([[c.name, c.start_s, c.stop_s] for c in self.passage.conditions])
+
     def finish(self) -> Task:
         passes = range(self.passage.passes)
         needs = [self.rows(p, s).key for p in passes for s in self._selected(p)]
@@ -63,9 +69,9 @@ class _Planner:
             "recording": self.passage.recording,
             "chain": self.passage.chain.name,
             "columns": [column.name for column in self.passage.columns],
-            "writers": writers(),
+            "writers": _digest_of_writers(),
             "pieces": [[p.start_s, p.stop_s] for p in self.passage.pieces],
-            "conditions": _conditions(self.passage),
+            "conditions": self.conditions,
             "lanes": self._lanes("finish", 0),
         }
         return self._task("finish", 0, None, identity, needs, _FINISH_COST_S)
@@ -93,7 +99,7 @@ class _Planner:
             cost += _samples(lane, start, stop) * steps * _ROWS_COST_S
         identity = {
             "piece": _piece(self.passage, stretch),
-            "conditions": _conditions(self.passage),
+            "conditions": self.conditions,
             "bounds": bounds,
             "lanes": self._lanes("rows", pass_no),
         }
@@ -138,8 +144,9 @@ class _Planner:
     def _lanes(self, action: Action, pass_no: int) -> list[str]:
         """Return a digest of each lane's part in a task, but for the stretch."""
         if (action, pass_no) not in self._steps:
-            lanes = self.passage.lanes
-            self._steps[action, pass_no] = [digest(_lane(lane, action, pass_no)) for lane in lanes]
+            self._steps[action, pass_no] = [
+                _lane_digest(lane, action, pass_no) for lane in self.passage.lanes
+            ]
         return self._steps[action, pass_no]
 
     def _selected(self, pass_no: int) -> Iterator[Stretch]:
@@ -165,7 +172,7 @@ class _Planner:
             {
                 "action": action,
                 "pass": pass_no,
-                "engine": engine(),
+                "engine": _digest_of_engine(),
                 "precision": "double",
                 "sha256": self.passage.sha256,
                 "needs": list(unique),
@@ -251,6 +258,14 @@ def _meets(passage: Passage, lane: Lane, stretch: Stretch) -> bool:
     return any(c.start_s < stop and start < c.stop_s for c in passage.conditions)
 
 
+def _lane_digest(lane: Lane, action: Action, pass_no: int) -> str:
+    # The route knows the rest: the signal's name, unit, kind and rate, and the chain's steps.
+    digests, key = lane.route.digests, (action, pass_no, lane.channel, lane.scale)
+    if key not in digests:
+        digests[key] = digest(_lane(lane, action, pass_no))
+    return digests[key]
+
+
 def _lane(lane: Lane, action: Action, pass_no: int) -> dict[str, Any]:
     """Return all of a signal and its steps that can change what a task makes of it."""
     known: dict[str, Any] = {
@@ -294,8 +309,14 @@ def _step(move: Move, *, named: bool = False) -> dict[str, Any]:
     return known
 
 
-def _conditions(passage: Passage) -> list[list[Any]]:
-    return [[c.name, c.start_s, c.stop_s] for c in passage.conditions]
+@lru_cache(maxsize=1)
+def _digest_of_engine() -> str:
+    return digest(engine())
+
+
+@lru_cache(maxsize=1)
+def _digest_of_writers() -> str:
+    return digest(writers())
 
 
 def _piece(passage: Passage, stretch: Stretch) -> list[Fraction]:
