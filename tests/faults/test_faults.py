@@ -7,7 +7,7 @@ import subprocess
 import sys
 import time
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 
 import numpy as np
@@ -167,21 +167,44 @@ def small_disk(folder: Path, size: str) -> Iterator[Path]:
         subprocess.run(["umount", str(folder)], check=True)
 
 
+def fill(path: Path) -> None:
+    """Write until there is no room."""
+    with path.open("wb", buffering=0) as file, suppress(OSError):
+        while file.write(bytes(1 << 16)):
+            pass
+
+
 def test_a_full_disk_stops_with_6_and_keeps_what_was_finished(
     made: Path, undisturbed: str, tmp_path: Path
 ) -> None:
-    with small_disk(tmp_path / "disk", "9m") as disk:
-        full = command("run", made, "--into", disk)
-        assert full.returncode == 6, full.stderr + full.stdout
-        assert "disk is full" in full.stderr
-        assert "Traceback" not in full.stderr
+    with small_disk(tmp_path / "disk", "24m") as disk:
+        process = start(made, disk)
+        wait_until(results_stored(disk, 2))
+        fill(disk / "somebody else's")
+        output, errors = process.communicate(timeout=120)
+        assert process.returncode == 6, errors + output
+        assert "disk is full" in errors
+        assert "Traceback" not in errors
         assert not list((disk / "store").rglob("*/artefact.json.part"))
         kept = stored(disk)
+        (disk / "somebody else's").unlink()
         shutil.copytree(disk, tmp_path / "roomy", symlinks=True)
     assert kept >= 1
     again = command("run", made, "--into", tmp_path / "roomy")
     assert again.returncode == 0, again.stderr
     assert read_manifest(only_run(tmp_path / "roomy")).results_digest == undisturbed
+
+
+def test_a_disk_without_room_for_the_results_is_told_before_anything_is_computed(
+    made: Path, tmp_path: Path
+) -> None:
+    with small_disk(tmp_path / "disk", "3m") as disk:
+        done = command("run", made, "--into", disk)
+        assert done.returncode == 6, done.stderr + done.stdout
+        assert "GB free" in done.stderr
+        assert "--store" in done.stderr
+        assert "Traceback" not in done.stderr
+        assert stored(disk) == 0
 
 
 def test_a_file_in_the_place_of_the_folder_is_said(made: Path, tmp_path: Path) -> None:

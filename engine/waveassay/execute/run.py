@@ -28,6 +28,8 @@ from waveassay.execute.work import Failure
 from waveassay.plan.jobs import LOCAL, Job, JobLength, group_into_jobs, missing_tasks
 from waveassay.plan.plan import Plan, ReadRecording, make_plan, run_digest
 from waveassay.plan.recordings import Found
+from waveassay.plan.space import least_bytes
+from waveassay.plan.tasks import Task
 from waveassay.provenance.environment import environment
 from waveassay.provenance.recording_digests import RecordingDigests
 from waveassay.provenance.results import Result
@@ -143,6 +145,7 @@ class _Run:
         folder.begin(known, env, workers=self.workers, recordings=len(found))
         plan = make_plan(self.recipe, found, read)
         todo = [missing_tasks(item.tasks, self.store.has) for item in plan.recordings]
+        self._require_room(plan, todo, folder)
         jobs = group_into_jobs(todo, self.workers, self.job_length)
         self.watcher.planned(len(jobs), sum(job.cost_s for job in jobs))
         clock.lap("planning")
@@ -166,6 +169,22 @@ class _Run:
             timings_s=clock.laps_s,
             notes=notes,
         )
+
+    def _require_room(self, plan: Plan, todo: Sequence[Sequence[Task]], folder: RunFolder) -> None:
+        """Refuse a run whose results cannot fit the disk: hours later it would stop anyway."""
+        least = 0
+        for item, tasks in zip(plan.recordings, todo, strict=True):
+            by_chain = {passage.chain.name: passage for passage in item.passages}
+            least += sum(least_bytes(by_chain[task.chain], task) for task in tasks)
+        free = shutil.disk_usage(self.store.root).free
+        if least > free:
+            why = (
+                f"{self.store.root}: the disk has {free / 1e9:.3g} GB free, and what this run "
+                f"keeps takes at least {least / 1e9:.3g} GB. Free some of it, give a folder on "
+                "another disk (--store), or run fewer recordings at a time. Nothing was computed"
+            )
+            folder.log.append("run_stopped", why=why)
+            raise MachineError(f"{why}.")
 
     def _compute(
         self, plan: Plan, jobs: Sequence[Job], env: dict[str, Any], folder: RunFolder

@@ -3,6 +3,7 @@
 import json
 import os
 from collections.abc import Callable
+from contextlib import suppress
 from dataclasses import dataclass, field
 from logging import LogRecord
 from typing import Any
@@ -50,9 +51,7 @@ class LogHandler(LogHandlerBase):
     def _emit(self, record: LogRecord) -> None:
         known = record.__dict__
         event = str(known.get("event") or "message")
-        if self._file:
-            line = {"event": event, "level": record.levelname, "text": record.getMessage()}
-            print(json.dumps(line), file=self._file, flush=True)
+        self._keep({"event": event, "level": record.levelname, "text": record.getMessage()})
         if event == "job_info" and known.get("rule_name") == "job":
             job = str(known["wildcards"]["job"])
             self._job_of[int(known["jobid"])] = job
@@ -62,6 +61,11 @@ class LogHandler(LogHandlerBase):
         elif event == "job_error":
             text = str(known.get("rule_msg") or record.getMessage())
             self._ended("failed", known.get("jobid"), text)
+
+    def _keep(self, line: dict[str, str]) -> None:
+        if self._file:
+            with suppress(OSError):  # a full disk is told by the jobs, which this must not hinder
+                print(json.dumps(line), file=self._file, flush=True)
 
     def _ended(self, what: str, number: Any, text: str) -> None:
         job = self._job_of.get(int(number)) if number is not None else None
@@ -79,7 +83,8 @@ class LogHandler(LogHandlerBase):
     def close(self) -> None:
         """Close the file."""
         if self._file:
-            self._file.close()
+            with suppress(OSError):
+                self._file.close()
             self._file = None
         super().close()
 
