@@ -63,6 +63,11 @@ def test_command_ends_with_failure(monkeypatch: pytest.MonkeyPatch) -> None:
         assert ended.value.code == code
 
 
+def test_a_difference_that_drowned_in_noise_reaches_nothing() -> None:
+    assert not AT_MOST.reached([-1.0, -0.5, 0.1])
+    assert not AT_LEAST.reached([-9.0, -8.0, -7.0])
+
+
 @given(st.lists(st.floats(0.01, 100), min_size=2), st.floats(0.5, 50), st.booleans())
 def test_all_rounds_on_one_side_decide(rounds: Sequence[float], value: float, least: bool) -> None:
     limit = Limit("this", value, at_least=least)
@@ -74,7 +79,12 @@ def test_all_rounds_on_one_side_decide(rounds: Sequence[float], value: float, le
 
 
 def test_gate_measures_every_ratio(monkeypatch: pytest.MonkeyPatch) -> None:
-    for name, value in (("CHANNELS", 1), ("LENGTH_S", 120), ("LOOP_LENGTH_S", 60)):
+    for name, value in (
+        ("CHANNELS", 1),
+        ("LENGTH_S", 120),
+        ("LOOP_LENGTH_S", 60),
+        ("STAGES_HOURS", 0.1),
+    ):
         monkeypatch.setattr(gate, name, value)
     found = gate.measure(1)
     whats = {limit.what for limit in found}
