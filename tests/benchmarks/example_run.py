@@ -2,7 +2,6 @@
 
 import re
 import shutil
-import sys
 import tempfile
 from collections.abc import Callable
 from functools import partial
@@ -30,7 +29,7 @@ def measure(rounds: int, recordings: int | None = None) -> dict[str, Any]:
     ways: dict[str, Callable[[Path], Timed]] = {
         "two_workers": lambda folder: command(*_arguments(folder, 2)),
         "one_worker": lambda folder: command(*_arguments(folder, 1)),
-        "in_process": lambda folder: child("example_run", folder),
+        "in_process": lambda folder: child("in_process", *_arguments(folder, 1)),
     }
     found = in_turn({n: partial(_fresh, way, recordings) for n, way in ways.items()}, rounds)
     digests = {_found(_DIGEST, t)[0] for times in found.values() for t in times}
@@ -76,18 +75,3 @@ def _found(pattern: re.Pattern[str], run: Timed) -> tuple[str, ...]:
     if found is None:
         raise RuntimeError(f"not in what the run printed: {pattern.pattern}\n{run.text}")
     return found.groups()
-
-
-def run_in_this_process(folder: str) -> None:
-    """Give the command, with jobs done in this process where it would hand them to Snakemake."""
-    from waveassay.cli import main
-    from waveassay.execute.in_process import run_in_process
-    from waveassay.execute.snakemake import backend
-
-    backend.run_with_snakemake = run_in_process
-    sys.argv = ["waveassay", *map(str, _arguments(Path(folder), 1))]
-    main()
-
-
-if __name__ == "__main__":
-    run_in_this_process(sys.argv[1])

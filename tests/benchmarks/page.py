@@ -1,45 +1,21 @@
-"""The page of results: written from what was measured, and from nothing else."""
+"""The page of results: written from what was measured, and from nothing else.
 
-from collections.abc import Iterable, Iterator, Mapping
-from dataclasses import dataclass
+The README's table is made from the page, so that the two cannot differ.
+"""
+
+from collections.abc import Mapping
+from pathlib import Path
 from typing import Any
 
-from benchmarks import example_run, plain_chain, reader, second_run, start_up
-from benchmarks.measured import Spread
+from benchmarks import plain_chain
+from benchmarks.full_rows import full_facts
+from benchmarks.page_rows import more_rows, target_rows
+from benchmarks.rows import markdown, number, table
 
-
-@dataclass(frozen=True)
-class Row:
-    """One line of a table; ``limit`` in the unit shown, None where no target is set."""
-
-    what: str
-    spread: Spread
-    unit: str = ""
-    limit: float | None = None
-
-    @property
-    def verdict(self) -> str:
-        """Whether the target is met: always, as a rule, or not."""
-        if self.limit is None:
-            return "none set"
-        if self.spread.high <= self.limit:
-            return "met"
-        return "median met" if self.spread.median <= self.limit else "**not met**"
-
-    @property
-    def cells(self) -> list[str]:
-        """What stands in the table: with target and verdict where there is a target."""
-        unit = f" {self.unit}" if self.unit else ""
-        s = self.spread
-        measured = f"{number(s.median)} ({number(s.low)} to {number(s.high)}){unit}"
-        if self.limit is None:
-            return [self.what, measured]
-        return [self.what, f"at most {self.limit:g}{unit}", measured, self.verdict]
-
-
-def number(value: float) -> str:
-    """Return three digits of a number."""
-    return f"{value:.3g}" if abs(value) < 1000 else f"{value:.0f}"
+PAGE = Path(__file__).with_name("README.md")
+README = Path(__file__).parents[2] / "README.md"
+BEGIN = "<!-- from tests/benchmarks/README.md, by tests/benchmarks/run.py --page -->\n\n"
+END = "\n<!-- end -->\n"
 
 
 def page(found: Mapping[str, Any], machine: Mapping[str, str], date: str) -> str:
@@ -60,66 +36,39 @@ def page(found: Mapping[str, Any], machine: Mapping[str, str], date: str) -> str
         "compared": f"{found['plain_chain']['numbers_compared']:,}",
         "targets": table(target_rows(found), targets=True),
         "more": table(more_rows(found), targets=False),
+        **full_facts(found),
         "machine": "\n".join(f"- {name}: {value}" for name, value in machine.items()),
         "loads": ", ".join(f"{load:.1f}" for load in found["loads"]),
     }
     return _PAGE.format(**facts)
 
 
-def table(rows: Iterable[Row], *, targets: bool) -> str:
-    """Return rows as a table; all of them have a target, or none has."""
-    heads = ["what", "target", "median (least to most)", "target met"]
-    shown = heads if targets else [heads[0], heads[2]]
-    lines = [shown, ["---"] * len(shown), *(row.cells for row in rows)]
-    return "\n".join(f"| {' | '.join(line)} |" for line in lines)
+def short(page: str) -> str:
+    """Return the page's targets as the README shows them: what, target, median."""
+    lines = page.partition("## Targets")[2].partition("*met*")[0].strip().splitlines()
+    cells = [line.strip("| ").split(" | ") for line in lines[2:]]
+    rows = [[what, target, _median(measured)] for what, target, measured, _ in cells]
+    return markdown([["what", "target", "measured"], *rows]) + "\n"
 
 
-def target_rows(found: Mapping[str, Any]) -> Iterator[Row]:
-    """Yield what has a target."""
-    for kind, limit in reader.TARGETS.items():
-        known = found["reader"][kind]
-        yield Row(f"decode all of {kind} / plain read", known["decode_all_ratio"], "", limit)
-        growth = known["memory_growth_mb"]
-        yield Row(f"growth of memory meanwhile, {kind}", growth, "MB", reader.MEMORY_TARGET_MB)
-    for name, words in (("help", "`waveassay --help`"), ("check", "`waveassay check`")):
-        yield Row(words, found["start_up"]["wall_s"][name], "s", start_up.TARGETS_S[name])
-    wall = found["example"]["wall_s"]["two_workers"]
-    yield Row("the example, two workers", wall, "s", example_run.TARGET_S)
-    again = found["second_run"]["again_s"]
-    yield Row("identical second run", again, "s", second_run.TARGET_S)
+def _median(measured: str) -> str:
+    """Take the spread out of ``3.4 (3 to 4) s``."""
+    value, _, rest = measured.partition(" (")
+    return value + rest.partition(")")[2]
 
 
-def more_rows(found: Mapping[str, Any]) -> Iterator[Row]:
-    """Yield what else was measured."""
-    start, example, second = found["start_up"], found["example"], found["second_run"]
-    chain = found["plain_chain"]
-    for kind in reader.TARGETS:
-        known = found["reader"][kind]
-        yield Row(f"decode two signals of {kind} / plain read", known["decode_two_ratio"])
-    yield Row("`python -c pass`", start["wall_s"]["python"], "s")
-    yield Row('`python -c "import numpy"`', start["wall_s"]["numpy"], "s")
-    for name, words in (("help", "`--help`"), ("check", "`check`")):
-        yield Row(f"{words} / `python -c pass`", start["to_python"][name])
-        yield Row(f'{words} / `python -c "import numpy"`', start["to_numpy"][name])
-    yield Row("the example, one worker", example["wall_s"]["one_worker"], "s")
-    yield Row("the example, in process", example["wall_s"]["in_process"], "s")
-    yield Row("the backend's own, wall: one worker - in process", example["backend_s"], "s")
-    yield Row("the backend's own, share of one worker's wall", example["backend_share"])
-    yield Row("the backend's own, CPU: one worker - in process", example["backend_cpu_s"], "s")
-    yield Row("one worker / two workers", example["second_worker"])
-    yield Row(
-        "the example, two workers, CPU of all processes", example["cpu_s"]["two_workers"], "s"
-    )
-    yield Row("its largest process", example["peak_mb"]["two_workers"], "MB")
-    yield Row("identical second run / first run", second["again_ratio"])
-    yield Row("run with one recording more", second["added_s"], "s")
-    yield Row("run with one recording more / first run", second["added_ratio"])
-    yield Row("plain chain: recipe / script, CPU", chain["ratio"])
-    yield Row("plain chain: the recipe's jobs alone / script, CPU", chain["jobs_ratio"])
-    yield Row("plain chain: recipe, CPU", chain["cpu_s"]["recipe"], "s")
-    yield Row("plain chain: script, CPU", chain["cpu_s"]["script"], "s")
-    yield Row("plain chain: recipe, peak memory", chain["peak_mb"]["recipe"], "MB")
-    yield Row("plain chain: script, peak memory", chain["peak_mb"]["script"], "MB")
+def shown_in_readme(readme: str) -> str:
+    """Return the table that the README has."""
+    return readme.partition(BEGIN)[2].partition(END)[0]
+
+
+def with_table(readme: str, page: str) -> str:
+    """Return the README with the page's table in place of the one it has."""
+    before, begin, rest = readme.partition(BEGIN)
+    _, end, after = rest.partition(END)
+    if not end:
+        raise ValueError("the README has no place for the table of benchmarks")
+    return f"{before}{begin}{short(page)}{end}{after}"
 
 
 _PAGE = """\
@@ -131,14 +80,18 @@ Written by the one command that measures all of it (about {minutes} min on this 
 python tests/benchmarks/run.py --page
 ```
 
-Without `--page` the page is printed only; `--quick` is a short form of under a minute, to see that
-it works. It makes its own data in a temporary folder and leaves nothing there.
+Without `--page` the page is printed only; `--quick` is a short form of two minutes, to see that it
+works; `--gate` is the short form that `.ci/run` holds against the targets. It makes its own data in
+a temporary folder and leaves nothing there.
+
+![What the whole chain costs](cost.png)
 
 ## Targets
 
 {targets}
 
-*met*: by every round. *median met*: by half of the rounds or more, but not by all.
+*met*: by every round. *median met*: by half of the rounds or more, but not by all. *excellent*:
+met by every round, and half of the rounds or more are excellent.
 
 ## What else was measured
 
@@ -168,6 +121,27 @@ it works. It makes its own data in a temporary folder and leaves nothing there.
   folder; its *jobs alone* leave out checking, planning and the run folder. The largest relative
   difference of the features over all kept epochs was {apart} ({compared} numbers); the tests ask
   for {tolerance}.
+- **Whole chain.** {full_channels} channels at 512 Hz, {full_hours} h, EDF of {full_size} MB:
+  Butterworth 0.5 to 40 Hz both ways, notch 50 Hz, 128 Hz, amplitude, epochs of 4 s that overlap by
+  half, Welch (2 s), multitaper (NW 3, 5 tapers), ten band powers, three edges, entropy
+  (`full_recipe.py`). *Ours* is `waveassay run` with Snakemake and one worker, from an empty store:
+  all processes, from start to end. The *scripts* (`full_script.py`) do the same by hand with numpy
+  and scipy, in loops over channels and epochs or on whole arrays, and write a CSV file. They find
+  the same: powers and shares of epochs in mid recording differed by at most {full_apart}
+  ({full_tolerance} allowed; they resample with scipy's own kernel, which is shorter).
+- **Bound** (`full_bound.py`). The bytes read and converted once, the transforms that no way can do
+  without (blocks of 65,536 samples, Welch's segments once, each epoch by each taper), a pass over
+  the spectra, the numbers written. *Standard* precision filters in float64 and transforms epochs
+  in float32, *double* is float64 throughout, *single* float32 throughout. *Without start*: less
+  the CPU time of the same recipe on {full_short_s} s of as many channels. What no precision is
+  named for is {full_default}.
+- **Largest error of a bin.** Of any bin of any kept epoch, 0.5 to 40 Hz, relative to that bin of
+  the textbook's chain: the steps one after another on the whole recording, in float64.
+- **Long recordings** ({full_long}). Wall of the command, and of its processes the one with most
+  memory.{full_cut}
+- **Share of CPU** (`full_stages.py`). A run in process, its functions clocked.
+- **The backend's own, by recordings** (`backend_own.py`). Recordings of 30 s through the recipe of
+  the plain chain by one worker: wall with Snakemake less wall in process.
 
 ## The machine
 
@@ -179,7 +153,7 @@ Everything is measured in turn within a round, so that what slows the machine sl
 a ratio is taken within its round. Seconds are this machine's; ratios carry over better, and the one
 to numpy's import best. The spread is over rounds of one run of this command: from day to day, and
 with neighbours on a virtual machine, medians move by more than the spread shows. Processes that
-wanted a core (average of a minute), before the first part and after each of the five:
+wanted a core (average of a minute), before the first part and after each:
 {loads}. The measurement itself is one of them, or two to three during the example;
 more is somebody else's, and then wall seconds are too long.
 """

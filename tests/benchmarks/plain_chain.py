@@ -9,17 +9,15 @@ import json
 import sys
 import tempfile
 import time
-from collections.abc import Callable
 from datetime import datetime
 from fractions import Fraction
-from importlib import import_module
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
+from benchmarks import in_process
 from benchmarks.measured import Spread, child, ratios
-from waveassay.execute.runner import JobEvent
 
 RATE_HZ = 512
 LABEL = "EEG Fp1-F7"
@@ -100,39 +98,7 @@ def write(path: Path, length_s: int) -> Path:
 
 def run(recording: Path, into: Path) -> dict[str, float]:
     """Run the recipe in this process; return CPU seconds of all of it, and of its jobs alone."""
-    from waveassay.execute.in_process import run_in_process
-    from waveassay.execute.run import run_recipe
-    from waveassay.execute.work import warm_up
-    from waveassay.plan.recordings import Found
-    from waveassay.recipe import check_recipe
-
-    warm_up()
-    import_module("pyarrow.compute")
-    jobs_s = 0.0
-
-    def timed_runner(
-        folder: Path, workers: int, on_event: Callable[[JobEvent], None]
-    ) -> str | None:
-        nonlocal jobs_s
-        begun_s = time.process_time()
-        ended = run_in_process(folder, workers, on_event)
-        jobs_s = time.process_time() - begun_s
-        return ended
-
-    start_s = time.process_time()
-    recipe = check_recipe(RECIPE, "plain-chain.yaml").recipe
-    assert recipe is not None, "the recipe is sound"
-    outcome = run_recipe(
-        recipe,
-        [Found("long", recording)],
-        into,
-        store_folder=None,
-        workers=1,
-        runner=timed_runner,
-    )
-    all_s = time.process_time() - start_s
-    assert [result.status for result in outcome.results] == ["done"], outcome.results
-    return {"all_s": all_s, "jobs_s": jobs_s}
+    return in_process.run(RECIPE, recording, into)
 
 
 def script(recording: Path) -> dict[str, float]:

@@ -86,12 +86,17 @@ def band_passed(x: Array, rate_hz: int) -> tuple[Array, int]:
 def resampled(x: Array, rate_hz: int) -> tuple[Array, int]:
     """Resample by a Kaiser-windowed low-pass; also half its length, samples of ``x``."""
     down = rate_hz // NEW_RATE_HZ
+    window: Any = kernel(down)
+    return np.asarray(signal.resample_poly(x, 1, down, window=window)), window.size // 2
+
+
+def kernel(down: int) -> Array:
+    """Return the anti-alias kernel for a rate that is divided."""
     asked_db = ATTENUATION_DB + 1.5  # Kaiser's formulas fall a little short
     order = np.ceil((asked_db - 8) / (2.285 * np.pi * TRANSITION / down))
-    half = int(-(-order // 2))
-    window = ("kaiser", 0.1102 * (asked_db - 8.7))
-    kernel: Any = signal.firwin(2 * half + 1, (1 - TRANSITION / 2) / down, window=window)
-    return np.asarray(signal.resample_poly(x, 1, down, window=kernel), np.float64), half
+    taps = 2 * int(-(-order // 2)) + 1
+    window: Any = ("kaiser", 0.1102 * (asked_db - 8.7))
+    return np.asarray(signal.firwin(taps, (1 - TRANSITION / 2) / down, window=window))
 
 
 def too_large(y: Array) -> NDArray[np.bool_]:

@@ -1,7 +1,8 @@
 """Measure everything that has a target, in one run: ``python tests/benchmarks/run.py``.
 
-``--quick`` is a short form of under a minute, to see that it works; ``--page`` measures in full
-and rewrites the page of results.
+``--quick`` is a short form of two minutes, to see that it works; ``--gate`` is one that fails when
+a ratio falls below what is acceptable by more than noise; ``--page`` measures in full and rewrites
+the page of results, its figure and the README's table.
 """
 
 import sys

@@ -1,20 +1,18 @@
 """The benchmarks measure what they say. What they find is not for tests: machines differ."""
 
 import csv
+import os
 import sys
-from dataclasses import replace
+import threading
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from benchmarks import example_run, plain_chain, plain_script, reader, second_run, start_up
-from benchmarks.machine import machine
-from benchmarks.measured import Spread, Timed, child, ratios, timed
-from benchmarks.page import Row, page
+from benchmarks import plain_chain, plain_script, reader, second_run
+from benchmarks.measured import Spread, Timed, child, command, ratios, timed
 
 LENGTH_S = 1500  # three stretches, so that what lies across their borders is compared too
 
@@ -115,19 +113,6 @@ def test_ratios_are_taken_within_a_round() -> None:
         ratios([1.0, 2.0], [1.0])
 
 
-@pytest.mark.parametrize(
-    ("spread", "verdict"),
-    [
-        (Spread(1, 2, 3), "met"),
-        (Spread(1, 3, 3.1), "median met"),
-        (Spread(1, 3.1, 4), "**not met**"),
-    ],
-)
-def test_verdict_looks_at_the_median_and_the_worst(spread: Spread, verdict: str) -> None:
-    assert Row("this", spread, "s", limit=3).verdict == verdict
-    assert Row("this", spread, "s").verdict == "none set"
-
-
 def test_tasks_done_reads_what_a_run_prints() -> None:
     told = "1,203 tasks computed, 600 taken from the store (reading 0.1 s, ...)."
     assert second_run.tasks_done(Timed(1.0, 1.0, 1.0, told)) == 1203
@@ -135,71 +120,44 @@ def test_tasks_done_reads_what_a_run_prints() -> None:
         second_run.tasks_done(Timed(1.0, 1.0, 1.0, "Nothing to compute"))
 
 
-def test_page_shows_every_target_and_what_is_not_met() -> None:
-    found = _made_up()
-    text = page(found, machine(), "2031-04-05")
-    rows = [line for line in text.splitlines() if line.endswith("| met |")]
-    assert len(rows) == 2 * len(reader.TARGETS) + len(start_up.TARGETS_S) + 2
-    limits = (*reader.TARGETS.values(), *start_up.TARGETS_S.values())
-    for limit in (*limits, example_run.TARGET_S, second_run.TARGET_S):
-        assert any(f"at most {limit:g}" in row for row in rows), limit
-    slow = replace(found["second_run"]["again_s"], median=4.0, high=5.0)
-    found["second_run"]["again_s"] = slow
-    again = page(found, machine(), "2031-04-05")
-    assert "| identical second run | at most 3 s | 4 (0.1 to 5) s | **not met** |" in again
+@pytest.mark.skipif(not Path("/proc/self/status").exists(), reason="the system has no /proc")
+def test_a_run_is_timed_with_its_workers(tmp_path: Path) -> None:
+    """The largest process of a run is a worker of its backend, a grandchild's child."""
+    recording = plain_chain.write(tmp_path / "long.edf", LENGTH_S)
+    (tmp_path / "recipe.yaml").write_text(plain_chain.RECIPE, encoding="utf-8")
+    seen_mb: dict[int, float] = {}
+    ended = threading.Event()
+
+    def watch() -> None:
+        while not ended.wait(0.02):
+            for process in _below(os.getpid()):
+                seen_mb[process] = max(_peak_mb(process), seen_mb.get(process, 0.0))
+
+    watcher = threading.Thread(target=watch)
+    watcher.start()
+    try:
+        into = ("--into", tmp_path / "into", "--workers", 1)
+        found = command("run", tmp_path / "recipe.yaml", recording, *into)
+    finally:
+        ended.set()
+        watcher.join()
+    assert len(seen_mb) >= 3, "the command, Snakemake and a worker"
+    assert found.peak_mb >= 0.99 * max(seen_mb.values())
 
 
-def test_page_names_no_place_of_this_machine() -> None:
-    text = page(_made_up(), machine(), "2031-04-05")
-    for place in (Path.home(), Path(sys.prefix), Path(__file__).parents[2]):
-        assert str(place) == "/" or str(place) not in text, place
+def _below(process: int) -> list[int]:
+    """Return the processes that a process has started, and those that they have."""
+    try:
+        tasks = Path(f"/proc/{process}/task").iterdir()
+        children = [int(n) for task in tasks for n in (task / "children").read_text().split()]
+    except OSError:  # it has ended
+        return []
+    return [below for child in children for below in (child, *_below(child))]
 
 
-def _made_up() -> dict[str, Any]:
-    """Return findings in the shape that the measurements have."""
-    s = Spread(0.1, 0.2, 0.3)
-    file = {
-        name: s for name in ("plain_s", "decode_all_ratio", "decode_two_ratio", "memory_growth_mb")
-    }
-    ways = {name: s for name in ("two_workers", "one_worker", "in_process")}
-    both = {"help": s, "check": s}
-    sides = {"recipe": s, "jobs": s, "script": s}
-    return {
-        "reader": {"signals": 64, "hours": 1.0, "EDF": file, "BDF": file},
-        "start_up": {
-            "wall_s": {**both, "python": s, "numpy": s},
-            "to_python": both,
-            "to_numpy": both,
-        },
-        "example": {
-            "wall_s": ways,
-            "cpu_s": ways,
-            "peak_mb": ways,
-            "backend_s": s,
-            "backend_cpu_s": s,
-            "backend_share": s,
-            "second_worker": s,
-        },
-        "second_run": {
-            "recordings": 200,
-            "length_s": 30,
-            "tasks": 600,
-            "first_s": 8.0,
-            "again_s": s,
-            "added_s": s,
-            "again_ratio": s,
-            "added_ratio": s,
-        },
-        "plain_chain": {
-            "hours": 1.0,
-            "rate_hz": 512,
-            "cpu_s": sides,
-            "peak_mb": sides,
-            "ratio": s,
-            "jobs_ratio": s,
-            "largest_relative_difference": 1e-12,
-            "numbers_compared": 5145,
-        },
-        "loads": [0.1, 1.0],
-        "took_s": 240.0,
-    }
+def _peak_mb(process: int) -> float:
+    try:
+        lines = Path(f"/proc/{process}/status").read_text().splitlines()
+    except OSError:
+        return 0.0
+    return sum(int(line.split()[1]) for line in lines if line.startswith("VmHWM:")) * 1024 / 1e6
