@@ -53,7 +53,8 @@ class Made:
     @property
     def held(self) -> Floats:
         """The samples that the file holds, by our own rounding and not by the writer's."""
-        return np.rint(self.x / self.q) * self.q
+        held: Floats = np.rint(self.x / self.q) * self.q
+        return held
 
 
 def rounding_of_power(rms: float, q: float, roundings: float) -> float:
@@ -80,7 +81,8 @@ def alias_name(key: str) -> str:
 
 def tone(freq_hz: float, rate_hz: int = RATE_HZ, amplitude: float = TONE_UV) -> Floats:
     """Return a sine; its phase of 0.3 keeps its half periods from being rounded alike."""
-    return amplitude * np.sin(2 * pi * freq_hz * seconds(rate_hz, SHORT_S) + 0.3)
+    x: Floats = amplitude * np.sin(2 * pi * freq_hz * seconds(rate_hz, SHORT_S) + 0.3)
+    return x
 
 
 def with_powers(powers: Mapping[int, float], period: int, repeats: int, seed: int) -> Floats:
@@ -190,7 +192,8 @@ def pulse_wave(per_minute: float, *, ventilated: bool = False) -> Floats:
     x = np.full(t.size, PULSE_MEAN_MMHG)
     for k, amplitude in enumerate(pulse_amplitudes(int(0.99 * PULSE_RATE_HZ / 2 / f)), 1):
         x += np.real(amplitude * np.exp(2j * pi * k * f * t))
-    return x + BREATHS_MMHG * np.cos(2 * pi * BREATHS_HZ * t) * ventilated
+    wave: Floats = x + BREATHS_MMHG * np.cos(2 * pi * BREATHS_HZ * t) * ventilated
+    return wave
 
 
 STANDARD_RATE_HZ, STANDARD_Q = 1000, 0.0001

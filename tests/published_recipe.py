@@ -31,7 +31,7 @@ _ALL = "feature.band_power: {bands: {all: [0 Hz, 125 Hz]}}\n      as: power"
 
 def recipe_text(units: Mapping[str, str]) -> str:
     """Return the recipe; ``units`` is signal -> the unit of its file."""
-    lines = ["recipe: published-values", "edition: 1", "signals:"]
+    lines = ["recipe: published-values", "edition: 1", "precision: double", "signals:"]
     for name, unit in units.items():
         wanted = OTHER_UNITS.get(name, unit)
         lines.append(f"  {name}: {{labels: [{name}], unit: {wanted}, optional: true}}")

@@ -26,6 +26,7 @@ TOLERANCE = 1e-9
 RECIPE = f"""\
 recipe: plain-chain
 edition: 1
+precision: double
 title: The plain chain of the benchmarks
 signals:
   frontal: {{labels: [{LABEL}], unit: uV, modality: eeg}}

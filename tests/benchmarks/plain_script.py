@@ -40,7 +40,7 @@ def features_of_file(path: Path) -> Features:
         whole = recording.facts.pieces[0]
         rate_hz = recording.facts.signals[0].rate_hz
         (x,) = recording.read([0], 0, whole.start_s, whole.stop_s)
-    return features(x, int(rate_hz))
+    return features(np.asarray(x, np.float64), int(rate_hz))
 
 
 def features(x: Array, rate_hz: int) -> Features:

@@ -1,5 +1,7 @@
 """``check --plan`` says how every step on samples is run, and why where it is not fused."""
 
+from pathlib import Path
+
 import numpy as np
 import pytest
 
@@ -72,6 +74,7 @@ def test_every_step_on_samples_is_told(printed: tuple[str, str], with_recording:
     for chain, steps in CHAINS.items():
         said = lines(text, chain)
         names = [step.split(":")[0] for step in steps]
+        assert said.pop("epoch.consecutive") == "given samples as float32"
         assert len(said) == len(names)
         assert {name.split("#")[0] for name in said} == set(names)
     whole = "fused, as one response: filter.butterworth + filter.notch + resample"
@@ -85,6 +88,20 @@ def test_every_step_on_samples_is_told(printed: tuple[str, str], with_recording:
     kept = lines(text, "kept")
     assert "what filter.butterworth gives is kept" in kept["filter.butterworth"]
     assert "fused, as one response: filter.notch + resample" in kept["resample"]
+
+
+def test_how_epochs_are_given_samples_is_told(tmp_path: Path) -> None:
+    low = [BAND.replace("high_pass: 0.5 Hz, ", ""), DOWN]
+    for head, steps, held in (
+        (HEAD, [BAND, DOWN], "float32"),
+        (HEAD, low, "float64"),
+        (HEAD.replace("edition: 1", "edition: 1\nprecision: double"), [BAND, DOWN], "float64"),
+    ):
+        recipe = tmp_path / "recipe.yaml"
+        chain = CHAIN.format(name="one", steps="\n".join(f"    - {step}" for step in steps))
+        recipe.write_text(head + chain)
+        printed = command("check", recipe, "--plan").stdout
+        assert lines(printed, "one")["epoch.consecutive"] == f"given samples as {held}"
 
 
 def test_what_only_the_rate_decides_is_told_with_a_recording(printed: tuple[str, str]) -> None:

@@ -175,6 +175,7 @@ def test_a_run_with_a_gap_is_the_same_fused_and_not(
     recipe = """\
 recipe: fused
 edition: 1
+precision: double
 title: Fused and not
 purpose: To compare
 signals:

@@ -156,9 +156,10 @@ def test_stretches_change_no_mask_and_no_number(
     x[70 * 256 : 71 * 256] += 2000.0
     path = write_eeg(folder / "long.edf", x, 256)
     monkeypatch.setattr(stretches, "STRETCH_S", Fraction(100_000))
-    whole = rows(run(WITHOUT_CONDITIONS, [path], folder / "whole").folder, "epochs/cortex")
+    recipe = WITHOUT_CONDITIONS.replace("edition: 1\n", "edition: 1\nprecision: double\n")
+    whole = rows(run(recipe, [path], folder / "whole").folder, "epochs/cortex")
     monkeypatch.setattr(stretches, "STRETCH_S", Fraction(20))
-    cut = rows(run(WITHOUT_CONDITIONS, [path], folder / "cut").folder, "epochs/cortex")
+    cut = rows(run(recipe, [path], folder / "cut").folder, "epochs/cortex")
     assert len(whole) == len(cut) == 74
     assert {r["reason"] for r in whole} >= {"", "amplitude", "edge"}
     for one, other in zip(whole, cut, strict=True):

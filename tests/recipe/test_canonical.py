@@ -93,6 +93,7 @@ DIGEST = sound(TEXT).digest
         ),
         ("title: A title\n", "title: Another\npurpose: For something\n"),
         ("title: A title\n", "citation: {text: Somebody, doi: 10.1/x}\n"),
+        ("title: A title\n", "precision: standard\n"),
         ("keep: true", "keep: false"),
         ("      keep: true\n", ""),
         ("origin: assumed", "origin: site"),
@@ -114,6 +115,7 @@ def test_origins_change_no_digest() -> None:
     [
         ("recipe: tried", "recipe: tried-again"),
         ("edition: 1", "edition: 2"),
+        ("edition: 1", "edition: 1\nprecision: double"),
         ("30 Hz, order", "30.000000000000004 Hz, order"),
         ("order: 2", "order: 3"),
         ("gain: 0.1", "gain: 0.10000000000000002"),
@@ -253,6 +255,29 @@ def test_every_parameter_has_a_row_with_its_origin() -> None:
     assert rows["conditions.calm", "start.offset"] == ("1", "s", "recipe", "")
     assert rows["conditions.calm", "start.which"] == ("null", "", "default", "")
     assert rows["conditions.calm", "length"] == ("120", "s", "recipe", "")
+
+
+@pytest.mark.parametrize(
+    ("written", "origins", "row"),
+    [
+        ("", "", ("standard", "default", "")),
+        ("precision: standard\n", "", ("standard", "recipe", "")),
+        ("precision: double\n", "", ("double", "recipe", "")),
+        (
+            "precision: double\n",
+            "  recipe.precision: {origin: stated, where: p. 4}\n",
+            ("double", "stated", "p. 4"),
+        ),
+    ],
+)
+def test_the_precision_is_written_out_with_its_origin(
+    written: str, origins: str, row: tuple[str, str, str]
+) -> None:
+    recipe = sound(TEXT.replace("title:", f"{written}title:") + origins)
+    (found,) = (r for r in parameters(recipe) if r.step == "recipe")
+    assert (found.parameter, found.value, found.origin, found.where) == ("precision", *row)
+    assert f"\nprecision: {row[0]}\n" in resolved_yaml(recipe)
+    assert recipe.precision == row[0]
 
 
 def test_the_rows_name_each_field_of_every_stage_of_the_recipe() -> None:

@@ -254,6 +254,19 @@ def test_an_origin_in_a_faulty_chain_is_not_called_wrong() -> None:
     assert found[1].startswith("12:3:")
 
 
+def test_what_holds_for_all_chains_has_a_name_that_a_chain_may_have_too() -> None:
+    """An address of three parts or more is of the chain, one of two of the recipe."""
+    chain = with_chain(*GOOD).replace("  c:\n", "  recipe:\n")
+    right = (
+        "origins:\n  recipe.precision: {origin: site}\n  recipe.epoch.cut.length: {origin: site}\n"
+    )
+    checked = check_recipe(chain + right, "r", REGISTRY)
+    assert checked.errors == ()
+    wrong = "origins:\n  recipe.epoch.kut.length: {origin: site}\n"
+    (line,) = (text for text in said(chain + wrong) if "R107" in text)
+    assert "no such step; did you mean 'recipe.epoch.cut.length'?" in line
+
+
 def test_a_recipe_knows_where_its_parameters_stand() -> None:
     recipe = check_recipe(with_chain(*GOOD), "r", REGISTRY).recipe
     assert recipe is not None

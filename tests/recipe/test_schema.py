@@ -62,6 +62,7 @@ def test_a_recipe_that_uses_all_of_the_grammar_is_valid() -> None:
         ("recipe: tried", "recipe: Not a Name"),
         ("edition: 1", "edition: 0"),
         ("edition: 1\n", ""),
+        ("edition: 1\n", "edition: 1\nprecision: single\n"),
         ("recipe: tried", "recip: tried"),
         ("unit: uV", "units: uV"),
         ("epoch.cut: {length: 4 s}", "epoch.cut: {length: 4}"),
@@ -84,6 +85,15 @@ def test_a_recipe_that_uses_all_of_the_grammar_is_valid() -> None:
 def test_what_is_not_sound_is_not_valid(written: str, otherwise: str) -> None:
     assert written in GOOD
     assert not valid(GOOD.replace(written, otherwise))
+
+
+def test_the_precision_is_one_of_two_and_may_be_left_out() -> None:
+    for value in ("standard", "double"):
+        assert valid(GOOD.replace("edition: 1\n", f"edition: 1\nprecision: {value}\n"))
+    precision = SCHEMA["properties"]["precision"]
+    assert precision["default"] == "standard"
+    assert "float32" in precision["description"]
+    assert "precision" not in SCHEMA["required"]
 
 
 def test_chains_are_needed() -> None:

@@ -81,6 +81,11 @@ EXPECTED: dict[str, list[tuple[str, str, str]]] = {
         ("17:51", "R203", "(found guessed)"),
     ],
     "parameters_not_indented": [("10:7", "R103", "'rate' is a parameter of resample; indent")],
+    "precision": [("3:12", "R203", "must be one of 'standard' or 'double' (found doubel)")],
+    "precision_alternative": [
+        ("16:64", "R108", "must be one of 'standard' or 'double' (found single)"),
+        ("17:3", "R107", "recipe has no parameter 'precison'; did you mean 'precision'?"),
+    ],
     "reserved_chain": [("6:3", "R105", "names a section")],
     "tab_indent": [("9:1", "Y105", "indent with spaces")],
     "tag": [("2:10", "Y111", "'!!int'")],

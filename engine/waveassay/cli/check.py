@@ -32,14 +32,14 @@ def check(argument: str, arguments: Sequence[Path], *, plan: bool = False) -> in
     screen.print(f"Digest: {recipe.digest}")
     if not arguments:
         if plan:
-            show_plan(from_recipe(recipe))
+            show_plan(from_recipe(recipe), recipe.precision)
         return 0
     found = find_recordings(arguments)
     planned: list[Passage] = []
     routes = Routes(recipe)
     failing = sum(not _would_run(routes, item.name, item.path, planned) for item in found)
     if plan:
-        show_plan(from_passages(planned))
+        show_plan(from_passages(planned), recipe.precision)
     screen.print(f"{len(found) - failing} of {plural(len(found), 'recording')} would run.")
     return 3 if failing else 0
 

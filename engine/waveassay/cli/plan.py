@@ -1,4 +1,4 @@
-"""How the steps on samples will be run: what ``waveassay check --plan`` prints."""
+"""How the steps on samples will be run, and what takes them: ``waveassay check --plan``."""
 
 from collections.abc import Iterable, Mapping
 
@@ -6,9 +6,10 @@ from waveassay.cli.screen import console
 from waveassay.contract import SignalSpec
 from waveassay.plan.fusing import explained
 from waveassay.plan.passage import Passage
+from waveassay.plan.precision import takers_of_rows
 from waveassay.plan.program import Program, compile_program
 from waveassay.recipe.fold import fold
-from waveassay.recipe.model import Recipe
+from waveassay.recipe.model import Precision, Recipe
 
 #: (chain, program, what it is for) of one signal.
 Compiled = tuple[str, Program, str]
@@ -31,12 +32,16 @@ def from_passages(passages: Iterable[Passage]) -> Iterable[Compiled]:
             yield passage.chain.name, lane.program, f"{lane.role} at {rate}"
 
 
-def show_plan(compiled: Iterable[Compiled]) -> None:
+def show_plan(compiled: Iterable[Compiled], precision: Precision) -> None:
     """Print per chain how each step on samples is run, once for all signals that are run alike."""
     alike: dict[tuple[str, tuple[tuple[str, str], ...]], dict[str, None]] = {}
     for chain, program, what in compiled:
-        steps = tuple((told.step, told.text) for told in explained(program))
-        alike.setdefault((chain, steps), {})[what] = None
+        run = [(told.step, told.text) for told in explained(program)]
+        given = [
+            (move.step.name, f"given samples as {held}")
+            for move, held in takers_of_rows(program, precision)
+        ]
+        alike.setdefault((chain, (*run, *given)), {})[what] = None
     _print(alike)
 
 

@@ -41,6 +41,7 @@ def disagreements(spec: object, taken: object, out: object) -> Iterator[str]:
         yield from _misplaced(taken, out)
     if isinstance(out, Features):
         yield from _gaps(out)
+    yield from _imprecise(taken, out)
 
 
 def _said_and_found(spec: object, out: object) -> Iterator[tuple[str, object, object]]:
@@ -64,6 +65,32 @@ def _said_and_found(spec: object, out: object) -> Iterator[tuple[str, object, ob
         yield "columns", [column.part for column in spec.columns], list(out.columns)
         sizes = {values.size for values in out.columns.values()} | {len(out.missing)}
         yield "one value a row:", {len(out.rows)}, sizes
+
+
+def _imprecise(taken: object, out: object) -> Iterator[str]:
+    """Yield what is held in a precision that was not given: see `waveassay.contract.kinds`."""
+    if isinstance(out, Signal) and out.x.dtype != np.float64:
+        yield (
+            f"samples come out as {out.x.dtype}, and float64 is expected "
+            "(Signal.with_samples sees to it)"
+        )
+    if isinstance(out, Spectra):
+        given = _held(taken)
+        allowed = ("float64",) if given == "float64" else ("float64", "float32")
+        if str(out.density.dtype) not in allowed:
+            yield (
+                f"densities come out as {out.density.dtype} of what is held as {given}, and "
+                f"{' or '.join(allowed)} is expected"
+            )
+
+
+def _held(data: object) -> str:
+    """Return how samples or densities are held; ``arrays`` where a step combines what it has."""
+    if isinstance(data, Epochs):
+        return str(data.signal.x.dtype)
+    if isinstance(data, Signal):
+        return str(data.x.dtype)
+    return str(data.density.dtype) if isinstance(data, Spectra) else "arrays"
 
 
 def _misplaced(taken: Signal, out: Signal) -> Iterator[str]:

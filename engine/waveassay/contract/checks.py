@@ -30,6 +30,7 @@ from waveassay.contract.checks_data import RATES_HZ, UNITS, Given, given
 from waveassay.contract.checks_defaults import unsound_defaults
 from waveassay.contract.checks_form import why_unfit
 from waveassay.contract.checks_masks import prove_masks
+from waveassay.contract.checks_precision import SINGLE_TOLERANCE, in_single, prove_single
 from waveassay.contract.checks_response import RESPONSE_TOLERANCE, prove_response
 from waveassay.contract.checks_running import (
     Refused,
@@ -46,6 +47,7 @@ from waveassay.contract.stage import EachRow, Stage, Whole
 __all__ = [
     "CHECKS",
     "RESPONSE_TOLERANCE",
+    "SINGLE_TOLERANCE",
     "example_params",
     "run_by_stretches",
     "run_whole",
@@ -266,6 +268,22 @@ def check_context(stage: Stage) -> None:
             prove_reach(stage, params, case)
 
 
+def check_single_precision(stage: Stage) -> None:
+    """Prove that samples or densities in float32 give the same result, but for their rounding.
+
+    Each row still depends on itself alone, to the bit.
+    """
+    if _is_source(stage):
+        return
+    params = example_params(stage)
+    for case in _one_case_a_kind(stage):
+        single = in_single(case)
+        if single is not None:
+            prove_single(stage, params, case, single)
+            if isinstance(stage.context, EachRow):
+                prove_each_row(stage, params, single)
+
+
 def check_response(stage: Stage) -> None:
     """Prove a declared frequency response against the stage's own function, masks to the letter."""
     if stage.response is None:
@@ -298,6 +316,7 @@ CHECKS: tuple[Callable[[Stage], None], ...] = (
     check_input_is_not_written,
     check_same_twice,
     check_context,
+    check_single_precision,
     check_masks,
     check_response,
 )

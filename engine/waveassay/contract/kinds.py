@@ -2,6 +2,10 @@
 
 Times are exact fractions of a second from the recording's start. Arrays are read-only: a stage
 never writes its input, it returns a new object (``dataclasses.replace`` or the helpers here).
+
+Numbers are float64, with two exceptions. Steps on samples (filters, masks) are given samples in
+float64 and give them so; the samples of epochs may be float32, as the recipe's ``precision`` has
+it. Densities of float32 samples may be float32 or float64; those of float64 samples are float64.
 """
 
 from collections.abc import Iterable, Mapping
@@ -14,7 +18,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-Floats = NDArray[np.float64]
+#: float64, or, where the text says so, float32.
+Floats = NDArray[np.floating[Any]]
 Ints = NDArray[np.int64]
 Bools = NDArray[np.bool_]
 
@@ -93,7 +98,7 @@ class Signal:
     Attributes
     ----------
     name : the recipe's name of the signal, or its label where one name stands for many.
-    x : samples in ``unit``, shape (n,).
+    x : samples in ``unit``, shape (n,); float64, or float32 in epochs.
     rate_hz : exact sampling rate.
     start_s : time of ``x[0]``.
     piece : the whole piece; ``x`` may be a part of it, with context on either side.
@@ -129,7 +134,7 @@ class Signal:
     def with_samples(
         self, x: Floats, *, rate_hz: Fraction | None = None, unit: str | None = None
     ) -> "Signal":
-        """Return the signal with other samples from the same start.
+        """Return the signal with other samples from the same start, in float64.
 
         Raises
         ------
@@ -265,9 +270,12 @@ class Epochs:
         return int(self.first.size)
 
     def samples(self) -> Floats:
-        """Return the kept epochs, shape (kept, length); a copy only of what is kept."""
+        """Return the kept epochs, shape (kept, length); a copy only of what is kept.
+
+        They are float64 or float32, as the signal's samples are.
+        """
         if self.signal.x.size < self.length:
-            return np.empty((0, self.length))
+            return np.empty((0, self.length), self.signal.x.dtype)
         windows = np.lib.stride_tricks.sliding_window_view(self.signal.x, self.length)
         return windows[self.first[self.kept]]
 
@@ -313,7 +321,8 @@ class Spectra:
     ----------
     unit : the signal's unit; densities are in unit squared per Hz.
     freq_hz : bin centres, shape (f,), equally spaced from 0.
-    density : one-sided, shape (rows, f); NaN in rows that are not kept.
+    density : one-sided, shape (rows, f); NaN in rows that are not kept. float64, or float32 where
+        the samples were.
     resolution_hz : true resolution (equivalent noise bandwidth, or 2W of a multitaper estimate).
     dof : equivalent degrees of freedom of each row, shape (rows,).
     """
@@ -342,7 +351,7 @@ class Features:
     Attributes
     ----------
     columns : part -> one value a row, NaN where missing. Parts and order as in the spec;
-        the empty part stands for the feature itself.
+        the empty part stands for the feature itself. Held in float64, whatever they come in.
     missing : why a kept row has no value, one text a row, empty where all are there.
     """
 
@@ -352,7 +361,12 @@ class Features:
     missing: tuple[str, ...]
 
     def __post_init__(self) -> None:
-        _freeze(*self.columns.values())
+        columns = {
+            part: values.astype(np.float64) if values.dtype == np.float32 else values
+            for part, values in self.columns.items()
+        }
+        object.__setattr__(self, "columns", columns)
+        _freeze(*columns.values())
 
 
 @dataclass(frozen=True)

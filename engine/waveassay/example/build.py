@@ -108,12 +108,13 @@ def _pressure(one: Volunteer, number: int) -> Floats:
     amplitude = course(one.pulse_mmhg).at(time_s)
     breath = np.cos(2 * np.pi * ((one.breaths_per_min / 60 * time_s) % 1.0))
     spread = 2 * uniform((SEED, number, 3), time_s.size) - 1
-    return (
+    pressure: Floats = (
         course(one.pressure_mmhg).at(time_s)
         + pulse_wave(cycles, amplitude, study.HARMONICS, study.PHASES_DEG)
         + study.VENTILATOR_MMHG * breath
         + study.PRESSURE_NOISE_MMHG * spread
     )
+    return pressure
 
 
 def _annotations(one: Volunteer) -> list[Annotation]:

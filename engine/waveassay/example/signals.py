@@ -33,16 +33,19 @@ class Course:
 
     def at(self, time_s: Floats) -> Floats:
         """Return the value at each time."""
-        return self.first + (self.second - self.first) * self._way(time_s)
+        values: Floats = self.first + (self.second - self.first) * self._way(time_s)
+        return values
 
     def integral(self, time_s: Floats) -> Floats:
         """Return the integral from 0 to each time: of a rate in Hz, the cycles gone through."""
         width = self.arrives_s - self.leaves_s
         ramp = self._way(time_s) ** 2 * width / 2 + np.maximum(time_s - self.arrives_s, 0)
-        return self.first * time_s + (self.second - self.first) * ramp
+        total: Floats = self.first * time_s + (self.second - self.first) * ramp
+        return total
 
     def _way(self, time_s: Floats) -> Floats:
-        return np.clip((time_s - self.leaves_s) / (self.arrives_s - self.leaves_s), 0, 1)
+        way: Floats = np.clip((time_s - self.leaves_s) / (self.arrives_s - self.leaves_s), 0, 1)
+        return way
 
 
 def uniform(seed: Sequence[int], count: int) -> Floats:
@@ -56,7 +59,8 @@ def hill(centre_hz: float, half_width_hz: float) -> Density:
 
     def density(freq_hz: Floats) -> Floats:
         away = np.clip(np.abs(freq_hz - centre_hz) / half_width_hz, 0, 1)
-        return (1 + np.cos(pi * away)) / (2 * half_width_hz)
+        height: Floats = (1 + np.cos(pi * away)) / (2 * half_width_hz)
+        return height
 
     return density
 

@@ -8,7 +8,8 @@ from waveassay.contract import Interval, Part, Signal
 from waveassay.execute.arrays import group_writer
 from waveassay.execute.fused import run_unit
 from waveassay.execute.moves import run_move
-from waveassay.execute.signals import FILE, OUTSIDE, SignalSource, prepared_group
+from waveassay.execute.signals import FILE, OUTSIDE, SignalSource, as_held, prepared_group
+from waveassay.plan.precision import held_in_store
 from waveassay.plan.stretches import Stretch
 from waveassay.plan.tasks import window_s
 from waveassay.plan.windows import Form
@@ -48,7 +49,9 @@ def prepare(
                 piece = passage.pieces[stretch.piece]
                 run_form(lane.forms[pass_no], lane_no, values, states, piece, bounds)
             for index in lane.program.kept_signals(pass_no):
-                writer.add(f"{lane_no}.{index}", prepared_group(values[index].cut(*bounds)))
+                held = held_in_store(lane.program, index, passage.precision)
+                kept = as_held(values[index].cut(*bounds), held)
+                writer.add(f"{lane_no}.{index}", prepared_group(kept))
         writer.end({OUTSIDE: sorted(source.outside)})
 
 

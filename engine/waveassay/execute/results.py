@@ -5,7 +5,7 @@ from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
-from waveassay.contract import SignalError, number_text
+from waveassay.contract import Derived, SignalError, number_text
 from waveassay.contract.digests import digest
 from waveassay.execute.finish import FACTS_FILE
 from waveassay.execute.store import Store
@@ -13,6 +13,7 @@ from waveassay.execute.work import OUTCOMES, Failure
 from waveassay.plan.jobs import Job
 from waveassay.plan.passage import Passage
 from waveassay.plan.plan import Plan, PlannedRecording
+from waveassay.plan.precision import takers_of_rows
 from waveassay.plan.program import Level, Move
 from waveassay.plan.tasks import Task
 from waveassay.provenance.results import Output, Result
@@ -145,9 +146,14 @@ def derived_rows(plan: Plan, results: Sequence[Result]) -> Iterator[list[Any]]:
             continue
         for passage in item.passages:
             for lane in passage.lanes:
+                given = {
+                    move.index: [Derived("samples given as", held)]
+                    for move, held in takers_of_rows(lane.program, passage.precision)
+                }
                 for move in lane.program.moves.values():
                     derive = move.step.stage.derive
-                    for known in derive(move.step.params, move.spec_in) if derive else ():
+                    derived = derive(move.step.params, move.spec_in) if derive else ()
+                    for known in (*derived, *given.get(move.index, ())):
                         value = known.value
                         text = value if isinstance(value, str) else number_text(value)
                         yield [

@@ -10,11 +10,13 @@ from waveassay.execute.arrays import Group, exclusions_to_json, group_writer
 from waveassay.execute.feature_arrays import ROWS_OF, features_to_arrays
 from waveassay.execute.moves import collect_move, run_move, starting_in
 from waveassay.execute.prepare import States
-from waveassay.execute.signals import OUTSIDE, SignalSource
+from waveassay.execute.signals import OUTSIDE, SignalSource, as_held
 from waveassay.plan.passage import Lane
+from waveassay.plan.precision import held_in_rows
 from waveassay.plan.program import Level
 from waveassay.plan.stretches import Stretch
 from waveassay.plan.tasks import collected, rows_moves
+from waveassay.recipe.model import Precision
 
 FILE = "rows.arrays"
 #: In the facts of a signal: number of a step -> masks where it cut epochs.
@@ -29,8 +31,9 @@ def make_rows(
         for lane_no, signals in source.by_lane(_wanted(source, pass_no, stretch)):
             lane = source.passage.lanes[lane_no]
             applied = {index: s for (owner, index), s in states.items() if owner == lane_no}
-            values: dict[int, Data] = {**signals}
-            group = _lane_rows(lane, pass_no, lane.bounds_s(stretch), values, applied)
+            precision = source.passage.precision
+            bounds_s = lane.bounds_s(stretch)
+            group = _lane_rows(lane, pass_no, precision, bounds_s, {**signals}, applied)
             writer.add(str(lane_no), group)
         writer.end({OUTSIDE: sorted(source.outside)})
 
@@ -38,6 +41,7 @@ def make_rows(
 def _lane_rows(
     lane: Lane,
     pass_no: int,
+    precision: Precision,
     bounds_s: tuple[Fraction, Fraction],
     values: dict[int, Data],
     states: Mapping[int, Part],
@@ -45,9 +49,10 @@ def _lane_rows(
     """Run one signal's steps on rows; ``values`` holds the signals that they take."""
     masks: dict[str, Any] = {}
     features: dict[int, Features] = {}
+    in_rows = _as_rows_take(lane, pass_no, values, precision)
     for move in rows_moves(lane, pass_no):
         assert move.source is not None, "only a source takes nothing"
-        taken = values[move.source]
+        taken = in_rows.get(move.source, values[move.source])
         made = starting_in(run_move(move, taken, states.get(move.index)), bounds_s)
         values[move.index] = made
         if move.pass_no != pass_no:
@@ -60,11 +65,26 @@ def _lane_rows(
     for move in collected(lane, pass_no):
         assert move.source is not None, "only a source takes nothing"
         data = values[move.source]
+        if move.level is Level.ROWS:
+            data = in_rows.get(move.source, data)
         if isinstance(data, Signal):
             data = data.cut(*bounds_s)
         part = collect_move(move, data)
         arrays |= {f"{move.index}.part.{name}": x for name, x in part.items()}
     return Group(arrays, {MASKS: masks, ROWS_OF: rows_of})
+
+
+def _as_rows_take(
+    lane: Lane, pass_no: int, values: Mapping[int, Data], precision: Precision
+) -> dict[int, Signal]:
+    """Return the signals as steps on rows are given them; all other steps take them as they are."""
+    takers = [*rows_moves(lane, pass_no), *collected(lane, pass_no)]
+    sources = {move.source for move in takers if move.level is Level.ROWS}
+    return {
+        index: as_held(signal, held_in_rows(lane.program.moves[index], precision))
+        for index, signal in values.items()
+        if isinstance(signal, Signal) and index in sources
+    }
 
 
 def _wanted(

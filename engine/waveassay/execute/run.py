@@ -142,7 +142,7 @@ class _Run:
         notes = notes_on(runs, self.recipe)
         env = environment(installed_bundles())
         folder = RunFolder.open(runs, self.recipe)
-        folder.begin(known, env, workers=self.workers, recordings=len(found))
+        folder.begin(self.recipe, known, env, workers=self.workers, recordings=len(found))
         plan = make_plan(self.recipe, found, read)
         todo = [missing_tasks(item.tasks, self.store.has) for item in plan.recordings]
         self._require_room(plan, todo, folder)

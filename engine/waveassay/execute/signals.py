@@ -17,6 +17,7 @@ from waveassay.execute.arrays import (
 )
 from waveassay.execute.store import Store
 from waveassay.plan.passage import Lane, Passage
+from waveassay.plan.precision import Held
 from waveassay.plan.tasks import Task, overlapping
 from waveassay.recording import Facts, open_recording
 
@@ -49,6 +50,13 @@ def read_from_file(
             read.update(zip(lanes, arrays, strict=True))
         outside = {i for i in read if recording.out_of_range.get(passage.lanes[i].channel)}
     return read, outside
+
+
+def as_held(signal: Signal, held: Held) -> Signal:
+    """Return the signal with its samples held in a precision; itself where they are."""
+    if signal.x.dtype == held:
+        return signal
+    return replace(signal, x=signal.x.astype(held))
 
 
 def _as_signal(lane: Lane, piece: Interval, start_s: Fraction, x: Floats) -> Signal:

@@ -13,7 +13,7 @@ from waveassay.plan.program import Program
 from waveassay.plan.routes import Route, Routes
 from waveassay.plan.stretches import Stretch, bounds_s
 from waveassay.plan.windows import Form
-from waveassay.recipe.model import Chain
+from waveassay.recipe.model import Chain, Precision
 from waveassay.recording import Facts, SignalFacts
 
 
@@ -62,11 +62,17 @@ class Lane:
 
 @dataclass(frozen=True)
 class Passage:
-    """One recording's passage through one chain."""
+    """One recording's passage through one chain.
+
+    Attributes
+    ----------
+    precision : of the recipe; see `waveassay.plan.precision`.
+    """
 
     recording: str
     sha256: str
     chain: Chain
+    precision: Precision
     pieces: tuple[Interval, ...]
     conditions: tuple[Condition, ...]
     lanes: tuple[Lane, ...]
@@ -164,6 +170,7 @@ def _passage(
         recording,
         sha256,
         chain,
+        routes.recipe.precision,
         facts.pieces,
         conditions,
         tuple(lanes),

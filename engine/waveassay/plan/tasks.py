@@ -173,7 +173,7 @@ class _Planner:
                 "action": action,
                 "pass": pass_no,
                 "engine": _digest_of_engine(),
-                "precision": "double",
+                "precision": self.passage.precision,
                 "sha256": self.passage.sha256,
                 "needs": list(unique),
                 **identity,

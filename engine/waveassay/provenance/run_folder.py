@@ -84,14 +84,24 @@ class RunFolder:
         raise RuntimeError(f"{runs}: a thousand runs in one second")
 
     def begin(
-        self, run_digest: str, environment: dict[str, Any], *, workers: int, recordings: int
+        self,
+        recipe: Recipe,
+        run_digest: str,
+        environment: dict[str, Any],
+        *,
+        workers: int,
+        recordings: int,
     ) -> None:
         """Write what is known before anything is computed."""
         known = {"id": environment_id(environment), **environment}
         text = json.dumps(known, indent=1, ensure_ascii=False)
         write_text(self.path / "environment.json", text + "\n")
         self.log.append(
-            "run_started", run_digest=run_digest, workers=workers, recordings=recordings
+            "run_started",
+            run_digest=run_digest,
+            precision=recipe.precision,
+            workers=workers,
+            recordings=recordings,
         )
 
     def complete(

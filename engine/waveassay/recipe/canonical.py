@@ -16,8 +16,15 @@ from waveassay.contract import Kind
 from waveassay.contract.quantity import unit_symbol
 from waveassay.recipe.chains import default_source
 from waveassay.recipe.fields import leaves, plain
-from waveassay.recipe.model import Chain, ConditionRule, Place, Recipe, SignalRule
-from waveassay.recipe.origins import origin_of
+from waveassay.recipe.model import (
+    Chain,
+    ConditionRule,
+    Numerics,
+    Place,
+    Recipe,
+    SignalRule,
+)
+from waveassay.recipe.origins import RECIPE, origin_of
 from waveassay.recipe.yaml_writer import written
 
 
@@ -46,6 +53,7 @@ def _whole_numbers(value: Any) -> Any:
 def canonical_form(
     name: str,
     edition: int,
+    numerics: Numerics,
     signals: Mapping[str, SignalRule],
     conditions: Mapping[str, ConditionRule],
     chains: Mapping[str, Chain],
@@ -54,6 +62,7 @@ def canonical_form(
     return {
         "recipe": name,
         "edition": edition,
+        **plain(numerics),
         "signals": {key: _whole_numbers(_signal(rule)) for key, rule in signals.items()},
         "conditions": {key: _whole_numbers(plain(rule)) for key, rule in conditions.items()},
         "chains": {
@@ -90,6 +99,7 @@ def resolved_yaml(recipe: Recipe) -> str:
         document["purpose"] = recipe.purpose
     if recipe.citation is not None:
         document["citation"] = plain(recipe.citation)
+    document |= plain(recipe.numerics)
     document["signals"] = {key: _signal(recipe.signals[key]) for key in sorted(recipe.signals)}
     if recipe.conditions:
         document["conditions"] = {
@@ -137,7 +147,8 @@ class ParameterRow:
 
     Attributes
     ----------
-    step : ``chain.step``, ``signals.name`` or ``conditions.name``.
+    step : ``chain.step``, ``signals.name`` or ``conditions.name``; ``recipe`` for what holds for
+        all chains.
     parameter : dotted (``bands.alpha``).
     value, unit : numbers read back to the same float; a list stands in brackets.
     origin : of the recipe's ``origins``, else ``recipe`` or ``default``.
@@ -153,11 +164,11 @@ class ParameterRow:
 
 
 def parameters(recipe: Recipe) -> list[ParameterRow]:
-    """Return every parameter of every step, signal and condition, defaults included.
+    """Return every parameter of the recipe, its steps, signals and conditions, with defaults.
 
     ``on`` and ``as`` stand among a step's parameters where the recipe gives them.
     """
-    rows: list[ParameterRow] = []
+    rows = _rows(recipe, RECIPE, recipe.numerics, None)
     for name in sorted(recipe.signals):
         rows += _rows(recipe, f"signals.{name}", recipe.signals[name], None)
     for name in sorted(recipe.conditions):

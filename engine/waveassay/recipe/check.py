@@ -142,7 +142,9 @@ class _Reading:
 
     def _origins(self, steps: Mapping[str, Sequence[Step | None]]) -> dict[str, Origin]:
         listed = read_section(self.sections, "origins", self.report, needed=False)
-        addressed = all_addressed(steps, self.signals, self.conditions)
+        head = self.sections.head
+        numerics = None if head is None else head.numerics
+        addressed = all_addressed(numerics, steps, self.signals, self.conditions)
         # Where a step is at fault, an address in its chain may well be right.
         faulty = [f"{name}." for name, chain in steps.items() if None in chain or not chain]
         return read_origins(listed, addressed, faulty, self.report)
@@ -175,7 +177,7 @@ class _Reading:
             name: Chain(name, tuple(step for step in chain if step is not None))
             for name, chain in steps.items()
         }
-        form = canonical_form(head.recipe, head.edition, signals, conditions, chains)
+        form = canonical_form(head.recipe, head.edition, head.numerics, signals, conditions, chains)
         return Recipe(
             path=self.report.path,
             text=self.text,
@@ -184,6 +186,7 @@ class _Reading:
             title=head.title,
             purpose=head.purpose,
             citation=head.citation,
+            numerics=head.numerics,
             signals=signals,
             conditions=conditions,
             chains=chains,

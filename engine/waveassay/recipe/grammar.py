@@ -14,7 +14,9 @@ from waveassay.recipe.model import (
     Anchor,
     Citation,
     ConditionRule,
+    Numerics,
     Place,
+    Precision,
     RecipeName,
     SignalRule,
 )
@@ -38,6 +40,15 @@ class Head(BaseModel):
     citation: Citation | None = Field(
         default=None, description="Where the method was published: {text: ..., doi: ...}."
     )
+    precision: Precision = Field(
+        default="standard", description=Numerics.model_fields["precision"].description
+    )
+
+    @property
+    def numerics(self) -> Numerics:
+        """How numbers are held; it still knows what the recipe left unsaid."""
+        said = self.model_fields_set & set(Numerics.model_fields)
+        return Numerics.model_validate({name: getattr(self, name) for name in said})
 
 
 SECTIONS = {

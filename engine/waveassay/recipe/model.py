@@ -11,7 +11,7 @@ from waveassay.contract import Kind, Params, Seconds, Stage
 NAME_PATTERN = r"^[a-z][a-z0-9_]*$"
 Name = Annotated[str, Field(pattern=NAME_PATTERN)]
 RecipeName = Annotated[str, Field(pattern=r"^[a-z0-9][a-z0-9-]*$")]
-
+Precision = Literal["standard", "double"]
 
 #: Columns that every table of epochs or averages has; no feature may take their names.
 TABLE_COLUMNS = frozenset(
@@ -24,6 +24,16 @@ TABLE_COLUMNS = frozenset(
 
 class _Part(BaseModel):
     model_config = ConfigDict(frozen=True, extra="forbid", strict=True, allow_inf_nan=False)
+
+
+class Numerics(_Part):
+    """How numbers are held on their way through all chains."""
+
+    precision: Precision = Field(
+        default="standard",
+        description="standard: filters, sums and features in float64; the samples that epochs "
+        "take behind a high-pass, and their spectra, in float32. double: everything in float64.",
+    )
 
 
 class SignalRule(_Part):
@@ -152,6 +162,7 @@ class Recipe:
     Attributes
     ----------
     text : the file as given.
+    numerics : how numbers are held; the same for all chains.
     digest : of the canonical form; what can change a number changes it, and nothing else does.
     """
 
@@ -162,11 +173,17 @@ class Recipe:
     title: str
     purpose: str
     citation: Citation | None
+    numerics: Numerics
     signals: Mapping[str, SignalRule]
     conditions: Mapping[str, ConditionRule]
     chains: Mapping[str, Chain]
     origins: Mapping[str, Origin]
     digest: str
+
+    @property
+    def precision(self) -> Precision:
+        """In which precision samples are handed to epochs, and spectra held."""
+        return self.numerics.precision
 
     @property
     def truncated(self) -> Literal["refuse", "read"]:

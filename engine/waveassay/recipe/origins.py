@@ -8,10 +8,13 @@ import yaml
 from pydantic import BaseModel
 
 from waveassay.recipe.fields import Loc, leaves, plain
-from waveassay.recipe.model import ConditionRule, Origin, Place, SignalRule, Step
+from waveassay.recipe.model import ConditionRule, Numerics, Origin, Place, SignalRule, Step
 from waveassay.recipe.plain_words import validated
 from waveassay.recipe.problems import Problem, Report, nearest
 from waveassay.recipe.yaml_nodes import entries, place_of, places_below, value_of
+
+#: What stands before a parameter that holds for all chains, in an address.
+RECIPE = "recipe"
 
 
 @dataclass(frozen=True)
@@ -23,12 +26,16 @@ class Addressed:
 
 
 def all_addressed(
+    numerics: Numerics | None,
     chains: Mapping[str, Sequence[Step | None]],
     signals: Mapping[str, SignalRule | None],
     conditions: Mapping[str, ConditionRule | None],
 ) -> dict[str, Addressed]:
-    """Return everything whose parameters an origin may name, by ``chain.step``."""
-    found: dict[str, Addressed] = {}
+    """Return everything whose parameters an origin may name, by ``chain.step``.
+
+    Where ``numerics`` is None, their values are at fault.
+    """
+    found = {RECIPE: Addressed(RECIPE, numerics)}
     for chain, steps in chains.items():
         for step in steps:
             if step is not None:
@@ -42,8 +49,13 @@ def all_addressed(
 
 
 def split_address(address: str, steps: Mapping[str, Addressed]) -> tuple[str, str] | None:
-    """Return the step and the dotted parameter of an address; the longest step that fits."""
+    """Return the step and the dotted parameter of an address; the longest step that fits.
+
+    What holds for all chains has one name, so that a chain may be called as it is.
+    """
     fitting = [name for name in steps if address.startswith(f"{name}.")]
+    if RECIPE in fitting and address.count(".") > 1:
+        fitting.remove(RECIPE)
     if not fitting:
         return None
     step = max(fitting, key=len)

@@ -139,7 +139,7 @@ class Recording:
         groups = groups_of(
             records.header, [i for i, (first, stop) in spans.items() if stop > first]
         )
-        found = {i: np.empty(0) for i in spans}
+        found: dict[int, Floats] = {i: np.empty(0) for i in spans}
         if not groups:
             return found
         first_record = min(spans[g.signals[0]][0] // g.samples for g in groups)
