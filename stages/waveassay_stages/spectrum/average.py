@@ -100,6 +100,7 @@ def average(density: Floats, dof: float, params: AverageParams) -> Floats:
     extension to any nu is by order statistics. M. S. Bartlett, D. G. Kendall, Suppl. J. R. Stat.
     Soc. 8(1), 128-138, 1946, for logarithms.
     """
+    density = np.asarray(density, np.float64)  # sums and logarithms, whatever the estimates are in
     count = density.shape[0]
     corrected = params.of == "median" and params.median_bias == "corrected"
     if params.over == "power":

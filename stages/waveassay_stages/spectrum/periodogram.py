@@ -68,9 +68,9 @@ def periodogram(
     rate = _density.as_rate(rate_hz)
     samples = x.shape[-1]
     n_fft = _density.transform_length(samples, zero_padding)
-    taper = _density.scaled(window(window_name, samples), rate)
+    taper = _density.scaled(window(window_name, samples), rate)[None]
     freq_hz = _density.bin_centres_hz(rate, n_fft)
-    return freq_hz, _density.density(x, (taper,), n_fft, detrend, places)
+    return freq_hz, _density.density(x, taper, n_fft, detrend, places)
 
 
 def resolution_hz(window_name: WindowName, samples: int, rate_hz: Fraction) -> float:

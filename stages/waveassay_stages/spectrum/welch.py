@@ -152,20 +152,29 @@ def _of_rows(
     n_fft = _density.transform_length(segment, zero_padding)
     freq_hz = _density.bin_centres_hz(rate_hz, n_fft)
     if first.size == 0:
-        return freq_hz, np.empty((0, freq_hz.size))
+        return freq_hz, np.empty((0, freq_hz.size), _density.precision_of(x))
     inside = np.array(segment_starts(samples, segment, overlap), np.int64)
-    starts, place = np.unique(first[:, None] + inside, return_inverse=True)
-    place = place.reshape(first.size, inside.size)
-    taper = _density.scaled(window(window_name, segment), rate_hz)
-    each = _density.density(_density.sliding(x, segment), (taper,), n_fft, detrend, starts)
+    asked = inside[:, None] + first
+    starts = _distinct(asked)
+    taper = _density.scaled(window(window_name, segment), rate_hz)[None]
+    each = _density.density(_density.sliding(x, segment), taper, n_fft, detrend, starts)
+    places = np.searchsorted(starts, asked)
     if average == "median":
         bias, _ = exponential_median(inside.size)
-        return freq_hz, np.median(each[place], axis=1) / bias
-    total = each[place[:, 0]]
-    for s in range(1, inside.size):  # in the order of time, whatever the number of rows
-        total += each[place[:, s]]
+        return freq_hz, np.median(each[places], axis=0) / bias
+    total = each[places[0]]
+    for further in places[1:]:  # in the order of time, whatever the number of rows
+        total += each[further]
     total /= inside.size
     return freq_hz, total
+
+
+def _distinct(places: Ints) -> Ints:
+    """Return the places without repetition, rising."""
+    rising = np.sort(places, axis=None)
+    new = np.ones(rising.size, np.bool_)
+    np.not_equal(rising[1:], rising[:-1], out=new[1:])
+    return rising[new]
 
 
 @lru_cache(maxsize=64)
