@@ -37,6 +37,7 @@ FEWEST_SAMPLES = 8
 BLOCK_BYTES = 3 << 17
 
 
+@lru_cache(maxsize=64)
 def samples_in(length_s: float, rate_hz: Fraction) -> int:
     """Return the nearest whole number of samples in a time."""
     return round(exact(length_s) * rate_hz)
@@ -217,8 +218,9 @@ def as_spectra(
     rows = epochs.rows
     full = kept_density
     if not np.all(rows.kept):
-        full = np.full((len(rows), freq_hz.size), np.nan, kept_density.dtype)
+        full = np.empty((len(rows), freq_hz.size), kept_density.dtype)
         full[rows.kept] = kept_density
+        full[~rows.kept] = np.nan
     return Spectra(
         signal=epochs.signal.name,
         unit=epochs.signal.unit,

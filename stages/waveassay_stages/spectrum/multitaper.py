@@ -90,6 +90,12 @@ def degrees_of_freedom(weight: Floats) -> float:
     return float(2 / np.sum(weight * weight))
 
 
+@lru_cache(maxsize=32)
+def _dof_of(samples: int, time_bandwidth: Fraction, count: int, weights: Weights) -> float:
+    _, concentrations = slepian_tapers(samples, time_bandwidth, count)
+    return degrees_of_freedom(taper_weights(concentrations, weights))
+
+
 def multitaper(
     x: Floats,
     rate_hz: float | Fraction,
@@ -199,8 +205,7 @@ def run(params: MultitaperParams, epochs: Epochs) -> Spectra:
         zero_padding=params.zero_padding,
         places=epochs.first[epochs.kept],
     )
-    _, concentrations = slepian_tapers(epochs.length, time_bandwidth, count)
-    dof = degrees_of_freedom(taper_weights(concentrations, params.weights))
+    dof = _dof_of(epochs.length, time_bandwidth, count, params.weights)
     return _density.as_spectra(epochs, freq_hz, kept, float(2 * half_bandwidth), dof)
 
 
@@ -212,8 +217,7 @@ def derive(params: MultitaperParams, given: EpochsSpec) -> list[Derived]:
     samples = _density.samples_in(given.length_s, rate_hz)
     time_bandwidth = exact(params.half_bandwidth) * samples / rate_hz
     count = taper_count(time_bandwidth) if params.tapers is None else params.tapers
-    _, concentrations = slepian_tapers(samples, time_bandwidth, count)
-    dof = degrees_of_freedom(taper_weights(concentrations, params.weights))
+    dof = _dof_of(samples, time_bandwidth, count, params.weights)
     return [
         Derived("time-bandwidth product NW", float(time_bandwidth)),
         Derived("tapers", count),

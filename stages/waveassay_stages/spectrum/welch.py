@@ -35,6 +35,8 @@ from waveassay_stages.spectrum._windows import (
     WindowName,
     noise_bandwidth_bins,
     overlap_correlation,
+    resolution_hz,
+    scaled_window,
     window,
 )
 
@@ -64,6 +66,7 @@ class WelchParams(Params):
     zero_padding: _density.ZeroPadding = Field(default="none", description=_density.PADDING_TEXT)
 
 
+@lru_cache(maxsize=64)
 def segment_starts(samples: int, segment: int, overlap: float) -> range:
     """Return where segments start in a row: all that fit, ``segment - floor(overlap)`` apart."""
     hop = segment - floor(exact(overlap) * segment)
@@ -156,7 +159,7 @@ def _of_rows(
     inside = np.array(segment_starts(samples, segment, overlap), np.int64)
     asked = inside[:, None] + first
     starts = _distinct(asked)
-    taper = _density.scaled(window(window_name, segment), rate_hz)[None]
+    taper = scaled_window(window_name, segment, rate_hz)
     each = _density.density(_density.sliding(x, segment), taper, n_fft, detrend, starts)
     places = np.searchsorted(starts, asked)
     if average == "median":
@@ -228,8 +231,7 @@ def spec(params: WelchParams, given: EpochsSpec, findings: Findings) -> SpectraS
     resolution = None
     if rate_hz is not None:
         count = max(1, _density.samples_in(params.segment, rate_hz))
-        w = window(params.window, count)
-        resolution = noise_bandwidth_bins(w) * float(rate_hz / count)
+        resolution = resolution_hz(params.window, count, rate_hz)
         starts = segment_starts(samples, count, params.overlap)
         unused = samples - starts[-1] - count if starts else 0
         if unused:
@@ -259,7 +261,7 @@ def run(params: WelchParams, epochs: Epochs) -> Spectra:
         params.zero_padding,
     )
     dof = degrees_of_freedom(epochs.length, segment, params.overlap, params.window, params.average)
-    resolution = noise_bandwidth_bins(window(params.window, segment)) * float(rate_hz / segment)
+    resolution = resolution_hz(params.window, segment, rate_hz)
     return _density.as_spectra(epochs, freq_hz, kept, resolution, dof)
 
 
@@ -275,7 +277,7 @@ def derive(params: WelchParams, given: EpochsSpec) -> list[Derived]:
     return [
         Derived("segments in an epoch", len(segment_starts(samples, segment, params.overlap))),
         Derived("equivalent noise bandwidth", noise_bandwidth, "bins"),
-        Derived("resolution", noise_bandwidth * float(rate_hz / segment), "Hz"),
+        Derived("resolution", resolution_hz(params.window, segment, rate_hz), "Hz"),
         Derived("degrees of freedom", dof),
     ]
 
