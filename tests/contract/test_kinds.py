@@ -147,6 +147,26 @@ def test_epochs_are_places_and_only_the_kept_are_copied() -> None:
 
 
 @settings(deadline=None)
+@given(
+    st.fractions(0, 10**6, max_denominator=10**9),
+    st.one_of(
+        st.fractions(1, 5000, max_denominator=1000), st.fractions(1, 5000, max_denominator=10**12)
+    ),
+    st.lists(st.integers(0, 10**7), max_size=5),
+)
+def test_rows_start_at_the_float_nearest_to_their_time(
+    start: Fraction, rate: Fraction, places: list[int]
+) -> None:
+    """Whether or not the whole numbers behind it fit a float."""
+    x = np.zeros(8)
+    given_signal = Signal("s", "uV", rate, start, x, Interval(start, start + 8 / rate))
+    count = len(places)
+    first, kept = np.array(sorted(places), np.int64), np.ones(count, np.bool_)
+    rows = Epochs(given_signal, 8, first, ("c",) * count, kept, ("",) * count).rows
+    assert rows.start_s.tolist() == [float(start + k / rate) for k in sorted(places)]
+
+
+@settings(deadline=None)
 @given(TIMES, TIMES)
 def test_epochs_starting_in_an_interval(start: Fraction, stop: Fraction) -> None:
     first = np.arange(0, 150, 7)

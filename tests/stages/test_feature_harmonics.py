@@ -43,13 +43,13 @@ def params(**given: object) -> HarmonicsParams:
 def test_a_planted_series_is_found_to_rounding(fundamental: float, delay: float) -> None:
     wave = pulse_wave(pulse(fundamental, delay_s=delay), RATE, 0.7, 3.0)
     assert wave is not None
-    assert wave.fundamental_hz == pytest.approx(fundamental, abs=1e-7)
-    assert wave.mean == pytest.approx(80.0, abs=1e-5)
-    np.testing.assert_allclose(wave.amplitude[:10], AMPLITUDE, atol=1e-5)
-    np.testing.assert_allclose(wave.amplitude[10:], 0.0, atol=1e-5)
+    assert wave.fundamental_hz == pytest.approx(fundamental, abs=1e-12)
+    assert wave.mean == pytest.approx(80.0, abs=1e-10)
+    np.testing.assert_allclose(wave.amplitude[:10], AMPLITUDE, atol=1e-10)
+    np.testing.assert_allclose(wave.amplitude[10:], 0.0, atol=1e-10)
     turned = PHASE - 360 * np.arange(1, 11) * fundamental * delay
-    np.testing.assert_allclose(wrapped_deg(wave.phase_deg[:10] - turned), 0.0, atol=1e-2)
-    assert wave.explained == pytest.approx(1.0, abs=1e-9)
+    np.testing.assert_allclose(wrapped_deg(wave.phase_deg[:10] - turned), 0.0, atol=1e-6)
+    assert wave.explained == pytest.approx(1.0, abs=1e-12)
 
 
 @settings(deadline=None, max_examples=15)
@@ -129,6 +129,35 @@ def test_the_fit_agrees_with_an_independent_least_squares(
     left = np.sum((x - trend @ trend_only) ** 2)
     assert fit.left == pytest.approx(left, rel=1e-9)
     assert fit.left - fit.gained == pytest.approx(np.sum((x - design @ solution) ** 2), rel=1e-8)
+
+
+@settings(deadline=None, max_examples=25)
+@given(
+    cycles=st.floats(0.008, 0.03),
+    count=st.integers(1, 12),
+    terms=st.integers(1, 9),
+    size=st.sampled_from((600, 601)),
+    seed=st.integers(0, 2**31),
+)
+def test_the_slope_is_that_of_the_gain(
+    cycles: float, count: int, terms: int, size: int, seed: int
+) -> None:
+    """Against differences of the gain, a 1e-3 of a lobe apart, and a half of that."""
+    fitter = EpochFitter(50 + np.random.default_rng(seed).normal(size=size), terms)
+    step = 1e-3 / (count * size)
+    wide, narrow = (
+        (fitter.gain(cycles + h, count) - fitter.gain(cycles - h, count)) / (2 * h)
+        for h in (step, step / 2)
+    )
+    slope = (4 * narrow - wide) / 3  # without what grows as the square of the step
+    largest = fitter.left * 2 * np.pi * count * size
+    assert fitter.slope(cycles, count) == pytest.approx(slope, abs=1e-8 * largest)
+
+
+def test_gains_side_by_side_are_those_of_each() -> None:
+    fitter = EpochFitter(pulse(1.2), 5)
+    cycles = (0.0095, 0.0096, 0.0101)
+    assert fitter.gains(cycles, 7) == [fitter.gain(one, 7) for one in cycles]
 
 
 @given(size=st.integers(1, 30), seed=st.integers(0, 2**31))

@@ -88,11 +88,12 @@ def test_twice_the_amplitude_is_four_times_the_power(name: str) -> None:
     np.testing.assert_array_equal(twice.density, 4 * once.density)
 
 
+@pytest.mark.parametrize("kind", [np.float32, np.float64])
 @pytest.mark.parametrize("name", STAGES)
 def test_rows_do_not_depend_on_each_other_or_on_blocks(
-    name: str, monkeypatch: pytest.MonkeyPatch
+    name: str, kind: type[np.floating[Any]], monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    x = noise(128 * 300)
+    x = noise(128 * 300).astype(kind)
     whole = run(name, epochs_of(x))
     kept = np.random.default_rng(2).random(len(whole.rows)) < 0.4
     some = run(name, epochs_of(x, kept=list(kept)))
@@ -101,8 +102,9 @@ def test_rows_do_not_depend_on_each_other_or_on_blocks(
     assert np.all(np.isnan(some.dof[~kept]))
     one = run(name, epochs_of(x[256 * 7 : 256 * 7 + 512]))
     np.testing.assert_array_equal(one.density[0], whole.density[7])
-    for block in (1, 512 * 3, 10**8):
-        monkeypatch.setattr(_density, "BLOCK_SAMPLES", block)
+    # A part of the tapers of one row, all of them, several rows, all rows.
+    for block in (1, 8192, 100_000, 10**9):
+        monkeypatch.setattr(_density, "BLOCK_BYTES", block)
         np.testing.assert_array_equal(run(name, epochs_of(x)).density, whole.density)
 
 

@@ -12,7 +12,8 @@ from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field, replace
 from enum import StrEnum
 from fractions import Fraction
-from math import ceil
+from functools import cached_property
+from itertools import compress
 from typing import Any
 
 import numpy as np
@@ -22,6 +23,9 @@ from numpy.typing import NDArray
 Floats = NDArray[np.floating[Any]]
 Ints = NDArray[np.int64]
 Bools = NDArray[np.bool_]
+
+# Whole numbers below this are floats, and a quotient of two floats is rounded once.
+_EXACT = 1 << 53
 
 
 class Kind(StrEnum):
@@ -40,6 +44,13 @@ class Kind(StrEnum):
 def _freeze(*arrays: NDArray[Any]) -> None:
     for array in arrays:
         array.flags.writeable = False
+
+
+def _place_of(time_s: Fraction, origin_s: Fraction, rate_hz: Fraction) -> int:
+    """Return ``ceil((time - origin) * rate)`` in whole numbers: `Fraction` reduces at each step."""
+    behind = origin_s.numerator * time_s.denominator - time_s.numerator * origin_s.denominator
+    each = time_s.denominator * origin_s.denominator * rate_hz.denominator
+    return -(behind * rate_hz.numerator // each)
 
 
 @dataclass(frozen=True, order=True)
@@ -129,7 +140,7 @@ class Signal:
 
     def index_at(self, time_s: Fraction) -> int:
         """Return the index of the first sample at or after a time, not clipped to ``x``."""
-        return ceil((time_s - self.start_s) * self.rate_hz)
+        return _place_of(time_s, self.start_s, self.rate_hz)
 
     def with_samples(
         self, x: Floats, *, rate_hz: Fraction | None = None, unit: str | None = None
@@ -199,6 +210,7 @@ class Signal:
         kept = (
             Exclusion(max(start_s, e.start_s), min(stop_s, e.stop_s), e.reason)
             for e in self.excluded
+            if e.start_s < stop_s and start_s < e.stop_s
         )
         return replace(
             self, x=self.x[first:last], start_s=self.time_s(first), excluded=merged(kept)
@@ -279,19 +291,22 @@ class Epochs:
         windows = np.lib.stride_tricks.sliding_window_view(self.signal.x, self.length)
         return windows[self.first[self.kept]]
 
-    @property
+    @cached_property
     def rows(self) -> Rows:
         """What each epoch's row says of it."""
-        signal = self.signal
+        signal, count = self.signal, len(self)
         # Exact integers over one denominator, rounded once: a Fraction an epoch is far slower.
         start, rate = signal.start_s, signal.rate_hz
-        first = start.numerator * rate.numerator
+        begin = start.numerator * rate.numerator
         each = start.denominator * rate.denominator
         whole = start.denominator * rate.numerator
-        starts = [(first + index * each) / whole for index in self.first.tolist()]
-        count = len(self)
+        last = int(np.max(np.abs(self.first), initial=0))
+        if max(abs(begin) + last * each, whole) < _EXACT:  # as floats they are the same numbers
+            starts = (begin + self.first * each) / whole
+        else:
+            starts = np.array([(begin + i * each) / whole for i in self.first.tolist()], np.float64)
         return Rows(
-            start_s=np.array(starts, np.float64),
+            start_s=starts,
             duration_s=np.full(count, float(self.length / signal.rate_hz)),
             condition=self.condition,
             kept=self.kept,
@@ -303,13 +318,15 @@ class Epochs:
         """Return the epochs that start at or after ``start_s`` and before ``stop_s``."""
         low, high = self.signal.index_at(start_s), self.signal.index_at(stop_s)
         inside = (self.first >= low) & (self.first < high)
-        places = np.flatnonzero(inside)
+        if np.all(inside):
+            return self
+        chosen = inside.tolist()
         return replace(
             self,
             first=self.first[inside],
-            condition=tuple(self.condition[i] for i in places),
+            condition=tuple(compress(self.condition, chosen)),
             kept=self.kept[inside],
-            reason=tuple(self.reason[i] for i in places),
+            reason=tuple(compress(self.reason, chosen)),
         )
 
 

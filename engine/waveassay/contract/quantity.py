@@ -104,6 +104,7 @@ def require_known_unit(text: str) -> None:
         raise UnitError(f"'{text}' is not a known unit") from None
 
 
+@lru_cache(maxsize=1024)
 def exact(value: float) -> Fraction:
     """Return the decimal that a person wrote: ``exact(0.1)`` is 1/10, not the nearest double."""
     return Fraction(repr(float(value)))

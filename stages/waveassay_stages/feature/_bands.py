@@ -1,5 +1,6 @@
 """Where a band begins and ends on a grid of bins, and how power is summed over it."""
 
+from functools import lru_cache
 from math import ceil, floor
 from typing import Literal
 
@@ -128,13 +129,30 @@ def _simpson_weights(count: int) -> Floats:
     return weights
 
 
-def band_integrals(density: Floats, weights: Floats) -> Floats:
-    """Return the weighted sum over the bins of each row, shape (rows,)."""
+@lru_cache(maxsize=256)
+def _bins_and_weights(
+    freq_hz: bytes, low_hz: float, high_hz: float, rule: Rule, edges: Edges
+) -> tuple[slice, Floats]:
+    """Return the bins that count, and their weights, on bins given as the bytes of float64."""
+    weights = band_weights(np.frombuffer(freq_hz), low_hz, high_hz, rule, edges)
     used = np.flatnonzero(weights)
-    if used.size == 0:
+    span = slice(int(used[0]), int(used[-1]) + 1) if used.size else slice(0, 0)
+    inside = weights[span]
+    inside.flags.writeable = False
+    return span, inside
+
+
+def band_integrals(
+    freq_hz: Floats, density: Floats, low_hz: float, high_hz: float, rule: Rule, edges: Edges
+) -> Floats:
+    """Return the sum over bins of each row by `band_weights`, shape (rows,), in float64.
+
+    NaN where the band holds too few bins for the rule.
+    """
+    span, weights = _bins_and_weights(freq_hz.tobytes(), low_hz, high_hz, rule, edges)
+    if weights.size == 0:
         return np.full(density.shape[0], np.nan)
-    span = slice(int(used[0]), int(used[-1]) + 1)
-    total: Floats = np.sum(density[:, span] * weights[span], axis=-1)
+    total: Floats = np.add.reduce(density[:, span] * weights, axis=-1)
     return total
 
 

@@ -6,6 +6,7 @@ is done epoch by epoch with elementwise operations and sums along rows: an epoch
 neither on its neighbours nor on the number of threads.
 """
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import lru_cache
 from math import pi
@@ -19,6 +20,7 @@ from waveassay.contract import Floats
 OCTAVE_SHARE = 0.9
 _CELLS_A_LOBE = 8
 _HILL_STEPS = 60
+_SECANTS = 12
 _ROUGH, _FINE = 1e-2, 1e-6
 
 
@@ -81,26 +83,40 @@ def _cosine_sum(omega: Floats, size: int) -> Floats:
     return total
 
 
-def _system(omega: Floats, right: Floats, size: int, sign: float) -> Floats:
-    """Return the normal equations of cosines (sign 1) or sines (-1), with their right side."""
-    difference = _cosine_sum(omega[:, None] - omega[None, :], size)
-    total = _cosine_sum(omega[:, None] + omega[None, :], size)
-    return np.concatenate(((difference + sign * total) / 2, right[:, None]), axis=1)
+@lru_cache(maxsize=128)
+def _pairs(count: int) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """Return k - l, without sign, and k + l for all pairs of harmonics."""
+    k = np.arange(1, count + 1, dtype=np.int64)
+    apart, together = np.abs(k[:, None] - k), k[:, None] + k
+    apart.flags.writeable = together.flags.writeable = False
+    return apart, together
+
+
+def eliminated(systems: Floats) -> Floats:
+    """Return positive definite systems, shape (s, m, m + 1), in upper triangular form.
+
+    What stands below the diagonal has no meaning. Elementwise, since a library's solver gives
+    other last bits on another number of threads.
+    """
+    left = systems.copy()
+    for i in range(left.shape[1] - 1):
+        factor = left[:, i + 1 :, i] / left[:, i, i, None]
+        left[:, i + 1 :, i + 1 :] -= factor[:, :, None] * left[:, i, None, i + 1 :]
+    return left
+
+
+def substituted(upper: Floats) -> Floats:
+    """Return the solutions, shape (s, m), of systems that `eliminated` returned."""
+    solution = upper[:, :, -1].copy()
+    for i in range(upper.shape[1] - 1, -1, -1):
+        solution[:, i] /= upper[:, i, i]
+        solution[:, :i] -= upper[:, :i, i] * solution[:, i, None]
+    return solution
 
 
 def solved(systems: Floats) -> Floats:
-    """Solve positive definite systems, shape (s, m, m + 1), by elimination; shape (s, m).
-
-    Elementwise, since a library's solver gives other last bits on another number of threads.
-    """
-    left = systems.copy()
-    for i in range(left.shape[1]):
-        left[:, i, i:] /= left[:, i, i, None]
-        factor = left[:, :, i].copy()
-        factor[:, i] = 0.0
-        left[:, :, i:] -= factor[:, :, None] * left[:, i, None, i:]
-    solution: Floats = left[:, :, -1]
-    return solution
+    """Solve positive definite systems, shape (s, m, m + 1); shape (s, m)."""
+    return substituted(eliminated(systems))
 
 
 class EpochFitter:
@@ -119,14 +135,17 @@ class EpochFitter:
         # Cosines meet only the even part of the epoch about its middle, sines only the odd part.
         later, earlier = self.x[x.size // 2 :], self.x[::-1][x.size // 2 :]
         self.folded_even, self.folded_odd = later + earlier, later - earlier
-        if x.size % 2:
-            self.folded_even[0] /= 2  # the middle sample is its own mirror image
+        self.doubled = np.full(later.size, 2.0)
+        if x.size % 2:  # the middle sample is its own mirror image
+            self.folded_even[0] /= 2
+            self.doubled[0] = 1.0
         self.omega, even, odd = _trend_basis(x.size, terms)
         self.even = np.sum(even * self.x, axis=-1)
         self.odd = np.sum(odd * self.x, axis=-1)
         # The trend's cosines are orthogonal: n for the constant, n/2 for the others.
         norm = np.full(self.even.size, self.size / 2)
         norm[0] = self.size
+        self.norm = norm
         self.by_trend = float(np.sum(self.even**2 / norm) + np.sum(self.odd**2) * 2 / self.size)
         self.left = max(0.0, float(np.sum(self.x**2)) - self.by_trend)
         self.without_trend = (
@@ -135,37 +154,102 @@ class EpochFitter:
             - np.sum(odd * (self.odd * 2 / self.size)[:, None], axis=0)
         )
 
+    def _systems(self, harmonic: NDArray[np.complex128], cycles: float) -> tuple[Floats, Floats]:
+        """Return the normal equations of cosines and of sines, the trend taken out of both.
+
+        Shape (2, count, count + 1); and what the even trend shares with the cosines. A trend's
+        own equations are diagonal, so that it is eliminated at once.
+        """
+        base, count = 2 * pi * cycles, harmonic.shape[0]
+        systems = np.empty((2, count, count + 1))
+        np.add.reduce(harmonic.real * self.folded_even, axis=-1, out=systems[0, :, -1])
+        np.add.reduce(harmonic.imag * self.folded_odd, axis=-1, out=systems[1, :, -1])
+        kernel = _cosine_sum(base * np.arange(2 * count + 1), self.size)
+        apart, together = (kernel[pairs] for pairs in _pairs(count))
+        systems[0, :, :-1] = (apart + together) / 2
+        systems[1, :, :-1] = (apart - together) / 2
+        omega, trend = base * np.arange(1, count + 1), self.omega[:, None]
+        difference = _cosine_sum(trend - omega, self.size)
+        total = _cosine_sum(trend + omega, self.size)
+        even, odd = (difference + total)[0::2] / 2, (difference - total)[1::2] / 2
+        for system, shared, right, norm in (
+            (systems[0], even, self.even, self.norm),
+            (systems[1], odd, self.odd, np.full(self.odd.size, self.size / 2)),
+        ):
+            whole = np.concatenate((shared, right[:, None]), axis=1)
+            for j in range(norm.size):
+                system -= shared[j][:, None] * (whole[j] / norm[j])
+        return systems, even
+
     def fit(self, cycles: float, count: int) -> HarmonicFit:
         """Fit ``count`` harmonics of a fundamental in cycles a sample, with the trend."""
-        base = 2 * pi * cycles
-        harmonic = _harmonics(base * _time(self.size)[self.size // 2 :], count)
-        cosine = np.sum(harmonic.real * self.folded_even, axis=-1)
-        sine = np.sum(harmonic.imag * self.folded_odd, axis=-1)
-        omega = base * np.arange(1, count + 1)
-        even_right = np.concatenate((self.even, cosine))
-        odd_right = np.concatenate((self.odd, sine))
-        even_system = _system(np.concatenate((self.omega[0::2], omega)), even_right, self.size, 1.0)
-        odd_system = _system(np.concatenate((self.omega[1::2], omega)), odd_right, self.size, -1.0)
-        # The odd system is one smaller or equal: an equation of its own, 1 x = 0, fills it up.
-        both = np.zeros((2, *even_system.shape))
-        both[:, np.arange(len(even_right)), np.arange(len(even_right))] = 1.0
-        short = len(even_right) - len(odd_right)
-        both[0] = even_system
-        both[1, short:, short:] = odd_system
-        even, odd = solved(both)
-        odd = odd[short:]
-        explained = float(np.sum(even * even_right) + np.sum(odd * odd_right))
+        systems, shared = self._systems(self._turned(cycles, count), cycles)
+        upper = eliminated(systems)
+        cosine, sine = substituted(upper)
+        constant = float(self.even[0] - np.sum(shared[0] * cosine)) / self.size
         return HarmonicFit(
-            mean=self.plain_mean + float(even[0]),
-            cosine=even[self.even.size :],
-            sine=odd[self.odd.size :],
-            gained=max(0.0, explained - self.by_trend),
+            mean=self.plain_mean + constant,
+            cosine=cosine,
+            sine=sine,
+            gained=_explained(upper),
             left=self.left,
         )
 
     def gain(self, cycles: float, count: int) -> float:
         """Return the sum of squares that harmonics explain beyond the trend."""
-        return self.fit(cycles, count).gained
+        (gain,) = self.gains((cycles,), count)
+        return gain
+
+    def gains(self, cycles: Sequence[float], count: int) -> list[float]:
+        """Return the gains at several fundamentals, whose systems are solved side by side."""
+        each = [self._systems(self._turned(one, count), one)[0] for one in cycles]
+        upper = eliminated(np.concatenate(each))
+        return [_explained(upper[2 * i : 2 * i + 2]) for i in range(len(each))]
+
+    def slope(self, cycles: float, count: int) -> float:
+        r"""Return how the gain changes with the fundamental, per cycle a sample.
+
+        .. math::
+
+            \frac{dG}{d\omega} = 2 \sum_t e_t\, t
+                \sum_k k\,(b_k \cos k \omega t - a_k \sin k \omega t)
+
+        with a, b the coefficients and e what the fit leaves. That is orthogonal to all that is
+        fitted, so that it does not count how the coefficients change.
+        """
+        harmonic = self._turned(cycles, count)
+        systems, _ = self._systems(harmonic, cycles)
+        cosine, sine = substituted(eliminated(systems))
+        a, b = cosine[:, None], sine[:, None]
+        left_even, left_odd = self._without_trend(
+            self.folded_even - self.doubled * np.add.reduce(a * harmonic.real, axis=0),
+            self.folded_odd - self.doubled * np.add.reduce(b * harmonic.imag, axis=0),
+        )
+        k = np.arange(1, count + 1)[:, None]
+        even = np.add.reduce((-k * a) * harmonic.imag, axis=0)
+        odd = np.add.reduce((k * b) * harmonic.real, axis=0)
+        time = _time(self.size)[self.size // 2 :]
+        return 4 * pi * float(np.sum(time * (left_even * even + left_odd * odd)))
+
+    def _turned(self, cycles: float, count: int) -> NDArray[np.complex128]:
+        """Return the harmonics over the epoch's later half, shape (count, half)."""
+        return _harmonics(2 * pi * cycles * _time(self.size)[self.size // 2 :], count)
+
+    def _without_trend(self, even: Floats, odd: Floats) -> tuple[Floats, Floats]:
+        """Return the even and odd half of an epoch without the trend that fits them best."""
+        middle = self.size // 2
+        _, cosines, sines = _trend_basis(self.size, self.omega.size)
+        for basis, norm in zip(cosines[:, middle:], self.norm, strict=True):
+            even = even - self.doubled * basis * (np.sum(basis * even) / norm)
+        for basis in sines[:, middle:]:
+            odd = odd - self.doubled * basis * (np.sum(basis * odd) * 2 / self.size)
+        return even, odd
+
+
+def _explained(upper: Floats) -> float:
+    """Return the right side times the solution, of systems that `eliminated` returned."""
+    pivots = np.diagonal(upper, axis1=1, axis2=2)
+    return float(np.sum(np.ascontiguousarray(upper[:, :, -1] ** 2 / pivots)))
 
 
 def harmonics_below_nyquist(cycles: float, size: int, at_most: int) -> int:
@@ -230,21 +314,49 @@ def _climb(fitter: EpochFitter, start: float, count: int, precision: float) -> f
 
     ``precision`` is a share of the step, which is an eighth of the hill's width or less.
     """
-    from scipy.optimize import minimize_scalar
-
     step = 1 / (_CELLS_A_LOBE * max(count, 4) * fitter.size)
-    here, height = start, fitter.gain(start, count)
-    left, right = fitter.gain(start - step, count), fitter.gain(start + step, count)
-    stride, ahead = (step, right) if right >= left else (-step, left)
+    here = start
+    left, height, right = fitter.gains((start - step, start, start + step), count)
+    stride, ahead, behind = (step, right, left) if right >= left else (-step, left, right)
     for _ in range(_HILL_STEPS):
         if ahead <= height:
             break
-        here, height = here + stride, ahead
+        here, height, behind = here + stride, ahead, height
         ahead = fitter.gain(here + stride, count)
+    curve = behind - 2 * height + ahead
+    if not curve < 0:
+        return here
+    top = here + stride * (behind - ahead) / curve / 2
+    return _level(fitter, count, (here - step, here + step), top, curve / step**2, precision * step)
+
+
+def _level(
+    fitter: EpochFitter,
+    count: int,
+    within: tuple[float, float],
+    start: float,
+    curvature: float,
+    precision: float,
+) -> float:
+    """Return where the slope is 0, by the secant method; by bracketing where that goes astray."""
+    from scipy.optimize import minimize_scalar
+
+    here, slope = start, fitter.slope(start, count)
+    for _ in range(_SECANTS):
+        ahead = here - slope / curvature
+        if not within[0] <= ahead <= within[1]:
+            break
+        if abs(ahead - here) <= precision:
+            return ahead
+        next_slope = fitter.slope(ahead, count)
+        curvature = (next_slope - slope) / (ahead - here)
+        here, slope = ahead, next_slope
+        if not curvature < 0:
+            break
     found = minimize_scalar(
         lambda cycles: -fitter.gain(cycles, count),
-        bounds=(here - step, here + step),
+        bounds=within,
         method="bounded",
-        options={"xatol": precision * step},
+        options={"xatol": precision},
     )
     return float(found.x)

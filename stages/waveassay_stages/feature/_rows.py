@@ -28,7 +28,7 @@ def missing_reasons(rows: Rows, found: Iterable[tuple[Bools, str]]) -> tuple[str
     """Return one text a row; rows that are not kept have their own reason and get none here."""
     texts = [""] * len(rows)
     for where, text in found:
-        for index in np.flatnonzero(where & rows.kept):
+        for index in (where & rows.kept).nonzero()[0].tolist():
             texts[index] = f"{texts[index]}; {text}" if texts[index] else text
     return tuple(texts)
 

@@ -26,10 +26,10 @@ from waveassay_stages.feature._bands import (
     Edges,
     Rule,
     band_integrals,
-    band_weights,
     check_bins,
 )
 from waveassay_stages.feature._rows import decibels, missing_reasons, of_what, squared
+from waveassay_stages.feature._shared import in_double, shared
 
 BandName = Annotated[str, Field(pattern=r"^[a-z][a-z0-9_]*$")]
 
@@ -107,7 +107,11 @@ def band_power(
     ----------
     I. J. Rampil, Anesthesiology 89, 980-1002, 1998 (power in EEG bands).
     """
-    return band_integrals(density, band_weights(freq_hz, low_hz, high_hz, integration, edges))
+    return shared(
+        density,
+        ("band", freq_hz.tobytes(), low_hz, high_hz, integration, edges),
+        lambda: band_integrals(freq_hz, in_double(density), low_hz, high_hz, integration, edges),
+    )
 
 
 def relative_power(power: Floats, whole: Floats) -> Floats:

@@ -280,7 +280,7 @@ def run(params: HarmonicsParams, epochs: Epochs) -> Features:
     rate_hz = float(epochs.signal.rate_hz)
     columns = {column.part: np.full(len(rows), np.nan) for column in _columns(params, "")}
     flags = {text: np.zeros(len(rows), np.bool_) for text in (ABSENT, WEAK, ABOVE, NOT_REBUILT)}
-    samples = epochs.samples()
+    samples = epochs.samples().astype(np.float64, copy=False)
     for x, row in zip(samples, np.flatnonzero(epochs.kept), strict=True):
         wave = pulse_wave(
             x,
@@ -319,7 +319,7 @@ def run(params: HarmonicsParams, epochs: Epochs) -> Features:
 
 STAGE = Stage(
     name="feature.harmonics",
-    version=1,
+    version=2,
     params=HarmonicsParams,
     takes=(Kind.EPOCHS,),
     gives=Kind.FEATURES,

@@ -1,5 +1,6 @@
 """Frequency below which a stated share of a spectrum's power lies: spectral edge, or median."""
 
+from functools import lru_cache
 from typing import Literal
 
 import numpy as np
@@ -24,6 +25,7 @@ from waveassay.contract import (
 )
 from waveassay_stages.feature._bands import bins_inside, check_bins, spacing
 from waveassay_stages.feature._rows import missing_reasons, of_what
+from waveassay_stages.feature._shared import in_double, shared
 
 # A share that is reached but for rounding is reached: half of ten equal bins is the fifth.
 _ROUNDING = 1e-12
@@ -80,26 +82,18 @@ def cumulative_power(
     -------
     Points, Hz, shape (p,), and power in unit squared, shape (rows, p), rising along a row.
     """
+    density = in_double(density)
+    if integration == "rectangle" and not whole_bins:
+        points, cells, widths = _cells(freq_hz.tobytes(), low_hz, high_hz)
+        return points, _from_zero(density[:, cells] * widths)
     step = spacing(freq_hz)
-    inside = bins_inside(low_hz, high_hz, step, freq_hz.size)
     if whole_bins:
-        points = freq_hz[inside]
-        values = np.ascontiguousarray(density[:, inside])
+        inside = bins_inside(low_hz, high_hz, step, freq_hz.size)
+        points, values = freq_hz[inside], density[:, inside]
         if integration == "rectangle":
             return points, np.cumsum(values * step, axis=-1)
-        areas = (values[:, 1:] + values[:, :-1]) * (step / 2)
-        return points, _from_zero(areas)
+        return points, _from_zero((values[:, 1:] + values[:, :-1]) * (step / 2))
     top = float(freq_hz[-1])
-    if integration == "rectangle":
-        # All of the bin at 0, and all of the highest, belongs to a range that ends on it.
-        low = low_hz if low_hz > 0 else -step / 2
-        high = high_hz if high_hz < top else top + step / 2
-        borders = freq_hz[:-1] + step / 2
-        between = borders[(borders > low) & (borders < high)]
-        points = np.concatenate(([low], between, [high]))
-        cell = np.clip(np.rint((points[1:] + points[:-1]) / (2 * step)), 0, freq_hz.size - 1)
-        areas = density[:, cell.astype(np.int64)] * np.diff(points)
-        return np.clip(points, 0.0, min(high_hz, top)), _from_zero(areas)
     low, high = max(low_hz, 0.0), min(high_hz, top)
     between = freq_hz[(freq_hz > low) & (freq_hz < high)]
     points = np.concatenate(([low], between, [high]))
@@ -111,9 +105,31 @@ def cumulative_power(
 
 
 def _from_zero(areas: Floats) -> Floats:
-    total = np.zeros((areas.shape[0], areas.shape[1] + 1))
+    total = np.empty((areas.shape[0], areas.shape[1] + 1))
+    total[:, 0] = 0.0
     np.cumsum(areas, axis=-1, out=total[:, 1:])
     return total
+
+
+@lru_cache(maxsize=64)
+def _cells(freq: bytes, low_hz: float, high_hz: float) -> tuple[Floats, slice, Floats]:
+    """Return the borders between bins in a range, which bins lie between them, and their widths.
+
+    The bins are given as the bytes of float64.
+    """
+    freq_hz = np.frombuffer(freq)
+    step, top = spacing(freq_hz), float(freq_hz[-1])
+    # All of the bin at 0, and all of the highest, belongs to a range that ends on it.
+    low = low_hz if low_hz > 0 else -step / 2
+    high = high_hz if high_hz < top else top + step / 2
+    borders = freq_hz[:-1] + step / 2
+    between = borders[(borders > low) & (borders < high)]
+    points = np.concatenate(([low], between, [high]))
+    first = int(np.clip(np.rint((points[1] + points[0]) / (2 * step)), 0, freq_hz.size - 1))
+    widths, points_hz = np.diff(points), np.clip(points, 0.0, min(high_hz, top))
+    for array in (widths, points_hz):
+        array.flags.writeable = False
+    return points_hz, slice(first, first + widths.size), widths
 
 
 def spectral_edges(
@@ -148,22 +164,25 @@ def spectral_edges(
     ----------
     I. J. Rampil, Anesthesiology 89, 980-1002, 1998.
     """
-    points, power = cumulative_power(
-        freq_hz,
+    whole_bins = interpolation == "bin"
+
+    points, power = shared(
         density,
-        low_hz,
-        high_hz,
-        whole_bins=interpolation == "bin",
-        integration=integration,
+        ("edge", freq_hz.tobytes(), low_hz, high_hz, whole_bins, integration),
+        lambda: cumulative_power(
+            freq_hz, density, low_hz, high_hz, whole_bins=whole_bins, integration=integration
+        ),
     )
     edge = np.full(density.shape[0], np.nan)
     if points.size == 0:
         return edge
     found = np.flatnonzero(power[:, -1] > 0)
-    power = power[found]
+    if found.size < edge.size:
+        power = power[found]
     target = power[:, -1] * fraction
-    reached = np.sum(power < (target * (1 - _ROUNDING))[:, None], axis=-1)
-    if interpolation == "bin":
+    # Power rises along a row: the first point that has the share is the one after all that lack it.
+    reached = np.argmax(power >= (target * (1 - _ROUNDING))[:, None], axis=-1)
+    if whole_bins:
         edge[found] = points[reached]
         return edge
     row = np.arange(found.size)

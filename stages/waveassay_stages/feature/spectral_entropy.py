@@ -23,6 +23,7 @@ from waveassay.contract import (
 )
 from waveassay_stages.feature._bands import bins_inside, check_bins, spacing
 from waveassay_stages.feature._rows import missing_reasons, of_what
+from waveassay_stages.feature._shared import in_double
 
 _SOURCE = "T. Inouye et al., Electroencephalogr. Clin. Neurophysiol. 79, 204-210, 1991"
 
@@ -69,12 +70,18 @@ def spectral_entropy(density: Floats, *, normalised: bool) -> Floats:
     bins = density.shape[1]
     if normalised and bins < 2:
         return entropy
-    total = np.sum(density, axis=-1)
+    total = np.add.reduce(density, axis=-1, dtype=np.float64)
     found = np.flatnonzero(total > 0)
-    share = density[found] / total[found, None]
-    information = np.zeros(share.shape)
-    np.log2(share, out=information, where=share > 0)
-    bits = -np.sum(share * information, axis=-1)
+    if found.size < total.size:
+        density, total = density[found], total[found]
+    share = density / total[:, None]
+    if np.min(share, initial=1.0) > 0:
+        information = np.log2(share)
+    else:
+        information = np.zeros(share.shape)
+        np.log2(share, out=information, where=share > 0)
+    information *= share
+    bits = -np.add.reduce(information, axis=-1)
     # A single line has entropy 0, not -0.
     entropy[found] = np.maximum(bits, 0.0) + 0.0
     if normalised:
@@ -98,7 +105,7 @@ def run(params: SpectralEntropyParams, spectra: Spectra) -> Features:
     """Return the entropy of each row; NaN in rows that are not kept."""
     freq = spectra.freq_hz
     inside = bins_inside(*params.within, spacing(freq), freq.size, params.edges)
-    taken = np.ascontiguousarray(spectra.density[:, inside])
+    taken = np.ascontiguousarray(in_double(spectra.density)[:, inside])
     entropy = spectral_entropy(taken, normalised=params.normalised)
     reasons = missing_reasons(spectra.rows, [(np.isnan(entropy), "no power in within")])
     return Features(spectra.signal, spectra.rows, {"": entropy}, reasons)

@@ -122,7 +122,7 @@ def spectral_peaks(
     rows = np.flatnonzero(np.max(density[:, first:stop], axis=-1) > 0)
     # One bin more on either side, where there is one.
     left, right = max(first - 1, floor), min(stop + 1, freq_hz.size)
-    power = np.ascontiguousarray(density[rows, left:right])
+    power = np.ascontiguousarray(density[rows, left:right], np.float64)
     level = 10 * np.log10(np.maximum(power, np.max(power, axis=-1)[:, None] * _FLOOR))
     span = slice(first - left, stop - left)
     under = _background_db(freq_hz[left:right], level, span, background)

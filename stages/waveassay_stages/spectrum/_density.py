@@ -1,11 +1,15 @@
-"""What the estimators share: detrending, transforms in blocks, one-sided density, specs."""
+"""What the estimators share: detrending, transforms in blocks, one-sided density, specs.
 
-from collections.abc import Sequence
+They work in the precision of the samples: float32 or float64. Trends are taken out in float64
+either way, so that an offset costs no digit.
+"""
+
 from fractions import Fraction
 from functools import lru_cache
-from typing import Literal
+from typing import Any, Literal
 
 import numpy as np
+from numpy.typing import NDArray
 
 from waveassay.contract import (
     Epochs,
@@ -28,11 +32,12 @@ PADDING_TEXT = (
 
 #: Fewer samples make no spectrum worth the name.
 FEWEST_SAMPLES = 8
-#: Samples worked on at once: they fit a processor's cache, and what a transform returns stays
-#: below the 128 KiB from which on memory is fetched from the system anew. No number depends on it.
-BLOCK_SAMPLES = 12288
+#: Bytes that are transformed in one call: with what comes out they fit a processor's cache (1 MB),
+#: and there are few calls. No number depends on it.
+BLOCK_BYTES = 3 << 17
 
 
+@lru_cache(maxsize=64)
 def samples_in(length_s: float, rate_hz: Fraction) -> int:
     """Return the nearest whole number of samples in a time."""
     return round(exact(length_s) * rate_hz)
@@ -81,21 +86,42 @@ def scaled(taper: Floats, rate_hz: Fraction, share: float = 1.0) -> Floats:
     return np.asarray(taper * np.sqrt(2 * share / (float(rate_hz) * energy)), np.float64)
 
 
+def precision_of(x: NDArray[Any]) -> np.dtype[Any]:
+    """Return the type of float in which samples are worked on: their own, float64 for others."""
+    return np.dtype(np.float32 if x.dtype == np.float32 else np.float64)
+
+
 def _remove_trend(x: Floats, how: Detrend) -> None:
     """Take the trend out of each row, in place."""
     if how == "none":
         return
-    x -= np.mean(x, axis=-1, keepdims=True)
+    n = x.shape[-1]
+    x -= np.add.reduce(x, axis=-1, keepdims=True) / x.dtype.type(n)
+    if x.dtype == np.float32:  # a mean that is large is rounded: what it leaves is small
+        x -= np.add.reduce(x, axis=-1, keepdims=True) / x.dtype.type(n)
     if how == "linear":
-        n = x.shape[-1]
         t = np.arange(n) - (n - 1) / 2
         slope = np.sum(x * t, axis=-1, keepdims=True) / (n * (n * n - 1) / 12)
         x -= slope * t
 
 
+def _gather(x: Floats, places: Ints, into: Floats) -> None:
+    """Copy some rows, run by run where most of them stand one step apart."""
+    steps = places[1:] - places[:-1]
+    step = int(steps[0]) if steps.size else 1
+    breaks = np.flatnonzero(steps != step) + 1
+    if step < 1 or 8 * breaks.size > places.size:
+        into[...] = x[places]
+        return
+    first = 0
+    for stop in (*breaks.tolist(), places.size):
+        into[first:stop] = x[places[first] : places[stop - 1] + 1 : step]
+        first = stop
+
+
 def density(
     x: Floats,
-    tapers: Sequence[Floats],
+    tapers: Floats,
     n_fft: int,
     detrend: Detrend,
     places: Ints | None = None,
@@ -110,10 +136,18 @@ def density(
 
     Every row is worked on alone, so neither the other rows nor the block size change a bit of it.
 
+    Samples in float32 give densities in float32, with an error of
+
+    .. math:: |\sqrt{P_{32}} - \sqrt{P_{64}}| < 4 \cdot 10^{-6} \sqrt{\bar P}
+
+    against the same samples in float64, the mean being over all frequencies: a small share of a
+    density, unless it lies far below that mean (which leakage limits anyway, or an epoch happens
+    to have next to nothing at a frequency).
+
     Parameters
     ----------
     x : shape (rows, n), any unit; not written. May be a view.
-    tapers : each of shape (n,).
+    tapers : shape (tapers, n).
     n_fft : N, at least n; zeros make up the difference.
     detrend : what is taken out of each row first.
     places : which rows of x, in this order; all of them where None. With x a sliding view of a
@@ -121,39 +155,60 @@ def density(
     """
     from scipy import fft
 
-    n = x.shape[1]
+    kind = precision_of(x)
+    n, many = x.shape[1], tapers.shape[0]
     rows = x.shape[0] if places is None else places.size
-    out = np.empty((rows, n_fft // 2 + 1))
-    step = max(1, BLOCK_SAMPLES // n_fft)
-    plain = np.empty((step, n))
-    tapered = np.zeros((step, n_fft))
-    total = np.empty((step, 2 * out.shape[1]))
+    out = np.empty((rows, n_fft // 2 + 1), kind)
+    group, step = _block(many, n_fft * out.itemsize)
+    tapers = tapers.astype(kind, copy=False)
+    # A slope times time is rounded by as much as a large drift is large.
+    plain = np.empty((min(step, rows), n), np.float64 if detrend == "linear" else kind)
+    if many == 1 and n == n_fft and plain.dtype == kind:
+        tapered = plain[:, None]
+    else:
+        tapered = np.zeros((min(step, rows), group, n_fft), kind)
     for first in range(0, rows, step):
         stop = min(first + step, rows)
-        count = stop - first
-        part, sums = plain[:count], total[:count]
-        part[...] = x[first:stop] if places is None else x[places[first:stop]]
+        part = plain[: stop - first]
+        if places is None:
+            part[...] = x[first:stop]
+        else:
+            _gather(x, places[first:stop], part)
         _remove_trend(part, detrend)
-        for k, taper in enumerate(tapers):
-            np.multiply(part, taper, out=tapered[:count, :n])
-            parts = fft.rfft(tapered[:count], axis=-1).view(np.float64)
-            if k == 0:
-                np.square(parts, out=sums)
+        ready = part.astype(kind, copy=False)[:, None]
+        total = None
+        for k in range(0, many, group):
+            some = tapered[: stop - first, : min(group, many - k)]
+            np.multiply(ready, tapers[k : k + group], out=some[..., :n])
+            squares = fft.rfft(some, axis=-1).view(kind)
+            np.square(squares, out=squares)
+            if total is None:
+                total = squares[:, 0] if many == 1 else np.add.reduce(squares, axis=1)
             else:
-                np.square(parts, out=parts)
-                sums += parts
-        np.add(sums[:, 0::2], sums[:, 1::2], out=out[first:stop])
+                for j in range(squares.shape[1]):
+                    total += squares[:, j]
+        assert total is not None, "there is a taper"
+        np.add(total[:, 0::2], total[:, 1::2], out=out[first:stop])
     out[:, 0] *= 0.5
     if n_fft % 2 == 0:
         out[:, -1] *= 0.5
     return out
 
 
+def _block(tapers: int, bytes_each: int) -> tuple[int, int]:
+    """Return how many tapers, and how many rows, are transformed in one call."""
+    group = min(tapers, max(1, BLOCK_BYTES // bytes_each))
+    rows = max(1, BLOCK_BYTES // (group * bytes_each))
+    return group, rows - rows % 8 if rows > 8 else rows
+
+
 def sliding(x: Floats, length: int) -> Floats:
     """Return every stretch of ``length`` samples as a row of a view; none where x is shorter."""
     if x.size < length:
-        return np.empty((0, length))
-    return np.lib.stride_tricks.sliding_window_view(x, length)
+        return np.empty((0, length), x.dtype)
+    # What numpy's sliding_window_view gives, which takes as long as a transform of some epochs.
+    x, (step,) = np.ascontiguousarray(x), (x.itemsize,)
+    return np.ndarray((x.size - length + 1, length), x.dtype, x.data, 0, (step, step))
 
 
 def as_spectra(
@@ -163,8 +218,9 @@ def as_spectra(
     rows = epochs.rows
     full = kept_density
     if not np.all(rows.kept):
-        full = np.full((len(rows), freq_hz.size), np.nan)
+        full = np.empty((len(rows), freq_hz.size), kept_density.dtype)
         full[rows.kept] = kept_density
+        full[~rows.kept] = np.nan
     return Spectra(
         signal=epochs.signal.name,
         unit=epochs.signal.unit,

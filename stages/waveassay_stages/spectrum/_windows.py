@@ -1,5 +1,6 @@
 """Windows from their published formulas, and what they do to noise."""
 
+from fractions import Fraction
 from functools import lru_cache
 from math import cos, pi
 from typing import Literal, get_args
@@ -7,6 +8,7 @@ from typing import Literal, get_args
 import numpy as np
 
 from waveassay.contract import Floats
+from waveassay_stages.spectrum._density import scaled
 
 WindowName = Literal[
     "rectangle",
@@ -114,6 +116,20 @@ def window(name: WindowName, length: int) -> Floats:
 def noise_bandwidth_bins(w: Floats) -> float:
     """Return the equivalent noise bandwidth ``N sum(w^2) / sum(w)^2``, in bins of fs / N."""
     return float(w.size * np.sum(w * w) / np.sum(w) ** 2)
+
+
+@lru_cache(maxsize=64)
+def resolution_hz(name: WindowName, length: int, rate_hz: Fraction) -> float:
+    """Return the equivalent noise bandwidth ``ENBW fs / N`` of a window of N samples, Hz."""
+    return noise_bandwidth_bins(window(name, length)) * float(rate_hz / length)
+
+
+@lru_cache(maxsize=64)
+def scaled_window(name: WindowName, length: int, rate_hz: Fraction) -> Floats:
+    """Return a window as the one taper of an estimate, shape (1, N); read-only."""
+    tapers = scaled(window(name, length), rate_hz)[None]
+    tapers.flags.writeable = False
+    return tapers
 
 
 def overlap_correlation(w: Floats, hop: int) -> float:

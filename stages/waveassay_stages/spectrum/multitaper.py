@@ -1,6 +1,7 @@
 """Spectral density of each epoch averaged over Slepian tapers (Thomson's multitaper estimate)."""
 
 from fractions import Fraction
+from functools import lru_cache
 from math import floor
 from typing import Literal
 
@@ -66,6 +67,18 @@ def taper_weights(concentrations: Floats, weights: Weights) -> Floats:
     return plain / np.sum(plain)
 
 
+@lru_cache(maxsize=32)
+def scaled_tapers(
+    samples: int, time_bandwidth: Fraction, count: int, weights: Weights, rate_hz: Fraction
+) -> Floats:
+    """Return the tapers, each scaled for its share of the density, shape (K, N); read-only."""
+    v, concentrations = slepian_tapers(samples, time_bandwidth, count)
+    weight = taper_weights(concentrations, weights)
+    scaled = np.stack([_density.scaled(v[k], rate_hz, float(weight[k])) for k in range(count)])
+    scaled.flags.writeable = False
+    return scaled
+
+
 def degrees_of_freedom(weight: Floats) -> float:
     """Return ``2 / sum(d^2)`` for weights d that sum to 1: 2 K for K equal ones.
 
@@ -75,6 +88,12 @@ def degrees_of_freedom(weight: Floats) -> float:
     if np.all(weight == weight[0]):
         return 2.0 * weight.size  # without the rounding of 1 / K
     return float(2 / np.sum(weight * weight))
+
+
+@lru_cache(maxsize=32)
+def _dof_of(samples: int, time_bandwidth: Fraction, count: int, weights: Weights) -> float:
+    _, concentrations = slepian_tapers(samples, time_bandwidth, count)
+    return degrees_of_freedom(taper_weights(concentrations, weights))
 
 
 def multitaper(
@@ -126,9 +145,7 @@ def multitaper(
     rate, samples = _density.as_rate(rate_hz), x.shape[-1]
     time_bandwidth = _density.as_rate(half_bandwidth_hz) * samples / rate
     count = taper_count(time_bandwidth) if tapers is None else tapers
-    v, concentrations = slepian_tapers(samples, time_bandwidth, count)
-    weight = taper_weights(concentrations, weights)
-    scaled = [_density.scaled(v[k], rate, float(weight[k])) for k in range(count)]
+    scaled = scaled_tapers(samples, time_bandwidth, count, weights, rate)
     n_fft = _density.transform_length(samples, zero_padding)
     freq_hz = _density.bin_centres_hz(rate, n_fft)
     return freq_hz, _density.density(x, scaled, n_fft, detrend, places)
@@ -188,8 +205,7 @@ def run(params: MultitaperParams, epochs: Epochs) -> Spectra:
         zero_padding=params.zero_padding,
         places=epochs.first[epochs.kept],
     )
-    _, concentrations = slepian_tapers(epochs.length, time_bandwidth, count)
-    dof = degrees_of_freedom(taper_weights(concentrations, params.weights))
+    dof = _dof_of(epochs.length, time_bandwidth, count, params.weights)
     return _density.as_spectra(epochs, freq_hz, kept, float(2 * half_bandwidth), dof)
 
 
@@ -201,8 +217,7 @@ def derive(params: MultitaperParams, given: EpochsSpec) -> list[Derived]:
     samples = _density.samples_in(given.length_s, rate_hz)
     time_bandwidth = exact(params.half_bandwidth) * samples / rate_hz
     count = taper_count(time_bandwidth) if params.tapers is None else params.tapers
-    _, concentrations = slepian_tapers(samples, time_bandwidth, count)
-    dof = degrees_of_freedom(taper_weights(concentrations, params.weights))
+    dof = _dof_of(samples, time_bandwidth, count, params.weights)
     return [
         Derived("time-bandwidth product NW", float(time_bandwidth)),
         Derived("tapers", count),

@@ -19,7 +19,13 @@ from waveassay.contract import (
     Stage,
 )
 from waveassay_stages.spectrum import _density
-from waveassay_stages.spectrum._windows import WindowName, noise_bandwidth_bins, window
+from waveassay_stages.spectrum._windows import (
+    WindowName,
+    noise_bandwidth_bins,
+    resolution_hz,
+    scaled_window,
+    window,
+)
 
 
 class PeriodogramParams(Params):
@@ -68,14 +74,9 @@ def periodogram(
     rate = _density.as_rate(rate_hz)
     samples = x.shape[-1]
     n_fft = _density.transform_length(samples, zero_padding)
-    taper = _density.scaled(window(window_name, samples), rate)
+    taper = scaled_window(window_name, samples, rate)
     freq_hz = _density.bin_centres_hz(rate, n_fft)
-    return freq_hz, _density.density(x, (taper,), n_fft, detrend, places)
-
-
-def resolution_hz(window_name: WindowName, samples: int, rate_hz: Fraction) -> float:
-    """Return the equivalent noise bandwidth ``ENBW fs / N`` of a window of N samples, Hz."""
-    return noise_bandwidth_bins(window(window_name, samples)) * float(rate_hz / samples)
+    return freq_hz, _density.density(x, taper, n_fft, detrend, places)
 
 
 def spec(params: PeriodogramParams, given: EpochsSpec, findings: Findings) -> SpectraSpec:

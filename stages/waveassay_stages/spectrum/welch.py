@@ -35,6 +35,8 @@ from waveassay_stages.spectrum._windows import (
     WindowName,
     noise_bandwidth_bins,
     overlap_correlation,
+    resolution_hz,
+    scaled_window,
     window,
 )
 
@@ -64,6 +66,7 @@ class WelchParams(Params):
     zero_padding: _density.ZeroPadding = Field(default="none", description=_density.PADDING_TEXT)
 
 
+@lru_cache(maxsize=64)
 def segment_starts(samples: int, segment: int, overlap: float) -> range:
     """Return where segments start in a row: all that fit, ``segment - floor(overlap)`` apart."""
     hop = segment - floor(exact(overlap) * segment)
@@ -152,20 +155,29 @@ def _of_rows(
     n_fft = _density.transform_length(segment, zero_padding)
     freq_hz = _density.bin_centres_hz(rate_hz, n_fft)
     if first.size == 0:
-        return freq_hz, np.empty((0, freq_hz.size))
+        return freq_hz, np.empty((0, freq_hz.size), _density.precision_of(x))
     inside = np.array(segment_starts(samples, segment, overlap), np.int64)
-    starts, place = np.unique(first[:, None] + inside, return_inverse=True)
-    place = place.reshape(first.size, inside.size)
-    taper = _density.scaled(window(window_name, segment), rate_hz)
-    each = _density.density(_density.sliding(x, segment), (taper,), n_fft, detrend, starts)
+    asked = inside[:, None] + first
+    starts = _distinct(asked)
+    taper = scaled_window(window_name, segment, rate_hz)
+    each = _density.density(_density.sliding(x, segment), taper, n_fft, detrend, starts)
+    places = np.searchsorted(starts, asked)
     if average == "median":
         bias, _ = exponential_median(inside.size)
-        return freq_hz, np.median(each[place], axis=1) / bias
-    total = each[place[:, 0]]
-    for s in range(1, inside.size):  # in the order of time, whatever the number of rows
-        total += each[place[:, s]]
+        return freq_hz, np.median(each[places], axis=0) / bias
+    total = each[places[0]]
+    for further in places[1:]:  # in the order of time, whatever the number of rows
+        total += each[further]
     total /= inside.size
     return freq_hz, total
+
+
+def _distinct(places: Ints) -> Ints:
+    """Return the places without repetition, rising."""
+    rising = np.sort(places, axis=None)
+    new = np.ones(rising.size, np.bool_)
+    np.not_equal(rising[1:], rising[:-1], out=new[1:])
+    return rising[new]
 
 
 @lru_cache(maxsize=64)
@@ -219,8 +231,7 @@ def spec(params: WelchParams, given: EpochsSpec, findings: Findings) -> SpectraS
     resolution = None
     if rate_hz is not None:
         count = max(1, _density.samples_in(params.segment, rate_hz))
-        w = window(params.window, count)
-        resolution = noise_bandwidth_bins(w) * float(rate_hz / count)
+        resolution = resolution_hz(params.window, count, rate_hz)
         starts = segment_starts(samples, count, params.overlap)
         unused = samples - starts[-1] - count if starts else 0
         if unused:
@@ -250,7 +261,7 @@ def run(params: WelchParams, epochs: Epochs) -> Spectra:
         params.zero_padding,
     )
     dof = degrees_of_freedom(epochs.length, segment, params.overlap, params.window, params.average)
-    resolution = noise_bandwidth_bins(window(params.window, segment)) * float(rate_hz / segment)
+    resolution = resolution_hz(params.window, segment, rate_hz)
     return _density.as_spectra(epochs, freq_hz, kept, resolution, dof)
 
 
@@ -266,7 +277,7 @@ def derive(params: WelchParams, given: EpochsSpec) -> list[Derived]:
     return [
         Derived("segments in an epoch", len(segment_starts(samples, segment, params.overlap))),
         Derived("equivalent noise bandwidth", noise_bandwidth, "bins"),
-        Derived("resolution", noise_bandwidth * float(rate_hz / segment), "Hz"),
+        Derived("resolution", resolution_hz(params.window, segment, rate_hz), "Hz"),
         Derived("degrees of freedom", dof),
     ]
 
