@@ -236,7 +236,8 @@ def test_a_fold_is_zeros_between_a_gain_and_every_dth_sample(
     expected = np.fft.irfft(np.fft.rfft(kept) * after, n * up // down)
     made = overlap_save.apply(blocks, [fold])
     scale = float(np.max(np.abs(expected)))
-    assert made == pytest.approx(expected, abs=1e-12 * max(1.0, scale))
+    # What is taken in single precision is right to 3e-7 of a gain of 1e-4, in each of D parts.
+    assert made == pytest.approx(expected, abs=1e-12 * max(1.0, scale) + 3e-11 * down * size)
     alone = [overlap_save.apply(blocks[k : k + 1], [fold]) for k in range(3)]
     assert np.concatenate(alone).tobytes() == made.tobytes()
 

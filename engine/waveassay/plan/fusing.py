@@ -6,8 +6,9 @@ of the one before, whose output nothing else uses. Its response is applied in bl
 """
 
 from collections.abc import Iterable, Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from fractions import Fraction
+from functools import cached_property
 from math import ceil
 
 from waveassay.contract import SignalSpec, Spec
@@ -15,14 +16,10 @@ from waveassay.plan.blocks import BlockGrid
 from waveassay.plan.program import Level, Move, Program
 
 #: Enters the key of what is made: goes up when the way it is carried out can change a number.
-FORM = "overlap-save 1"
+FORM = "overlap-save 2"
 #: No block has more samples, nor four times as many at the rate at which the kernel between two
 #: rates stands: beyond, the steps one after another cost less, or need less memory.
 LARGEST_BLOCK = 1 << 21
-#: What a block may read for each step it spares, s: beyond, the steps cost less (measured).
-WORTH_S = Fraction(300)
-#: How many filters a change of rate costs as much as.
-CHANGE_WORTH = 4
 
 NO_RESPONSE = "declares no response"
 
@@ -52,6 +49,17 @@ class Unit:
     def index(self) -> int:
         """Index of the step whose output it gives."""
         return self.moves[-1].index
+
+    @cached_property
+    def identity(self) -> tuple[str, ...]:
+        """Its steps, their parameters and what they take, but for the signal's name."""
+        known: list[str] = [f"{self.before} {self.after}"]
+        for move in self.moves:
+            stage, given = move.step.stage, move.spec_in
+            assert isinstance(given, SignalSpec), "a fused step takes a signal"
+            known += [f"{stage.name} {stage.version}", move.step.params.model_dump_json()]
+            known.append(repr(replace(given, name="")))
+        return tuple(known)
 
 
 def units_of(program: Program, pass_no: int) -> tuple[Unit, ...]:
@@ -138,18 +146,17 @@ def why_not(moves: Sequence[Move], reach: int, step_s: Fraction) -> str | None:
     changing = sum(_rate_hz(move.spec_in) != _rate_hz(move.spec_out) for move in moves)
     if len(moves) == 1 and not changing:
         return "only one step"
-    length_s = BlockGrid(step_s).reads(reach) * step_s
+    length_s = BlockGrid(step_s).reaching(reach).reads(reach) * step_s
     for move in moves:
         rate_hz = _rate_hz(move.spec_in)
         if rate_hz is None:
             return None  # the rest is known once there is a recording
         samples = length_s * rate_hz
-        longest_s = WORTH_S * (len(moves) + (CHANGE_WORTH - 1) * changing)
-        told = f"with a reach of {float(reach * step_s):.4g} s a block would take "
-        if length_s > longest_s:
-            return f"{told}{float(length_s):.4g} s, and cost more than the steps one by one"
         if samples > LARGEST_BLOCK:
-            return f"{told}{int(samples)} samples, more than {LARGEST_BLOCK}"
+            return (
+                f"with a reach of {float(reach * step_s):.4g} s a block would take {int(samples)} "
+                f"samples, more than {LARGEST_BLOCK}"
+            )
         ratio = ratio_of(move)
         if samples * ratio.numerator > 4 * LARGEST_BLOCK:
             return f"the ratio {ratio} makes a kernel too large for a block"
@@ -192,15 +199,24 @@ def _told(program: Program, unit: Unit, units: Iterable[Unit]) -> Iterator[Told]
     if not unit.fused:
         text, reasons = "by its own function", [*reasons, *_why_alone(program, unit.moves[0])]
     elif len(names) > 1:
-        text = f"fused, as one response: {' + '.join(names)}"
+        text = f"fused, as one response: {' + '.join(names)}{_in_blocks(program, unit)}"
     else:
-        text = "by its response, alone"
+        text = f"by its response, alone{_in_blocks(program, unit)}"
     if _responds(unit.moves[0]):
         reasons.extend(_ends(program, unit, units))
     if reasons:
         text += f" ({'; '.join(dict.fromkeys(reasons))})"
     for name in names:
         yield Told(name, text)
+
+
+def _in_blocks(program: Program, unit: Unit) -> str:
+    if _rate_hz(unit.moves[0].spec_in) is None:
+        return ""  # its reach is not known
+    step_s, reach = _step_s(program), unit.before + unit.after
+    grid = BlockGrid(step_s).reaching(reach)
+    reads_s = float(grid.reads(reach) * step_s)
+    return f", in blocks of {float(grid.length_s):g} s, each from {reads_s:.4g} s"
 
 
 def _why_alone(program: Program, move: Move) -> Iterator[str]:

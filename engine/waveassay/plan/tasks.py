@@ -15,7 +15,7 @@ from fractions import Fraction
 from typing import Any, Literal
 
 from waveassay.contract.digests import digest
-from waveassay.plan.blocks import BLOCK_S, MARGIN_S
+from waveassay.plan.blocks import MARGIN
 from waveassay.plan.fusing import FORM
 from waveassay.plan.passage import Lane, Passage
 from waveassay.plan.program import Level, Move
@@ -265,9 +265,10 @@ def _lane(lane: Lane, action: Action, pass_no: int) -> dict[str, Any]:
         known["steps"] = [_step(move) for move in lane.program.samples_moves(pass_no)]
         known["kept"] = lane.program.kept_signals(pass_no)
         if pass_no < len(lane.forms):
+            form = lane.forms[pass_no]
             known["fused"] = [
-                [FORM, [move.index for move in unit.moves], BLOCK_S, MARGIN_S]
-                for unit in lane.forms[pass_no].units
+                [FORM, [move.index for move in unit.moves], form.grid(unit).length_s, MARGIN]
+                for unit in form.units
                 if unit.fused
             ]
     elif action == "rows":

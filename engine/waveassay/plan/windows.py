@@ -39,8 +39,12 @@ class Form:
 
     @cached_property
     def blocks(self) -> BlockGrid:
-        """The grid of blocks of its fused groups."""
+        """The grid on which the blocks of its fused groups lie."""
         return BlockGrid(self.step_s)
+
+    def grid(self, unit: Unit) -> BlockGrid:
+        """Return the blocks of a fused group."""
+        return self.blocks.reaching(unit.before + unit.after)
 
     def own(self, piece: Interval, start_s: Fraction, stop_s: Fraction) -> Span:
         """Return the span from start to stop."""
@@ -78,11 +82,12 @@ class Form:
         """Return what a unit needs of its input to give a span of its output."""
         low, high = span[0] - unit.before, span[1] + unit.after
         if unit.fused:
-            reach, margin = unit.before + unit.after, self.blocks.margin
-            blocks = self.blocks.covering(span, own)
-            first = self.blocks.border(blocks[0]) - margin - unit.before
-            last = self.blocks.border(blocks[-1]) - margin - unit.before
-            low, high = min(low, first), max(high, last + self.blocks.reads(reach))
+            reach = unit.before + unit.after
+            grid = self.grid(unit)
+            blocks = grid.covering(span, own)
+            first = grid.border(blocks[0]) - grid.margin - unit.before
+            last = grid.border(blocks[-1]) - grid.margin - unit.before
+            low, high = min(low, first), max(high, last + grid.reads(reach))
             # Near an end of the piece the plain functions are run on that end, always the same.
             if span[0] < unit.before:
                 low, high = 0, max(high, reach)
