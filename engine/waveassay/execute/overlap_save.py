@@ -197,7 +197,7 @@ def apply(blocks: Floats, folds: Sequence[Fold]) -> Floats:
     """Return blocks of output; input of shape (blocks, n), zeros where there is none."""
     from scipy import fft
 
-    bins = fft.rfft(blocks, axis=-1)
+    bins: Complex = fft.rfft(blocks, axis=-1)
     for fold in folds:
         bins = fold(bins)
     return np.asarray(fft.irfft(bins, n=folds[-1].length_out, axis=-1), np.float64)
