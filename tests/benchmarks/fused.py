@@ -82,19 +82,21 @@ def _compare(case: Case, hours: float, channels: int, rounds: int) -> dict[str, 
     program = program_of(case.steps, case.rate_hz)
     signals = [_signal(hours, case.rate_hz, seed) for seed in range(channels)]
     samples = sum(signal.x.size for signal in signals)
-    length = min(case.lengths, key=lambda length: _timed(lambda: _bound(case, length, samples)))
-    ways: dict[str, Callable[[], object]] = {
-        "fused": lambda: [_by_stretches(program, signal) for signal in signals],
-        "in turn": lambda: _in_turn(program, signals),
-        "bound": lambda: _bound(case, length, samples),
+    length = min(case.lengths, key=lambda length: _timed_bound(case, length, samples))
+    plain = _one_by_one(program, channels)
+    fused = [Form(program, 0) for _ in signals]  # as in a task, each channel has its own
+    ways: dict[str, Callable[[], float]] = {
+        "fused": lambda: _timed(lambda: _by_stretches(fused, signals)),
+        "in turn": lambda: _timed(lambda: _by_stretches(plain, signals)),
+        "bound": lambda: _timed_bound(case, length, samples),
     }
     times: dict[str, list[float]] = {name: [] for name in ways}
     for _ in range(rounds + 1):
         for name, way in ways.items():
-            times[name].append(_timed(way))
+            times[name].append(way())
     # The first round warms up: designs and gains are made once a process.
     found = {n: 1e3 * statistics.median(v[1:]) / (hours * len(signals)) for n, v in times.items()}
-    made = np.concatenate(_by_stretches(program, signals[0]))
+    made = np.concatenate(_by_stretches(fused[:1], signals[:1]))
     expected = run_plainly(program, signals[0]).x
     ratios = [a / b for a, b in zip(times["fused"][1:], times["bound"][1:], strict=True)]
     return {
@@ -104,19 +106,26 @@ def _compare(case: Case, hours: float, channels: int, rounds: int) -> dict[str, 
     }
 
 
-def _by_stretches(program: Program, signal: Signal) -> list[np.ndarray[Any, Any]]:
-    form, borders = Form(program, 0), borders_s(signal.piece, program, Fraction(600))
-    return [run_by_form(form, signal, *pair).x for pair in pairwise(borders)]
+def _by_stretches(forms: list[Form], signals: list[Signal]) -> list[np.ndarray[Any, Any]]:
+    """Run all channels over a stretch before the next, as tasks do."""
+    borders = borders_s(signals[0].piece, forms[0].program, Fraction(600))
+    return [
+        run_by_form(form, signal, *pair).x
+        for pair in pairwise(borders)
+        for form, signal in zip(forms, signals, strict=True)
+    ]
 
 
-def _in_turn(program: Program, signals: list[Signal]) -> None:
+def _one_by_one(program: Program, channels: int) -> list[Form]:
+    """Return forms in which no step is fused with another."""
     known = fusing.why_not
     fusing.why_not = lambda moves, reach, step_s: "measured one by one"
     try:
-        for signal in signals:
-            _by_stretches(program, signal)
+        forms = [Form(program, 0) for _ in range(channels)]
+        assert all(not unit.fused for form in forms for unit in form.units)
     finally:
         fusing.why_not = known
+    return forms
 
 
 def _timed(way: Callable[[], object]) -> float:
@@ -125,16 +134,22 @@ def _timed(way: Callable[[], object]) -> float:
     return time.process_time() - start
 
 
-def _bound(case: Case, length: int, samples: int) -> None:
+def _timed_bound(case: Case, length: int, samples: int) -> float:
+    """Return how long the transforms of so many samples take, s; of long blocks, a share."""
     from scipy import fft
 
     made = length * NEW_RATE_HZ // case.rate_hz
     blocks = np.zeros((4, length))
     bins = np.zeros((4, made // 2 + 1), np.complex128)
     gained = 4 * (length - 2 * case.kept_s * case.rate_hz)
-    for _ in range(-(-samples // gained)):
-        fft.rfft(blocks, axis=-1)
-        fft.irfft(bins, n=made, axis=-1)
+    times = max(1, round(samples / gained))
+
+    def transform() -> None:
+        for _ in range(times):
+            fft.rfft(blocks, axis=-1)
+            fft.irfft(bins, n=made, axis=-1)
+
+    return _timed(transform) * samples / (times * gained)
 
 
 def _signal(hours: float, rate_hz: int, seed: int) -> Signal:
@@ -149,7 +164,7 @@ def main() -> None:
     """Print what was measured as JSON."""
     given = sys.argv[1:]
     hours = float(given[0]) if given else 2.0
-    channels = int(given[1]) if len(given) > 1 else 1
+    channels = int(given[1]) if len(given) > 1 else 4
     rounds = int(given[2]) if len(given) > 2 else 7
     print(json.dumps(measure(hours, channels, rounds), indent=1))
 

@@ -30,11 +30,13 @@ from waveassay.contract import Floats
 #: Parts of the spectrum whose gain lies below this share everywhere are left out of the sum: of
 #: an input of rms 1, what is left out of D parts has an rms of at most sqrt(D) times this.
 NEGLIGIBLE = 1e-10
-#: Parts whose gain lies below this everywhere are taken in single precision, which is right to
-#: about 3e-7 of what they give: 3e-11 of the input.
+#: Where there are many, parts whose gain lies below this everywhere are taken in single precision,
+#: which is right to about 3e-7 of what they give: 3e-11 of the input.
 LEAKING = 1e-4
 
-# Rows that stand up to so far apart are taken together.
+# So few leaks are not worth another precision.
+_FEW = 6
+# Parts that stand up to so far apart are taken together.
 _NEAR = 3
 
 Gain = NDArray[Any]
@@ -89,20 +91,32 @@ class Fold:
 
     def _heard(self, parts: Sequence[_Part]) -> int:
         """Return how many bins of the input, from 0 Hz, are all that some parts take."""
-        lowest = -self.part * min(0, *(part.first for part in parts))
-        highest = self.part * max(part.first + len(part.gain) for part in parts)
-        return min(self.length_in // 2 + 1, max(lowest + 1, highest))
+        low = -min(0, *(part.first * self.part for part in parts))
+        high = max(self._stop(part) for part in parts)
+        return min(self.length_in // 2 + 1, max(low + 1, high))
+
+    def _stop(self, part: _Part) -> int:
+        """Return the bin of the input after the last that a part takes."""
+        count, size = part.gain.shape
+        return (part.first + count - 1) * self.part + (
+            size if np.iscomplexobj(part.gain) else size // 2
+        )
 
     def _sum(self, bins: Complex, parts: Sequence[_Part]) -> Complex:
         made = np.empty((bins.shape[0], self.length_out // 2 + 1), bins.dtype)
-        lowest = min((part.first for part in parts), default=0)
-        spectrum = self._from(bins, lowest) if lowest < 0 else bins
-        kind, filled = spectrum.real.dtype, 0
+        kind, filled = bins.real.dtype, 0
+        negative = [part for part in parts if part.first < 0]
+        if negative:
+            lowest = self.part * min(part.first for part in negative)
+            from_lowest = self._from(bins, lowest, max(self._stop(part) for part in negative))
         for part in parts:
-            start, low = (part.first - min(0, lowest)) * self.part, part.u * self.part
-            turns = np.iscomplexobj(part.gain)
-            taken, to = (spectrum, made) if turns else (spectrum.view(kind), made.view(kind))
-            wide = 1 if turns else 2
+            start, low = part.first * self.part, part.u * self.part
+            taken, to = bins, made
+            if part.first < 0:
+                start, taken = start - lowest, from_lowest
+            wide = 1 if np.iscomplexobj(part.gain) else 2
+            if wide == 2:
+                taken, to = taken.view(kind), made.view(kind)
             count, size = part.gain.shape
             row, item = taken.strides
             several = np.ndarray(
@@ -122,15 +136,16 @@ class Fold:
         made[:, filled:] = 0
         return made
 
-    def _from(self, bins: Complex, lowest: int) -> Complex:
-        """Return the spectrum from a part of negative frequencies on."""
-        kept, negative = bins.shape[1], -lowest * self.part
-        whole = np.empty((bins.shape[0], negative + kept), bins.dtype)
-        direct = max(0, negative - (self.length_in - self.length_in // 2 - 1))
-        first = self.length_in - negative
+    def _from(self, bins: Complex, lowest: int, stop: int) -> Complex:
+        """Return the spectrum from a negative frequency on: bin -i is conj of bin i."""
+        half, below = self.length_in // 2 + 1, min(0, stop)
+        whole = np.empty((bins.shape[0], stop - lowest), bins.dtype)
+        direct = max(0, 1 - half - lowest)  # beyond the lowest, bins are those from above again
+        first = self.length_in + lowest
         whole[:, :direct] = bins[:, first : first + direct]
-        np.conj(bins[:, negative - direct : 0 : -1], out=whole[:, direct:negative])  # bin -i of i
-        whole[:, negative:] = bins
+        turned = bins[:, -lowest - direct : -below : -1]
+        np.conj(turned, out=whole[:, direct : below - lowest])
+        whole[:, below - lowest :] = bins[:, : stop - below]
         return whole
 
 
@@ -164,7 +179,11 @@ def fold_of(length: int, ratio: Fraction, before: Gain, between: Gain, after: Ga
             rows[j if j * part + bins <= half else j - down] = row
         sizes = {j: float(np.max(np.abs(row))) / float(ratio) for j, row in rows.items()}
         leaking = [j for j in sorted(rows) if NEGLIGIBLE < sizes[j] < LEAKING]
-        parts.extend(_parts(u, rows, [j for j in sorted(rows) if sizes[j] >= LEAKING]))
+        if len(leaking) <= _FEW:
+            leaking = []
+        passing = [j for j in sorted(rows) if sizes[j] > NEGLIGIBLE and j not in leaking]
+        for side in (True, False):
+            parts.extend(_parts(u, rows, [j for j in passing if (j < 0) is side]))
         single = {np.dtype(np.float64): np.float32, np.dtype(np.complex128): np.complex64}
         for found in _parts(u, rows, leaking):
             leaks.append(replace(found, gain=found.gain.astype(single[found.gain.dtype])))
