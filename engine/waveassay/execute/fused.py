@@ -55,17 +55,17 @@ class Filter:
     folds: tuple[Fold, ...]
 
 
-def run_unit(unit: Unit, signal: Signal, blocks: BlockGrid, span: Span, own: Span) -> Signal:
+def run_unit(unit: Unit, signal: Signal, step_s: Fraction, span: Span, own: Span) -> Signal:
     """Return a fused group's output over a span of its piece.
 
     Parameters
     ----------
     signal : the input, over at least what `waveassay.plan.windows` says.
-    blocks : the grid of the pass; the group takes its own length of blocks on it.
+    step_s : the step of the grid of stretches.
     span : what is wanted, in steps of the grid from the start of the piece.
     own : what of it is kept.
     """
-    piece, grid = signal.piece, blocks.reaching(unit.before + unit.after)
+    piece, grid = signal.piece, unit.grid(step_s)
     start_s = piece.start_s + span[0] * grid.step_s
     stop_s = min(piece.stop_s, piece.start_s + span[1] * grid.step_s)
     ready = made_ready(unit, grid)

@@ -5,7 +5,7 @@ where stretches do; which block gives a sample that is kept depends on neither. 
 steps of the grid of stretches.
 """
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from fractions import Fraction
 from functools import cached_property
 from math import ceil
@@ -22,21 +22,22 @@ MARGIN = Fraction(1, 50)
 Span = tuple[int, int]
 
 
+def lengths_s(reach_s: Fraction) -> tuple[Fraction, ...]:
+    """Return lengths of blocks for a group with this reach to both sides in all, the best first.
+
+    Shorter ones cost more, and need less memory.
+    """
+    shorter = [length_s for most_s, length_s in LENGTHS_S if most_s < reach_s]
+    fitting = [length_s for most_s, length_s in LENGTHS_S if reach_s <= most_s]
+    return ((*fitting, LONGEST_S)[0], *reversed(shorter))
+
+
 @dataclass(frozen=True)
 class BlockGrid:
-    """Blocks in steps of ``step_s``: block k begins at the last one at or before k * ``length_s``.
-
-    A group has its own length, see `reaching`.
-    """
+    """Blocks in steps of ``step_s``: block k begins at the last one by k * ``length_s``."""
 
     step_s: Fraction
-    length_s: Fraction = LENGTHS_S[0][1]
-
-    def reaching(self, reach: int) -> "BlockGrid":
-        """Return the grid for a group with this reach to both sides in all."""
-        reach_s = reach * self.step_s
-        lengths_s = [length_s for most_s, length_s in LENGTHS_S if reach_s <= most_s]
-        return replace(self, length_s=lengths_s[0] if lengths_s else LONGEST_S)
+    length_s: Fraction
 
     @cached_property
     def _ratio(self) -> tuple[int, int]:

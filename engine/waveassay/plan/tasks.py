@@ -265,10 +265,9 @@ def _lane(lane: Lane, action: Action, pass_no: int) -> dict[str, Any]:
         known["steps"] = [_step(move) for move in lane.program.samples_moves(pass_no)]
         known["kept"] = lane.program.kept_signals(pass_no)
         if pass_no < len(lane.forms):
-            form = lane.forms[pass_no]
             known["fused"] = [
-                [FORM, [move.index for move in unit.moves], form.grid(unit).length_s, MARGIN]
-                for unit in form.units
+                [FORM, [move.index for move in unit.moves], unit.block_s, MARGIN]
+                for unit in lane.forms[pass_no].units
                 if unit.fused
             ]
     elif action == "rows":

@@ -10,7 +10,7 @@ from functools import cached_property
 from math import ceil
 
 from waveassay.contract import Interval
-from waveassay.plan.blocks import BlockGrid, Span
+from waveassay.plan.blocks import Span
 from waveassay.plan.fusing import Unit, units_of
 from waveassay.plan.program import Program
 
@@ -36,15 +36,6 @@ class Form:
     def kept(self) -> tuple[int, ...]:
         """The steps whose signals are kept."""
         return tuple(self.program.kept_signals(self.pass_no))
-
-    @cached_property
-    def blocks(self) -> BlockGrid:
-        """The grid on which the blocks of its fused groups lie."""
-        return BlockGrid(self.step_s)
-
-    def grid(self, unit: Unit) -> BlockGrid:
-        """Return the blocks of a fused group."""
-        return self.blocks.reaching(unit.before + unit.after)
 
     def own(self, piece: Interval, start_s: Fraction, stop_s: Fraction) -> Span:
         """Return the span from start to stop."""
@@ -83,7 +74,7 @@ class Form:
         low, high = span[0] - unit.before, span[1] + unit.after
         if unit.fused:
             reach = unit.before + unit.after
-            grid = self.grid(unit)
+            grid = unit.grid(self.step_s)
             blocks = grid.covering(span, own)
             first = grid.border(blocks[0]) - grid.margin - unit.before
             last = grid.border(blocks[-1]) - grid.margin - unit.before
