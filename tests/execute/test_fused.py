@@ -296,20 +296,20 @@ def test_many_leaks_are_summed_in_single_precision_and_large_samples_in_double()
     large = blocks * np.array([[1.0], [1e60], [1.0]])
     beside = overlap_save.apply(large, [fold])
     assert beside[::2].tobytes() == made[::2].tobytes()
-    assert beside[1] == pytest.approx(1e60 * expected[1], abs=1e60 * 1e-12)
+    assert beside[1] == pytest.approx(1e60 * expected[1], abs=1e60 * 1e-10)
 
 
-def test_masks_are_made_once_for_signals_alike_but_for_name_and_samples() -> None:
+def test_signals_with_the_same_masks_share_what_becomes_of_them() -> None:
     program = program_of([BAND, DOWN], 256)
     signal = piece_of("256", 400)
     form = Form(program, 0)
     (unit,) = form.units
     whole = form.own(signal.piece, signal.piece.start_s, signal.piece.stop_s)
-    other = replace(signal, name="occipital", x=-signal.x)
+    other = replace(signal, x=-signal.x)
     fewer = replace(signal, excluded=signal.excluded[1:])
     made = [run_unit(unit, s, form.step_s, whole, whole) for s in (signal, other, fewer)]
-    assert made[0].excluded == made[1].excluded != made[2].excluded
-    assert [m.name for m in made] == ["frontal", "occipital", "frontal"]
+    assert made[0].excluded is made[1].excluded
+    assert made[0].excluded != made[2].excluded
     assert np.array_equal(made[1].x, -made[0].x)
     for s, m in zip((signal, other, fewer), made, strict=True):
         assert m.excluded == run_plainly(program, s).excluded

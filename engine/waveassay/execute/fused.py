@@ -80,14 +80,13 @@ def run_unit(unit: Unit, signal: Signal, step_s: Fraction, span: Span, own: Span
         parts.extend(_middle(ready, signal, (max(span[0], head), min(span[1], tail)), own))
     if span[1] > tail:
         parts.append(_tail(unit, ready, signal, (max(span[0], tail), span[1])))
-    made = replace(
+    return replace(
         signal,
-        x=np.concatenate(parts),
+        x=np.concatenate(parts) if parts else np.empty(0),
         rate_hz=Fraction(ready.out_step) / grid.step_s,
         start_s=start_s,
-        excluded=_masks(unit, signal),
+        excluded=_masks(unit, signal, start_s, stop_s),
     )
-    return made.cut(start_s, stop_s)
 
 
 def _plain(moves: Sequence[Move], signal: Signal) -> Signal:
@@ -163,23 +162,29 @@ def _rows(ready: Filter, signal: Signal, firsts: Sequence[int]) -> Floats:
 
 @dataclass(frozen=True)
 class _Masked:
-    """A group, and all of a signal that its masks may depend on: no sample, and no name."""
+    """A group, all of a signal that its masks may depend on (no sample, and no name), and times."""
 
     group: "_Group"
+    start_s: Fraction
+    stop_s: Fraction
     unit: str
     rate_hz: Fraction
-    start_s: Fraction
+    first_s: Fraction
     size: int
     piece: Interval
     excluded: tuple[Exclusion, ...]
     conditions: tuple[Condition, ...]
 
 
-def _masks(unit: Unit, signal: Signal) -> tuple[Exclusion, ...]:
-    """Return the input's masks as the plain functions leave them; alike for signals alike."""
+def _masks(
+    unit: Unit, signal: Signal, start_s: Fraction, stop_s: Fraction
+) -> tuple[Exclusion, ...]:
+    """Return masks from start to stop as the plain functions leave them; made once if alike."""
     return _made_masks(
         _Masked(
             _Group(unit),
+            start_s,
+            stop_s,
             signal.unit,
             signal.rate_hz,
             signal.start_s,
@@ -200,7 +205,7 @@ def _made_masks(given: _Masked) -> tuple[Exclusion, ...]:
         "",
         given.unit,
         given.rate_hz,
-        given.start_s,
+        given.first_s,
         blank(given.size),
         given.piece,
         given.excluded,
@@ -212,7 +217,7 @@ def _made_masks(given: _Masked) -> tuple[Exclusion, ...]:
         if ratio != 1:
             count = -(-signal.x.size * ratio.numerator // ratio.denominator)
             signal = signal.with_samples(blank(count), rate_hz=signal.rate_hz * ratio)
-    return signal.excluded
+    return signal.cut(given.start_s, given.stop_s).excluded
 
 
 class _Group:
