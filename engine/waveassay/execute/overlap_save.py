@@ -35,7 +35,7 @@ NEGLIGIBLE = 1e-10
 #: which is right to about 3e-7 of what they give: 3e-11 of the input.
 LEAKING = 1e-4
 
-_TWOS = 64
+_TWOS = 32
 # So few leaks are not worth another precision.
 _FEW = 6
 # Parts that stand up to so far apart are taken together.
@@ -249,7 +249,7 @@ def support(gain: Gain, length: int, share: float) -> tuple[int, int]:
 def fast_length(least: int, step: int) -> int:
     """Return the smallest number from ``least`` on, of steps whose samples are a fast length.
 
-    Fast is a multiple of 64 without prime factors above 5 but those of ``step``, the samples of a
+    Fast is a multiple of 32 without prime factors above 5 but those of ``step``, the samples of a
     step: without some factors of two a transform takes half as long again (measured).
     """
     best = 0
