@@ -35,7 +35,7 @@ CHAINS = {
     "all": [BAND, NOTCH, DOWN, AMPLITUDE],
     "between": [AMPLITUDE, BAND, AMPLITUDE, DOWN],
     "kept": [f"{BAND}\n      keep: true", NOTCH, DOWN],
-    "slow": ["filter.butterworth: {high_pass: 5 mHz}", NOTCH],
+    "slow": ["filter.butterworth: {high_pass: 1 mHz}", NOTCH],
 }
 
 
@@ -106,4 +106,6 @@ def test_how_epochs_are_given_samples_is_told(tmp_path: Path) -> None:
 
 def test_what_only_the_rate_decides_is_told_with_a_recording(printed: tuple[str, str]) -> None:
     assert "frontal at 256 Hz" in printed[1]
-    assert "cost more than the steps one by one" in lines(printed[1], "slow")["filter.notch"]
+    assert "in blocks of 150 s" in lines(printed[1], "all")["filter.notch"]
+    assert "in blocks" not in lines(printed[0], "all")["filter.notch"]
+    assert "samples, more than" in lines(printed[1], "slow")["filter.notch"]

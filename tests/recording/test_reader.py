@@ -102,6 +102,51 @@ def test_a_part_equals_the_same_part_of_the_whole(
 
 
 @FAST
+@given(layouts(), st.data(), st.sampled_from(BLOCK_SIZES))
+def test_samples_as_stored_are_small_and_become_what_is_read(
+    tmp_path: Path,
+    layout: tuple[list[Sig], int, bool, str],
+    data: st.DataObject,
+    block_bytes: int,
+) -> None:
+    signals, records, bdf, duration = layout
+    path = write(tmp_path, build(signals, records, bdf=bdf, duration=duration))
+    length_s = records * Fraction(duration)
+    moments = st.fractions(-1, 2, max_denominator=1000).map(lambda part: part * length_s)
+    start_s, stop_s = data.draw(moments), data.draw(moments)
+    asked = data.draw(st.lists(st.integers(0, len(signals) - 1), min_size=1, max_size=6))
+    with open_recording(path, block_bytes=block_bytes) as recording:
+        found = recording.read(asked, 0, start_s, stop_s)
+        outside = dict(recording.out_of_range)
+        held = recording.read_digital(asked, 0, start_s, stop_s)
+        assert recording.out_of_range == {index: 2 * number for index, number in outside.items()}
+    assert len(held) == len(asked)
+    for place, x in enumerate(found):
+        assert held.physical(place).tobytes() == x.tobytes()
+        assert held.stored[place].nbytes == (x.nbytes // 2 if bdf else x.nbytes // 4) or not x.size
+
+
+def test_many_signals_are_each_their_own(tmp_path: Path) -> None:
+    """More than are decoded together, of two rates in turn."""
+    signals = [
+        Sig(f"S{number}", 3 if number % 40 < 37 else 2, data=[number] * 6) for number in range(90)
+    ]
+    path = write(tmp_path, build(signals, 2))
+    with open_recording(path) as recording:
+        whole = recording.read(range(90), 0, Fraction(0), Fraction(2))
+        blocks = {
+            index: row.copy()
+            for _, block in recording.blocks()
+            for indices, rows in block
+            for index, row in zip(indices, rows, strict=True)
+        }
+    for number, (signal, x) in enumerate(zip(signals, whole, strict=True)):
+        assert digital(x, signal, bdf=False) == [number] * x.size
+        assert x.size == 2 * int(signal.spr)
+        assert blocks[number].tobytes() == x.tobytes()
+
+
+@FAST
 @given(
     st.lists(st.integers(0, 3), min_size=1, max_size=12),
     st.sampled_from(["1", "0.25", "0.1", "1.5"]),

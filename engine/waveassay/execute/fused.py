@@ -9,17 +9,26 @@ from math import ceil
 from typing import Any
 
 import numpy as np
+from numpy.lib.stride_tricks import sliding_window_view
 from numpy.typing import NDArray
 
-from waveassay.contract import REACH_TOLERANCE, Floats, Signal, SignalSpec
+from waveassay.contract import (
+    REACH_TOLERANCE,
+    Condition,
+    Exclusion,
+    Floats,
+    Interval,
+    Signal,
+    SignalSpec,
+)
 from waveassay.execute.moves import gain_move, mask_move, run_move
 from waveassay.execute.overlap_save import Fold, apply, fast_length, fold_of, support
 from waveassay.plan.blocks import BlockGrid, Span
 from waveassay.plan.fusing import Unit, ratio_of
 from waveassay.plan.program import Move
 
-# Samples in the blocks that are transformed at once: what a core's memory takes.
-_AT_ONCE = 1 << 20
+# Blocks that are transformed at once, which is faster for two than for one: vectors go across rows.
+_AT_ONCE = 4
 
 
 @dataclass(frozen=True)
@@ -29,29 +38,34 @@ class Filter:
     Attributes
     ----------
     before, after : how far the response reaches, in steps of the grid.
+    rest : how far the steps that follow each step look ahead in all, and back, in steps.
     in_step, out_step : samples of input and output in a step of the grid.
+    reads : how much input a block has, in samples; zeros follow.
     length : samples in a block's transform.
     """
 
     grid: BlockGrid
     before: int
     after: int
+    rest: tuple[tuple[int, int], ...]
     in_step: int
     out_step: int
+    reads: int
     length: int
     folds: tuple[Fold, ...]
 
 
-def run_unit(unit: Unit, signal: Signal, grid: BlockGrid, span: Span, own: Span) -> Signal:
+def run_unit(unit: Unit, signal: Signal, step_s: Fraction, span: Span, own: Span) -> Signal:
     """Return a fused group's output over a span of its piece.
 
     Parameters
     ----------
     signal : the input, over at least what `waveassay.plan.windows` says.
+    step_s : the step of the grid of stretches.
     span : what is wanted, in steps of the grid from the start of the piece.
     own : what of it is kept.
     """
-    piece = signal.piece
+    piece, grid = signal.piece, unit.grid(step_s)
     start_s = piece.start_s + span[0] * grid.step_s
     stop_s = min(piece.stop_s, piece.start_s + span[1] * grid.step_s)
     ready = made_ready(unit, grid)
@@ -61,23 +75,18 @@ def run_unit(unit: Unit, signal: Signal, grid: BlockGrid, span: Span, own: Span)
         return _plain(unit.moves, signal).cut(start_s, stop_s)
     parts: list[Floats] = []
     if span[0] < head:
-        stop = piece.start_s + (head + ready.after) * grid.step_s
-        made = _plain(unit.moves, signal.cut(piece.start_s, stop))
-        parts.append(_within(made, grid, span[0], min(span[1], head)))
+        parts.append(_head(unit, ready, signal, (span[0], min(span[1], head))))
     if span[0] < tail and span[1] > head:
         parts.extend(_middle(ready, signal, (max(span[0], head), min(span[1], tail)), own))
     if span[1] > tail:
-        start = piece.start_s + (tail - ready.before) * grid.step_s
-        made = _plain(unit.moves, signal.cut(start, piece.stop_s))
-        parts.append(_within(made, grid, max(span[0], tail), span[1]))
-    masked = _masked(unit.moves, signal)
-    made = replace(
-        masked,
-        x=np.concatenate(parts),
+        parts.append(_tail(unit, ready, signal, (max(span[0], tail), span[1])))
+    return replace(
+        signal,
+        x=np.concatenate(parts) if parts else np.empty(0),
         rate_hz=Fraction(ready.out_step) / grid.step_s,
         start_s=start_s,
+        excluded=_masks(unit, signal, start_s, stop_s),
     )
-    return made.cut(start_s, stop_s)
 
 
 def _plain(moves: Sequence[Move], signal: Signal) -> Signal:
@@ -88,21 +97,28 @@ def _plain(moves: Sequence[Move], signal: Signal) -> Signal:
     return signal
 
 
-def _within(signal: Signal, grid: BlockGrid, low: int, high: int) -> Floats:
-    start_s = signal.piece.start_s
-    return signal.cut(start_s + low * grid.step_s, start_s + high * grid.step_s).x
+def _head(unit: Unit, ready: Filter, signal: Signal, span: Span) -> Floats:
+    """Return the output near the start of the piece, by the plain functions."""
+    start_s, step_s = signal.piece.start_s, ready.grid.step_s
+    made = replace(signal, excluded=())
+    ahead = ready.after
+    for move, (following, _) in zip(unit.moves, ready.rest, strict=True):
+        # Always the same of it, and no more than the steps that are left look at.
+        made = _plain([move], made.cut(start_s, start_s + (ready.before + ahead) * step_s))
+        ahead = min(ahead, following)
+    return made.cut(start_s + span[0] * step_s, start_s + span[1] * step_s).x
 
 
-def _masked(moves: Sequence[Move], signal: Signal) -> Signal:
-    """Return the input with its masks as the plain functions leave them, and some samples."""
-    for move in moves:
-        signal = mask_move(move, signal)
-        ratio = ratio_of(move)
-        if ratio != 1:
-            count = -(-signal.x.size * ratio.numerator // ratio.denominator)
-            blank = np.broadcast_to(np.float64(0), (count,))
-            signal = signal.with_samples(blank, rate_hz=signal.rate_hz * ratio)
-    return signal
+def _tail(unit: Unit, ready: Filter, signal: Signal, span: Span) -> Floats:
+    """Return the output near the stop of the piece, likewise."""
+    piece, step_s = signal.piece, ready.grid.step_s
+    tail = int(piece.length_s // step_s) - ready.after
+    made = replace(signal, excluded=())
+    back = ready.before
+    for move, (_, following) in zip(unit.moves, ready.rest, strict=True):
+        made = _plain([move], made.cut(piece.start_s + (tail - back) * step_s, piece.stop_s))
+        back = min(back, following)
+    return made.cut(piece.start_s + span[0] * step_s, piece.start_s + span[1] * step_s).x
 
 
 def _middle(ready: Filter, signal: Signal, span: Span, own: Span) -> list[Floats]:
@@ -110,63 +126,131 @@ def _middle(ready: Filter, signal: Signal, span: Span, own: Span) -> list[Floats
     grid, (low, high) = ready.grid, span
     kept = (min(max(own[0], low), high), min(max(own[1], low), high))
     blocks = grid.covering(span, kept)
-    reads = grid.reads(ready.before + ready.after) * ready.in_step
     offset = int((signal.start_s - signal.piece.start_s) * signal.rate_hz)
-    at_once = max(1, min(4, _AT_ONCE // ready.length))
+    starts = [grid.border(k) - grid.margin - ready.before for k in blocks]
     parts: list[Floats] = []
-    for some in (blocks[i : i + at_once] for i in range(0, len(blocks), at_once)):
-        rows = np.empty((len(some), ready.length))
-        starts = [grid.border(k) - grid.margin - ready.before for k in some]
-        for row, start in zip(rows, starts, strict=True):
-            first = start * ready.in_step - offset
-            stop = min(first + reads, signal.x.size)
-            assert first >= 0 or offset == 0, "a block's input is there, or begins with the piece"
-            assert stop == first + reads or signal.stop_s == signal.piece.stop_s, "likewise its end"
-            begin = max(0, first)
-            row[: begin - first] = 0
-            row[begin - first : stop - first] = signal.x[begin:stop]
-            row[stop - first :] = 0
+    for i in range(0, len(blocks), _AT_ONCE):
+        some = starts[i : i + _AT_ONCE]
+        rows = _rows(ready, signal, [start * ready.in_step - offset for start in some])
         out = apply(rows, ready.folds)
-        for k, start, row in zip(some, starts, out, strict=True):
+        for k, start, row in zip(blocks[i : i + _AT_ONCE], some, out, strict=True):
             first = low if k == blocks[0] else grid.border(k)
             stop = high if k == blocks[-1] else grid.border(k + 1)
             parts.append(row[(first - start) * ready.out_step : (stop - start) * ready.out_step])
     return parts
 
 
-def made_ready(unit: Unit, grid: BlockGrid) -> Filter:
-    """Return a group's response in blocks, remembered from the last time."""
-    return _made_ready(_Known(unit, grid))
+def _rows(ready: Filter, signal: Signal, firsts: Sequence[int]) -> Floats:
+    """Return blocks of input that begin at some samples, zeros where the piece has none."""
+    x, apart = signal.x, np.diff(firsts)
+    inside = firsts[0] >= 0 and firsts[-1] + ready.reads <= x.size
+    if inside and ready.reads == ready.length and np.all(apart == apart[:1]):
+        # Blocks are views, which overlap: a copy costs a tenth of all.
+        several = sliding_window_view(x[firsts[0] :], ready.length)
+        return several[:: int(apart[0]) if len(firsts) > 1 else 1][: len(firsts)]
+    rows = np.empty((len(firsts), ready.length))
+    starts_with_piece = signal.start_s == signal.piece.start_s
+    for row, first in zip(rows, firsts, strict=True):
+        begin, stop = max(0, first), min(first + ready.reads, x.size)
+        assert first >= 0 or starts_with_piece, "a block's input is there, or begins with the piece"
+        assert stop == first + ready.reads or signal.stop_s == signal.piece.stop_s, "likewise"
+        row[: begin - first] = 0
+        row[begin - first : stop - first] = x[begin:stop]
+        row[stop - first :] = 0
+    return rows
 
 
-class _Known:
+@dataclass(frozen=True)
+class _Masked:
+    """A group, all of a signal that its masks may depend on (no sample, and no name), and times."""
+
+    group: "_Group"
+    start_s: Fraction
+    stop_s: Fraction
+    unit: str
+    rate_hz: Fraction
+    first_s: Fraction
+    size: int
+    piece: Interval
+    excluded: tuple[Exclusion, ...]
+    conditions: tuple[Condition, ...]
+
+
+def _masks(
+    unit: Unit, signal: Signal, start_s: Fraction, stop_s: Fraction
+) -> tuple[Exclusion, ...]:
+    """Return masks from start to stop as the plain functions leave them; made once if alike."""
+    return _made_masks(
+        _Masked(
+            _Group(unit),
+            start_s,
+            stop_s,
+            signal.unit,
+            signal.rate_hz,
+            signal.start_s,
+            signal.x.size,
+            signal.piece,
+            signal.excluded,
+            signal.conditions,
+        )
+    )
+
+
+@lru_cache(maxsize=4)
+def _made_masks(given: _Masked) -> tuple[Exclusion, ...]:
+    def blank(count: int) -> Floats:
+        return np.broadcast_to(np.float64(0), (count,))
+
+    signal = Signal(
+        "",
+        given.unit,
+        given.rate_hz,
+        given.first_s,
+        blank(given.size),
+        given.piece,
+        given.excluded,
+        given.conditions,
+    )
+    for move in given.group.unit.moves:
+        signal = mask_move(move, signal)
+        ratio = ratio_of(move)
+        if ratio != 1:
+            count = -(-signal.x.size * ratio.numerator // ratio.denominator)
+            signal = signal.with_samples(blank(count), rate_hz=signal.rate_hz * ratio)
+    return signal.cut(given.start_s, given.stop_s).excluded
+
+
+class _Group:
     """A group, known by its steps, their parameters and what they take, but for its name."""
 
-    def __init__(self, unit: Unit, grid: BlockGrid) -> None:
-        self.unit, self.grid = unit, grid
-        steps = [
-            (m.step.stage.name, m.step.stage.version, m.step.params.model_dump_json(), _given(m))
-            for m in unit.moves
-        ]
-        self.key: tuple[Any, ...] = (*steps, grid, unit.before, unit.after)
+    def __init__(self, unit: Unit) -> None:
+        self.unit = unit
 
     def __eq__(self, other: object) -> bool:
-        return isinstance(other, _Known) and self.key == other.key
+        return isinstance(other, _Group) and self.unit.identity == other.unit.identity
 
     def __hash__(self) -> int:
-        return hash(self.key)
+        return hash(self.unit.identity)
+
+
+def made_ready(unit: Unit, grid: BlockGrid) -> Filter:
+    """Return a group's response in blocks, remembered from the last time."""
+    return _made_ready(_Group(unit), grid)
 
 
 @lru_cache(maxsize=8)
-def _made_ready(known: _Known) -> Filter:
-    unit, grid = known.unit, known.grid
+def _made_ready(group: _Group, grid: BlockGrid) -> Filter:
+    unit = group.unit
     runs = [list(run) for _, run in groupby(unit.moves, lambda move: ratio_of(move) == 1)]
     before = after = 0
     for run in runs:
         sides = _reach(run, grid)
         before, after = before + sides[0], after + sides[1]
     in_step = _samples(unit.moves[0], grid)
-    steps = fast_length(grid.reads(before + after), in_step)
+    least = grid.reads(before + after)
+    steps = fast_length(least, in_step)
+    # What is read for a block by its steps' reaches, which are longer than its own, may fill it.
+    fills = steps + unit.before - before <= grid.reads(unit.before + unit.after)
     folds: list[Fold] = []
     waiting: list[Move] = []
     rate_hz = _rate_hz(unit.moves[0])
@@ -183,7 +267,29 @@ def _made_ready(known: _Known) -> Filter:
     if waiting or not folds:
         ones = np.ones(length // 2 + 1)
         folds.append(fold_of(length, Fraction(1), gain_of(waiting, length, rate_hz), ones, ones))
-    return Filter(grid, before, after, in_step, length // steps, steps * in_step, tuple(folds))
+    return Filter(
+        grid,
+        before,
+        after,
+        _rest(unit.moves, grid),
+        in_step,
+        length // steps,
+        (steps if fills else least) * in_step,
+        steps * in_step,
+        tuple(folds),
+    )
+
+
+def _rest(moves: Sequence[Move], grid: BlockGrid) -> tuple[tuple[int, int], ...]:
+    """Return for each step how far those that follow it look ahead in all, and back."""
+    rest = []
+    ahead = back = 0
+    for move in reversed(moves):
+        rest.append((ahead, back))
+        reach = move.reach()
+        ahead += ceil(reach.after_s / grid.step_s)
+        back += ceil(reach.before_s / grid.step_s)
+    return tuple(reversed(rest))
 
 
 def gain_of(moves: Sequence[Move], length: int, rate_hz: Fraction) -> NDArray[Any]:
@@ -217,13 +323,9 @@ def _reach(run: Sequence[Move], grid: BlockGrid) -> tuple[int, int]:
     return min(before, -(-longest[0] // in_step)), min(after, -(-longest[1] // in_step))
 
 
-def _given(move: Move) -> SignalSpec:
-    assert isinstance(move.spec_in, SignalSpec), "a fused step takes a signal"
-    return replace(move.spec_in, name="")
-
-
 def _rate_hz(move: Move) -> Fraction:
-    rate_hz = _given(move).rate_hz
+    assert isinstance(move.spec_in, SignalSpec), "a fused step takes a signal"
+    rate_hz = move.spec_in.rate_hz
     assert rate_hz is not None, "rates are known before anything is run"
     return rate_hz
 

@@ -69,7 +69,7 @@ def run_form(
     for unit in form.units:
         taken = values[unit.source]
         if unit.fused:
-            values[unit.index] = run_unit(unit, taken, form.blocks, spans[unit.index], own)
+            values[unit.index] = run_unit(unit, taken, form.step_s, spans[unit.index], own)
             continue
         made = run_move(unit.moves[0], taken, states.get((lane_no, unit.index)))
         assert isinstance(made, Signal), f"{unit.moves[0].step.name} gives signals"

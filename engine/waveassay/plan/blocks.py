@@ -1,39 +1,61 @@
 """The fixed grid of blocks in which a fused group is applied, from the start of a piece.
 
-Blocks are a quarter of a stretch, and lie where stretches do; which block gives a sample that is
-kept depends on neither. All is counted in steps of the grid of stretches.
+A block is a quarter, a half or a whole of a stretch, by how far the group reaches, and blocks lie
+where stretches do; which block gives a sample that is kept depends on neither. All is counted in
+steps of the grid of stretches.
 """
 
 from dataclasses import dataclass
 from fractions import Fraction
+from functools import cached_property
 from math import ceil
 
-#: Four blocks a stretch: as many rows of doubles as a transform takes at once.
-BLOCK_S = Fraction(150)
-#: How far the steps that follow may look beyond a block's borders without another block, s.
-MARGIN_S = Fraction(3)
+#: The reach to both sides up to which blocks have each length, s: what is read twice is to cost
+#: less than what a longer transform, which leaves a core's memory, costs more (measured).
+LENGTHS_S = ((Fraction(75), Fraction(150)), (Fraction(300), Fraction(300)))
+#: A longer reach has whole stretches as blocks: more of one would be made and thrown away.
+LONGEST_S = Fraction(600)
+#: How far the steps that follow may look beyond a block's borders without another block, as a
+#: share of its length.
+MARGIN = Fraction(1, 50)
 
 Span = tuple[int, int]
 
 
+def lengths_s(reach_s: Fraction) -> tuple[Fraction, ...]:
+    """Return lengths of blocks for a group with this reach to both sides in all, the best first.
+
+    Shorter ones cost more, and need less memory.
+    """
+    shorter = [length_s for most_s, length_s in LENGTHS_S if most_s < reach_s]
+    fitting = [length_s for most_s, length_s in LENGTHS_S if reach_s <= most_s]
+    return ((*fitting, LONGEST_S)[0], *reversed(shorter))
+
+
 @dataclass(frozen=True)
 class BlockGrid:
-    """Blocks in steps of ``step_s``: block k begins at the last one at or before k * 150 s."""
+    """Blocks in steps of ``step_s``: block k begins at the last one by k * ``length_s``."""
 
     step_s: Fraction
+    length_s: Fraction
 
-    @property
+    @cached_property
+    def _ratio(self) -> tuple[int, int]:
+        """How many steps so many blocks are, in whole numbers: fractions take far longer."""
+        return (self.length_s / self.step_s).as_integer_ratio()
+
+    @cached_property
     def margin(self) -> int:
         """How far a block is right beyond its two borders."""
-        return ceil(MARGIN_S / self.step_s)
+        return ceil(MARGIN * self.length_s / self.step_s)
 
     def border(self, number: int) -> int:
         """Return where block ``number`` begins."""
-        return int(number * BLOCK_S // self.step_s)
+        return number * self._ratio[0] // self._ratio[1]
 
     def reads(self, reach: int) -> int:
         """Return how much of its input every block reads, for a reach to both sides in all."""
-        return ceil(BLOCK_S / self.step_s) + 2 * self.margin + reach
+        return ceil(self.length_s / self.step_s) + 2 * self.margin + reach
 
     def covering(self, span: Span, own: Span) -> range:
         """Return the blocks that give a span, of which ``own`` is kept.
@@ -47,8 +69,10 @@ class BlockGrid:
 
     def _last_begun(self, at: int) -> int:
         """Return the last block with a border at or before a moment."""
-        return max(0, ceil((at + 1) * self.step_s / BLOCK_S) - 1)
+        steps, blocks = self._ratio
+        return max(0, -(-(at + 1) * blocks // steps) - 1)
 
     def _first_over(self, at: int) -> int:
         """Return the first block with a border at or after a moment."""
-        return ceil(at * self.step_s / BLOCK_S)
+        steps, blocks = self._ratio
+        return -(-at * blocks // steps)

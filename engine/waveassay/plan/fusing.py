@@ -6,23 +6,20 @@ of the one before, whose output nothing else uses. Its response is applied in bl
 """
 
 from collections.abc import Iterable, Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from fractions import Fraction
+from functools import cached_property
 from math import ceil
 
 from waveassay.contract import SignalSpec, Spec
-from waveassay.plan.blocks import BlockGrid
+from waveassay.plan.blocks import BlockGrid, lengths_s
 from waveassay.plan.program import Level, Move, Program
 
 #: Enters the key of what is made: goes up when the way it is carried out can change a number.
-FORM = "overlap-save 1"
+FORM = "overlap-save 2"
 #: No block has more samples, nor four times as many at the rate at which the kernel between two
 #: rates stands: beyond, the steps one after another cost less, or need less memory.
 LARGEST_BLOCK = 1 << 21
-#: What a block may read for each step it spares, s: beyond, the steps cost less (measured).
-WORTH_S = Fraction(300)
-#: How many filters a change of rate costs as much as.
-CHANGE_WORTH = 4
 
 NO_RESPONSE = "declares no response"
 
@@ -34,12 +31,23 @@ class Unit:
     Attributes
     ----------
     before, after : their summed reach, in steps of the grid of stretches, rounded up.
+    block_s : length of the blocks of a fused group.
     """
 
     moves: tuple[Move, ...]
-    fused: bool
     before: int
     after: int
+    block_s: Fraction | None = None
+
+    @property
+    def fused(self) -> bool:
+        """Whether it runs by its response."""
+        return self.block_s is not None
+
+    def grid(self, step_s: Fraction) -> BlockGrid:
+        """Return the blocks of a fused group."""
+        assert self.block_s is not None, "a step by its own function has no blocks"
+        return BlockGrid(step_s, self.block_s)
 
     @property
     def source(self) -> int:
@@ -53,21 +61,39 @@ class Unit:
         """Index of the step whose output it gives."""
         return self.moves[-1].index
 
+    @cached_property
+    def identity(self) -> tuple[str, ...]:
+        """Its steps, their parameters and what they take, but for the signal's name."""
+        known: list[str] = [f"{self.before} {self.after}"]
+        for move in self.moves:
+            stage, given = move.step.stage, move.spec_in
+            assert isinstance(given, SignalSpec), "a fused step takes a signal"
+            known += [f"{stage.name} {stage.version}", move.step.params.model_dump_json()]
+            known.append(repr(replace(given, name="")))
+        return tuple(known)
+
 
 def units_of(program: Program, pass_no: int) -> tuple[Unit, ...]:
     """Return how a pass's steps on samples are run, in order."""
     step_s = _step_s(program)
-    units = []
-    for moves in _runs(program, pass_no):
-        sides = [_sides(move, step_s) for move in moves]
-        before, after = sum(side[0] for side in sides), sum(side[1] for side in sides)
-        if why_not(moves, before + after, step_s) is None:
-            units.append(Unit(moves, True, before, after))
-        else:
-            units.extend(
-                Unit((move,), False, *side) for move, side in zip(moves, sides, strict=True)
-            )
-    return tuple(units)
+    return tuple(unit for moves in _runs(program, pass_no) for unit in _units(moves, step_s))
+
+
+def _units(moves: tuple[Move, ...], step_s: Fraction) -> Iterator[Unit]:
+    """Yield how steps that may be one response are run."""
+    sides = [_sides(move, step_s) for move in moves]
+    before, after = sum(side[0] for side in sides), sum(side[1] for side in sides)
+    if why_not(moves, before + after, step_s) is None:
+        yield Unit(moves, before, after, _block_s(moves, before + after, step_s))
+        return
+    # A change of rate may need a kernel too large for the reach of the steps before it.
+    split = next((i for i, move in enumerate(moves) if i and _changes(move)), None)
+    if split is not None and _responds(moves[0]):
+        yield from _units(moves[:split], step_s)
+        yield from _units(moves[split:], step_s)
+        return
+    for move, side in zip(moves, sides, strict=True):
+        yield Unit((move,), *side)
 
 
 def _step_s(program: Program) -> Fraction:
@@ -135,25 +161,38 @@ def why_not(moves: Sequence[Move], reach: int, step_s: Fraction) -> str | None:
     """
     if not _responds(moves[0]):
         return NO_RESPONSE  # such a step stands alone
-    changing = sum(_rate_hz(move.spec_in) != _rate_hz(move.spec_out) for move in moves)
-    if len(moves) == 1 and not changing:
+    if len(moves) == 1 and not _changes(moves[0]):
         return "only one step"
-    length_s = BlockGrid(step_s).reads(reach) * step_s
+    reasons = [_too_large(moves, reach, step_s, s) for s in lengths_s(reach * step_s)]
+    return None if None in reasons else reasons[-1]
+
+
+def _block_s(moves: Sequence[Move], reach: int, step_s: Fraction) -> Fraction:
+    """Return the length of a group's blocks: the best that is not too large."""
+    lengths = lengths_s(reach * step_s)
+    return next(s for s in lengths if _too_large(moves, reach, step_s, s) is None)
+
+
+def _too_large(
+    moves: Sequence[Move], reach: int, step_s: Fraction, block_s: Fraction
+) -> str | None:
+    length_s = BlockGrid(step_s, block_s).reads(reach) * step_s
     for move in moves:
         rate_hz = _rate_hz(move.spec_in)
         if rate_hz is None:
             return None  # the rest is known once there is a recording
         samples = length_s * rate_hz
-        longest_s = WORTH_S * (len(moves) + (CHANGE_WORTH - 1) * changing)
-        told = f"with a reach of {float(reach * step_s):.4g} s a block would take "
-        if length_s > longest_s:
-            return f"{told}{float(length_s):.4g} s, and cost more than the steps one by one"
+        told = f"with a reach of {float(reach * step_s):.4g} s"
         if samples > LARGEST_BLOCK:
-            return f"{told}{int(samples)} samples, more than {LARGEST_BLOCK}"
+            return f"{told} a block would take {int(samples)} samples, more than {LARGEST_BLOCK}"
         ratio = ratio_of(move)
         if samples * ratio.numerator > 4 * LARGEST_BLOCK:
-            return f"the ratio {ratio} makes a kernel too large for a block"
+            return f"{told} the ratio {ratio} makes a kernel too large for a block"
     return None
+
+
+def _changes(move: Move) -> bool:
+    return _rate_hz(move.spec_in) != _rate_hz(move.spec_out)
 
 
 def ratio_of(move: Move) -> Fraction:
@@ -189,12 +228,13 @@ def explained(program: Program) -> tuple[Told, ...]:
 def _told(program: Program, unit: Unit, units: Iterable[Unit]) -> Iterator[Told]:
     names = [move.step.name for move in unit.moves]
     reasons = [] if _responds(unit.moves[0]) else [NO_RESPONSE]
+    reasons.extend(_why_apart(program, unit))
     if not unit.fused:
-        text, reasons = "by its own function", [*reasons, *_why_alone(program, unit.moves[0])]
+        text = "by its own function"
     elif len(names) > 1:
-        text = f"fused, as one response: {' + '.join(names)}"
+        text = f"fused, as one response: {' + '.join(names)}{_in_blocks(program, unit)}"
     else:
-        text = "by its response, alone"
+        text = f"by its response, alone{_in_blocks(program, unit)}"
     if _responds(unit.moves[0]):
         reasons.extend(_ends(program, unit, units))
     if reasons:
@@ -203,10 +243,20 @@ def _told(program: Program, unit: Unit, units: Iterable[Unit]) -> Iterator[Told]
         yield Told(name, text)
 
 
-def _why_alone(program: Program, move: Move) -> Iterator[str]:
+def _in_blocks(program: Program, unit: Unit) -> str:
+    if _rate_hz(unit.moves[0].spec_in) is None:
+        return ""  # its reach is not known
     step_s = _step_s(program)
-    for moves in _runs(program, move.pass_no):
-        if move in moves:
+    grid = unit.grid(step_s)
+    reads_s = float(grid.reads(unit.before + unit.after) * step_s)
+    return f", in blocks of {float(grid.length_s):g} s, each from {reads_s:.4g} s"
+
+
+def _why_apart(program: Program, unit: Unit) -> Iterator[str]:
+    """Yield why a unit is not all of the steps that may be one response."""
+    step_s, first = _step_s(program), unit.moves[0]
+    for moves in _runs(program, first.pass_no):
+        if first in moves and not (unit.fused and moves == unit.moves):
             reach = sum(sum(_sides(one, step_s)) for one in moves)
             reason = why_not(moves, reach, step_s)
             if reason is not None:

@@ -16,7 +16,7 @@ from functools import cached_property, lru_cache
 from typing import Any, Literal
 
 from waveassay.contract.digests import digest
-from waveassay.plan.blocks import BLOCK_S, MARGIN_S
+from waveassay.plan.blocks import MARGIN
 from waveassay.plan.fusing import FORM
 from waveassay.plan.passage import Lane, Passage
 from waveassay.plan.program import Level, Move
@@ -281,7 +281,7 @@ def _lane(lane: Lane, action: Action, pass_no: int) -> dict[str, Any]:
         known["kept"] = lane.program.kept_signals(pass_no)
         if pass_no < len(lane.forms):
             known["fused"] = [
-                [FORM, [move.index for move in unit.moves], BLOCK_S, MARGIN_S]
+                [FORM, [move.index for move in unit.moves], unit.block_s, MARGIN]
                 for unit in lane.forms[pass_no].units
                 if unit.fused
             ]

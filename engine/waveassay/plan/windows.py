@@ -10,7 +10,7 @@ from functools import cached_property
 from math import ceil
 
 from waveassay.contract import Interval
-from waveassay.plan.blocks import BlockGrid, Span
+from waveassay.plan.blocks import Span
 from waveassay.plan.fusing import Unit, units_of
 from waveassay.plan.program import Program
 
@@ -36,11 +36,6 @@ class Form:
     def kept(self) -> tuple[int, ...]:
         """The steps whose signals are kept."""
         return tuple(self.program.kept_signals(self.pass_no))
-
-    @cached_property
-    def blocks(self) -> BlockGrid:
-        """The grid of blocks of its fused groups."""
-        return BlockGrid(self.step_s)
 
     def own(self, piece: Interval, start_s: Fraction, stop_s: Fraction) -> Span:
         """Return the span from start to stop."""
@@ -78,11 +73,12 @@ class Form:
         """Return what a unit needs of its input to give a span of its output."""
         low, high = span[0] - unit.before, span[1] + unit.after
         if unit.fused:
-            reach, margin = unit.before + unit.after, self.blocks.margin
-            blocks = self.blocks.covering(span, own)
-            first = self.blocks.border(blocks[0]) - margin - unit.before
-            last = self.blocks.border(blocks[-1]) - margin - unit.before
-            low, high = min(low, first), max(high, last + self.blocks.reads(reach))
+            reach = unit.before + unit.after
+            grid = unit.grid(self.step_s)
+            blocks = grid.covering(span, own)
+            first = grid.border(blocks[0]) - grid.margin - unit.before
+            last = grid.border(blocks[-1]) - grid.margin - unit.before
+            low, high = min(low, first), max(high, last + grid.reads(reach))
             # Near an end of the piece the plain functions are run on that end, always the same.
             if span[0] < unit.before:
                 low, high = 0, max(high, reach)

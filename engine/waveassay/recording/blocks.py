@@ -1,7 +1,6 @@
-"""Blocks of whole records, and the samples in them as physical values.
+"""Blocks of whole records, and the stored samples in them.
 
-A block of about 1 MiB stays in the processor's cache between reading and decoding. Adjacent
-signals of one rate are decoded in one strided operation.
+A block of about 1 MiB stays in the processor's cache between reading and sorting by signal.
 """
 
 from collections.abc import Iterable, Iterator
@@ -10,15 +9,16 @@ from math import ceil, floor
 from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
 
-from waveassay.contract import Floats
+from waveassay.recording.digital import Scale, StoredArray
 from waveassay.recording.file import RegularFile
 from waveassay.recording.header import Header
 
 BLOCK_BYTES = 1 << 20
 # From this size on, reading only the annotations of each record beats reading all of it.
 _SPARSE_RECORD_BYTES = 16 << 10
+# Signals in a group: their arrays stay small enough for memory that was freed to be used again.
+_MOST = 16
 
 
 class Records:
@@ -70,13 +70,13 @@ class Records:
 
 @dataclass(frozen=True)
 class Group:
-    """Adjacent signals with equally many samples per record.
+    """Adjacent signals, not too many, with equally many samples per record.
 
     Attributes
     ----------
     samples : per record and signal.
     place : where in a record the first one's samples start, bytes.
-    gain, offset : of each signal, shape (signals, 1, 1).
+    scales : gain and offset of each signal.
     limits : lowest and highest stored value of each signal by its digital limits.
     limited : whether a stored value can lie outside the limits at all.
     """
@@ -84,8 +84,7 @@ class Group:
     signals: tuple[int, ...]
     samples: int
     place: int
-    gain: Floats
-    offset: Floats
+    scales: tuple[Scale, ...]
     limits: tuple[tuple[int, int], ...]
     limited: bool
 
@@ -98,6 +97,7 @@ def groups_of(header: Header, wanted: Iterable[int]) -> tuple[Group, ...]:
         if (
             runs
             and runs[-1][-1] == index - 1
+            and len(runs[-1]) < _MOST
             and header.signals[index - 1].samples_per_record == samples
         ):
             runs[-1].append(index)
@@ -110,67 +110,42 @@ def _group(header: Header, run: list[int]) -> Group:
     signals = [header.signals[i] for i in run]
     top = 2.0 ** (8 * header.sample_bytes - 1)
 
-    def column(values: list[float]) -> Floats:
-        return np.array(values, np.float64).reshape(-1, 1, 1)
-
     limits = tuple((ceil(s.digital_min), floor(s.digital_max)) for s in signals)
     return Group(
         signals=tuple(run),
         samples=signals[0].samples_per_record,
         place=header.places[run[0]],
-        gain=column([s.gain for s in signals]),
-        offset=column([s.offset for s in signals]),
+        scales=tuple((s.gain, s.offset) for s in signals),
         limits=limits,
         limited=any(low > -top or high < top - 1 for low, high in limits),
     )
 
 
 class Decoder:
-    """Turns the bytes of a block into physical values of one group."""
+    """Finds the stored samples of one group in the bytes of a block."""
 
-    def __init__(self, header: Header, group: Group, per_block: int) -> None:
+    def __init__(self, header: Header, group: Group) -> None:
         self.group = group
+        self.kind: type[np.signedinteger[Any]] = np.int16 if header.sample_bytes == 2 else np.int32
         self._record_bytes = header.record_bytes
         self._width = header.sample_bytes
-        self._wide: NDArray[np.int32] | None = None
-        if self._width == 3:
-            self._wide = np.empty(len(group.signals) * per_block * group.samples, np.int32)
 
-    def digital(self, raw: bytearray, count: int) -> NDArray[Any]:
-        """Return stored values, shape (signals, records, samples); a view of reused memory."""
+    def stored(self, raw: bytearray, count: int, out: StoredArray | None = None) -> StoredArray:
+        """Return stored values, shape (signals, records, samples), in ``out`` where it is given.
+
+        Without it, they may be a view of the block.
+        """
         group, width = self.group, self._width
-        shape = (count, len(group.signals), group.samples)
-        strides = (self._record_bytes, width * group.samples, width)
+        strides = (width * group.samples, self._record_bytes, width)
         # 24 bits: a little-endian 32-bit view that starts one byte early; the shift drops that
         # byte and extends the sign.
         start = group.place + (1 if width == 2 else 0)
         kind = "<i2" if width == 2 else "<i4"
-        stored: NDArray[Any] = np.ndarray(shape, kind, raw, start, strides).transpose(1, 0, 2)
-        if self._wide is None:
-            return stored
-        wide = self._wide[: stored.size].reshape(stored.shape)
-        np.right_shift(stored, 8, out=wide)
-        return wide
-
-    def physical(self, digital: NDArray[Any], out: Floats) -> None:
-        """Write ``gain * digital + offset``, in the signals' units, to ``out`` of that shape."""
-        np.multiply(digital, self.group.gain, out=out)
-        out += self.group.offset
-
-    def outside(self, digital: NDArray[Any], first: int, stop: int) -> dict[int, int]:
-        """Count stored values outside the digital limits, by signal, where there are any.
-
-        Only samples first to stop of the block's are counted.
-        """
-        group = self.group
-        # The two extremes cost a third of decoding, an exact count as much as decoding.
-        low, high = digital.min(axis=(1, 2)), digital.max(axis=(1, 2))
-        found = {}
-        for i, index in enumerate(group.signals):
-            lowest, highest = group.limits[i]
-            if low[i] < lowest or high[i] > highest:
-                asked = digital[i].reshape(-1)[max(0, first) : max(0, stop)]
-                count = np.count_nonzero((asked < lowest) | (asked > highest))
-                if count:
-                    found[index] = int(count)
-        return found
+        shape = (len(group.signals), count, group.samples)
+        found: StoredArray = np.ndarray(shape, kind, raw, start, strides)
+        if width == 3:
+            return np.right_shift(found, 8, out=out)
+        if out is None:
+            return found
+        np.copyto(out, found)
+        return out

@@ -51,6 +51,7 @@ _RECORD_S_RANGE = (1e-6, 1e8)
 
 _VERSIONS: dict[bytes, Literal["EDF", "BDF"]] = {b"0       ": "EDF", b"\xffBIOSEMI": "BDF"}
 _ANNOTATION_LABELS = ("EDF Annotations", "BDF Annotations")
+_ASCII = re.compile(rb"[ -~]*")
 _INTEGER = re.compile(r"[+-]?\d+\Z", re.ASCII)
 _NUMBER = re.compile(r"[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?\Z", re.ASCII)
 
@@ -257,8 +258,9 @@ class _Fields:
 
     def text(self, raw: bytes, what: str) -> str:
         """Return text without its padding; bytes beyond ASCII as UTF-8, else as Latin-1."""
-        if any(byte < 32 or byte > 126 for byte in raw):
-            self._odd.append(what)
+        if _ASCII.fullmatch(raw):
+            return raw.decode("ascii").strip()
+        self._odd.append(what)
         try:
             text = raw.decode("utf-8")
         except UnicodeDecodeError:

@@ -12,7 +12,13 @@ from typing import Literal, Self
 import numpy as np
 
 from waveassay.contract import Floats
-from waveassay.recording.blocks import BLOCK_BYTES, Decoder, Records, groups_of
+from waveassay.recording.blocks import (
+    BLOCK_BYTES,
+    Decoder,
+    Records,
+    groups_of,
+)
+from waveassay.recording.digital import Digital, StoredArray, outside
 from waveassay.recording.errors import EXPORT_AGAIN, recording_error
 from waveassay.recording.facts import Facts, SignalFacts
 from waveassay.recording.file import RegularFile
@@ -80,10 +86,27 @@ class Recording:
 
         Notes
         -----
+        See `read_digital`, which holds less memory where signals are taken one by one.
+        """
+        digital = self.read_digital(signals, piece, start_s, stop_s)
+        # One array for all: of a large one, the system gives large pages.
+        made = np.empty(sum(stored.size for stored in digital.stored))
+        parts = np.split(made, list(accumulate(stored.size for stored in digital.stored))[:-1])
+        for place, part in enumerate(parts):
+            digital.physical(place, part)
+        return parts[: len(digital)]
+
+    def read_digital(
+        self, signals: Sequence[int], piece: int, start_s: Fraction, stop_s: Fraction
+    ) -> Digital:
+        """Return the same samples as they are stored, each made physical when it is asked for.
+
+        Parameters and errors as for `read`.
+
+        Notes
+        -----
         One sequential pass over the records needed, in blocks of whole records of about 1 MiB;
-        block size changes no bit of the result. Values are ``gain * digital + offset`` with
-        ``gain = (physical_max - physical_min) / (digital_max - digital_min)`` (Kemp et al. 1992,
-        Electroencephalogr Clin Neurophysiol 82:391-393).
+        block size changes no bit of the result.
         """
         self._require_samples(signals)
         whole = self.facts.pieces[piece]
@@ -96,7 +119,10 @@ class Recording:
             stop = min(max(first, ceil((stop_s - whole.start_s) * rate_hz)), size)
             spans.update(dict.fromkeys(group.signals, (first, stop)))
         found = self._read_spans(spans, self._first_record[piece])
-        return [found[index] for index in signals]
+        return Digital(
+            tuple(found[index] for index in signals),
+            tuple((header.signals[i].gain, header.signals[i].offset) for i in signals),
+        )
 
     def blocks(
         self, signals: Sequence[int] | None = None
@@ -115,15 +141,16 @@ class Recording:
         parts = []
         for group in groups_of(records.header, wanted):
             space = np.empty(len(group.signals) * per_block * group.samples)
-            parts.append((Decoder(records.header, group, per_block), space))
+            scales = np.array(group.scales).T.reshape(2, -1, 1, 1)
+            parts.append((Decoder(records.header, group), scales, space))
         for first, count, raw in records.raw_blocks(0, records.count):
             block: list[tuple[tuple[int, ...], Floats]] = []
-            for decoder, space in parts:
-                group = decoder.group
-                shape = (len(group.signals), count, group.samples)
-                out = space[: shape[0] * count * group.samples].reshape(shape)
-                decoder.physical(decoder.digital(raw, count), out)
-                block.append((group.signals, out.reshape(len(group.signals), -1)))
+            for decoder, (gains, offsets), space in parts:
+                stored = decoder.stored(raw, count)
+                out = space[: stored.size].reshape(stored.shape)
+                np.multiply(stored, gains, out=out)
+                out += offsets
+                block.append((decoder.group.signals, out.reshape(len(stored), -1)))
             yield first, block
 
     def _require_samples(self, signals: Sequence[int]) -> None:
@@ -133,39 +160,37 @@ class Recording:
 
     def _read_spans(
         self, spans: dict[int, tuple[int, int]], piece_record: int
-    ) -> dict[int, Floats]:
+    ) -> dict[int, StoredArray]:
         """Read samples first to stop of each signal, counted from the start of a piece."""
         records = self._records
         groups = groups_of(
             records.header, [i for i, (first, stop) in spans.items() if stop > first]
         )
-        found: dict[int, Floats] = {i: np.empty(0) for i in spans}
+        found: dict[int, StoredArray] = {i: np.empty(0, np.int16) for i in spans}
         if not groups:
             return found
         first_record = min(spans[g.signals[0]][0] // g.samples for g in groups)
         stop_record = max(-(-spans[g.signals[0]][1] // g.samples) for g in groups)
         total = stop_record - first_record
-        # Whole records are decoded straight to their place; what was not asked for is cut off
-        # as a view.
-        targets = [np.empty((len(g.signals), total, g.samples)) for g in groups]
-        decoders = [Decoder(records.header, g, min(records.per_block, total)) for g in groups]
+        # Whole records are put straight to their place; what was not asked for is cut off as a
+        # view.
+        decoders = [Decoder(records.header, group) for group in groups]
+        targets = [
+            np.empty((len(d.group.signals), total, d.group.samples), d.kind) for d in decoders
+        ]
         outer = piece_record + first_record
         for record, count, raw in records.raw_blocks(outer, piece_record + stop_record):
             at = record - outer
-            for group, decoder, target in zip(groups, decoders, targets, strict=True):
-                digital = decoder.digital(raw, count)
-                decoder.physical(digital, target[:, at : at + count])
-                if group.limited:
-                    first, stop = spans[group.signals[0]]
-                    base = (first_record + at) * group.samples
-                    outside = decoder.outside(digital, first - base, stop - base)
-                    for index, number in outside.items():
-                        self.out_of_range[index] = self.out_of_range.get(index, 0) + number
-        for group, target in zip(groups, targets, strict=True):
+            for decoder, rows in zip(decoders, targets, strict=True):
+                decoder.stored(raw, count, rows[:, at : at + count])
+        for group, rows in zip(groups, targets, strict=True):
             first, stop = spans[group.signals[0]]
             base = first_record * group.samples
-            for index, row in zip(group.signals, target, strict=True):
+            for index, row, limits in zip(group.signals, rows, group.limits, strict=True):
                 found[index] = row.reshape(-1)[first - base : stop - base]
+                more = outside(found[index], limits) if group.limited else 0
+                if more:
+                    self.out_of_range[index] = self.out_of_range.get(index, 0) + more
         return found
 
 

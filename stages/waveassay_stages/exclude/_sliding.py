@@ -11,24 +11,30 @@ from waveassay.contract import Bools, Exclusion, Floats, Signal, exact, exclusio
 def sliding_max(x: Floats, width: int) -> Floats:
     """Return the greatest of each ``width`` samples in a row, shape (n - width + 1,).
 
-    Two running maxima, forward and backward in blocks of ``width``, meet in each window.
-
-    References
-    ----------
-    M. van Herk, Pattern Recognition Letters 13, 517-521, 1992.
+    The greatest of 2, 4, 8 ... in a row come from those of half as many; two windows of the last
+    power of two, which overlap, make up the width.
     """
-    count = x.size - width + 1
-    blocks = -(-x.size // width)
-    padded = np.full(blocks * width, -np.inf)
-    padded[: x.size] = x
-    tiles = padded.reshape(blocks, width)
-    ahead = np.maximum.accumulate(tiles, axis=1).ravel()
-    behind = np.maximum.accumulate(tiles[:, ::-1], axis=1)[:, ::-1].ravel()
-    return np.maximum(behind[:count], ahead[width - 1 : width - 1 + count])
+    return _sliding(np.maximum, x, width)
+
+
+def sliding_min(x: Floats, width: int) -> Floats:
+    """Return the least of each ``width`` samples in a row, likewise."""
+    return _sliding(np.minimum, x, width)
+
+
+def _sliding(extreme: np.ufunc, x: Floats, width: int) -> Floats:
+    found, reach = x, 1
+    while reach < width:
+        apart = min(reach, width - reach)
+        found = extreme(found[:-apart], found[apart:])
+        reach += apart
+    return found
 
 
 def covered(signal: Signal, windows: Bools, width: int, reason: str) -> list[Exclusion]:
     """Return as masked time all samples of the marked windows; window i starts at sample i."""
+    if not np.any(windows):
+        return []
     first = np.zeros(signal.x.size, np.bool_)
     first[: windows.size] = windows
     rest_s = (width - 1) / signal.rate_hz

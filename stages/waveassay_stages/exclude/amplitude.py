@@ -71,9 +71,10 @@ def beyond(x: Floats, width: int, limit: float, criterion: str) -> Bools:
     finite = np.isfinite(x)
     if criterion == "absolute":
         return _sliding.sliding_max(np.where(finite, np.abs(x), -np.inf), width) > limit
-    highest = _sliding.sliding_max(np.where(finite, x, -np.inf), width)
-    lowest = _sliding.sliding_max(np.where(finite, -x, -np.inf), width)
-    return highest + lowest > limit
+    every = bool(np.all(finite))
+    highest = _sliding.sliding_max(x if every else np.where(finite, x, -np.inf), width)
+    lowest = _sliding.sliding_min(x if every else np.where(finite, x, np.inf), width)
+    return highest - lowest > limit
 
 
 def spec(params: AmplitudeParams, given: SignalSpec, findings: Findings) -> SignalSpec:
@@ -102,8 +103,11 @@ def run(params: AmplitudeParams, signal: Signal) -> Signal:
         return signal
     width = min(signal.x.size, _sliding.window_samples(params.window, signal.rate_hz))
     windows = beyond(signal.x, width, params.range.to(signal.unit), params.criterion)
-    unfit = exclusions_of(signal, ~np.isfinite(signal.x), "not finite")
-    return signal.excluding((*_sliding.covered(signal, windows, width, "amplitude"), *unfit))
+    found = _sliding.covered(signal, windows, width, "amplitude")
+    unfit = ~np.isfinite(signal.x)
+    if np.any(unfit):
+        found.extend(exclusions_of(signal, unfit, "not finite"))
+    return signal.excluding(found)
 
 
 STAGE = Stage(

@@ -62,10 +62,10 @@ def flat(x: Floats, width: int, tolerance: float) -> Bools:
     not a finite number is not flat.
     """
     finite = np.isfinite(x)
-    span = _sliding.sliding_max(np.where(finite, x, np.inf), width) + _sliding.sliding_max(
-        np.where(finite, -x, np.inf), width
-    )
-    return span <= tolerance
+    every = bool(np.all(finite))
+    highest = _sliding.sliding_max(x if every else np.where(finite, x, np.inf), width)
+    lowest = _sliding.sliding_min(x if every else np.where(finite, x, -np.inf), width)
+    return highest - lowest <= tolerance
 
 
 def spec(params: FlatlineParams, given: SignalSpec, findings: Findings) -> SignalSpec:

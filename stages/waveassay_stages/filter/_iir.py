@@ -1,15 +1,25 @@
 """Recursive filters as second-order sections: design, response, and how they are run."""
 
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 from fractions import Fraction
+from functools import lru_cache
 from math import ceil, isqrt
-from typing import Literal
+from typing import Any, Generic, Literal, Protocol, TypeVar
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from waveassay.contract import Floats, Reach, Signal
+from waveassay.contract import (
+    REACH_TOLERANCE,
+    Floats,
+    Reach,
+    Response,
+    Signal,
+    SignalSpec,
+    exact,
+)
+from waveassay_stages._finite import require_finite
 
 Complex = NDArray[np.complex128]
 Passes = Literal["both_ways", "forward"]
@@ -212,18 +222,98 @@ def run_sections(x: Floats, filters: Cascade, passes: Passes, edges: Edges, pad:
     return np.ascontiguousarray(one_pass(once[::-1])[::-1][pad : pad + x.size])
 
 
-def masked(signal: Signal, passes: Passes, widen_s: Fraction) -> Signal:
-    """Return the signal with its masks widened and the ends of its piece masked."""
-    before_s = widen_s if passes == "both_ways" else Fraction(0)
-    return signal.widened(before_s, widen_s).excluding_edges(before_s, widen_s)
+class FilterParams(Protocol):
+    """What the parameters of every recursive filter hold."""
+
+    @property
+    def passes(self) -> Passes:
+        """Both ways or forward."""
+
+    @property
+    def edges(self) -> Edges:
+        """What is put beyond the ends of a piece when run both ways."""
+
+    @property
+    def widen(self) -> float | None:
+        """How far masked time is widened, s; None for as long as the filter's response."""
+
+    def __hash__(self) -> int:
+        """By value: what is made of parameters is remembered."""
 
 
-def reach(
-    filters: Cascade, rate_hz: Fraction, passes: Passes, pad: int, widen_s: Fraction, share: float
-) -> Reach:
-    """Return what a moment of the output depends on: samples to the share asked, and masks."""
-    samples = reach_samples(filters, passes, share)
-    if passes == "forward":
-        return Reach(max(widen_s, samples / rate_hz), Fraction(0))
-    span_s = max(widen_s, (samples + pad) / rate_hz)
-    return Reach(span_s, span_s)
+P = TypeVar("P", bound=FilterParams)
+Design = Callable[[Any, float], Cascade]
+
+
+@lru_cache(maxsize=256)
+def _response_samples(design: Design, params: FilterParams, rate_hz: float) -> int:
+    return response_samples(design(params, rate_hz), params.passes)
+
+
+@lru_cache(maxsize=256)
+def _reach_samples(design: Design, params: FilterParams, rate_hz: float) -> int:
+    return reach_samples(design(params, rate_hz), params.passes, REACH_TOLERANCE)
+
+
+@dataclass(frozen=True)
+class Filter(Generic[P]):
+    """What a stage is that filters by sections: all but its parameters and their design.
+
+    Attributes
+    ----------
+    stage : its name.
+    design : ``design(params, rate_hz)``: the second-order sections of one pass.
+    """
+
+    stage: str
+    design: Callable[[P, float], Cascade]
+
+    def filtered(self, x: Floats, rate_hz: float, params: P) -> Floats:
+        """Return the filtered samples; padded by the length of the 1 % response."""
+        pad = _response_samples(self.design, params, rate_hz)
+        return run_sections(x, self.design(params, rate_hz), params.passes, params.edges, pad)
+
+    def gain_at(self, params: P, rate_hz: float, freq_hz: ArrayLike) -> Floats:
+        """Return the gain in amplitude after all passes, measured from the designed sections."""
+        return gain(self.design(params, rate_hz), freq_hz, rate_hz, params.passes)
+
+    def response_s(self, params: P, rate_hz: Fraction) -> Fraction:
+        """Return how long the response stays above 1 %, to either side; see `response_samples`."""
+        return _response_samples(self.design, params, float(rate_hz)) / rate_hz
+
+    def context(self, params: P, given: SignalSpec) -> Reach:
+        """Return how far back, and both ways how far ahead, a moment depends on the input."""
+        if given.rate_hz is None:
+            raise ValueError("the rate must be known")
+        rate_hz = float(given.rate_hz)
+        samples = _reach_samples(self.design, params, rate_hz)
+        widen_s = self._widen_s(params, given.rate_hz)
+        if params.passes == "forward":
+            return Reach(max(widen_s, samples / given.rate_hz), Fraction(0))
+        pad = _response_samples(self.design, params, rate_hz)
+        span_s = max(widen_s, (samples + pad) / given.rate_hz)
+        return Reach(span_s, span_s)
+
+    def response(self) -> Response:
+        """Return what the stage does away from the ends of a piece."""
+        return Response(gain=self._gain, mask=self.mask)
+
+    def mask(self, params: P, signal: Signal) -> Signal:
+        """Widen the masks by the filter's response, and mask the ends of the piece."""
+        widen_s = self._widen_s(params, signal.rate_hz)
+        before_s = widen_s if params.passes == "both_ways" else Fraction(0)
+        return signal.widened(before_s, widen_s).excluding_edges(before_s, widen_s)
+
+    def run(self, params: P, signal: Signal) -> Signal:
+        """Filter one signal through its masks, widen them, and mask the ends of its piece."""
+        require_finite(signal, self.stage)
+        filtered = self.filtered(signal.x, float(signal.rate_hz), params)
+        return self.mask(params, signal.with_samples(filtered))
+
+    def _gain(self, params: P, given: SignalSpec, freq_hz: Floats) -> Floats | Complex:
+        assert given.rate_hz is not None, "it is asked for once the rate is known"
+        rate_hz = float(given.rate_hz)
+        return response(self.design(params, rate_hz), freq_hz, rate_hz, params.passes)
+
+    def _widen_s(self, params: P, rate_hz: Fraction) -> Fraction:
+        return self.response_s(params, rate_hz) if params.widen is None else exact(params.widen)

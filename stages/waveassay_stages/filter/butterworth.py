@@ -1,30 +1,22 @@
 """Butterworth high-pass, low-pass or band-pass, run both ways or forward."""
 
-from fractions import Fraction
 from functools import lru_cache
-from typing import Annotated, Any, Literal, Self
+from typing import Annotated, Literal, Self
 
 import numpy as np
-from numpy.typing import ArrayLike
 from pydantic import Field, model_validator
 
 from waveassay.contract import (
-    REACH_TOLERANCE,
     Derived,
     Findings,
     Floats,
     Hertz,
     Kind,
     Params,
-    Reach,
-    Response,
     Seconds,
-    Signal,
     SignalSpec,
     Stage,
-    exact,
 )
-from waveassay_stages._finite import require_finite
 from waveassay_stages.filter import _iir
 
 #: Cut-offs below this share of the Nyquist frequency are refused: there, the coefficients' own
@@ -124,9 +116,7 @@ def butterworth(x: Floats, rate_hz: float, params: ButterworthParams) -> Floats:
     D. A. Winter, Biomechanics and Motor Control of Human Movement, 4th ed., section 3.4, 2009
     (the correction for two passes; from memory).
     """
-    filters = design(params, rate_hz)
-    pad = _response_samples(params, rate_hz)
-    return _iir.run_sections(x, filters, params.passes, params.edges, pad)
+    return _FILTER.filtered(x, rate_hz, params)
 
 
 def prototype_poles(order: int) -> list[complex]:
@@ -196,19 +186,9 @@ def design(params: ButterworthParams, rate_hz: float) -> _iir.Cascade:
     return _iir.cascade(sections, to_z(1j * centre))
 
 
-def gain_at(params: ButterworthParams, rate_hz: float, freq_hz: ArrayLike) -> Floats:
-    """Return the gain in amplitude after all passes, measured from the designed sections."""
-    return _iir.gain(design(params, rate_hz), freq_hz, rate_hz, params.passes)
-
-
-@lru_cache(maxsize=256)
-def _response_samples(params: ButterworthParams, rate_hz: float) -> int:
-    return _iir.response_samples(design(params, rate_hz), params.passes)
-
-
-def response_s(params: ButterworthParams, rate_hz: Fraction) -> Fraction:
-    """Return how long the response stays above 1 %, to either side; see `response_samples`."""
-    return _response_samples(params, float(rate_hz)) / rate_hz
+_FILTER: _iir.Filter[ButterworthParams] = _iir.Filter("filter.butterworth", design)
+gain_at, response_s = _FILTER.gain_at, _FILTER.response_s
+run, context = _FILTER.run, _FILTER.context
 
 
 def spec(params: ButterworthParams, given: SignalSpec, findings: Findings) -> SignalSpec:
@@ -236,44 +216,6 @@ def spec(params: ButterworthParams, given: SignalSpec, findings: Findings) -> Si
     return given.passing(params.high_pass, params.low_pass, length_s)
 
 
-def _widen_s(params: ButterworthParams, rate_hz: Fraction) -> Fraction:
-    return response_s(params, rate_hz) if params.widen is None else exact(params.widen)
-
-
-def context(params: ButterworthParams, given: SignalSpec) -> Reach:
-    """Return how far back, and both ways how far ahead, a moment depends on the input."""
-    if given.rate_hz is None:
-        raise ValueError("the rate must be known")
-    rate_hz = float(given.rate_hz)
-    return _iir.reach(
-        design(params, rate_hz),
-        given.rate_hz,
-        params.passes,
-        _response_samples(params, rate_hz),
-        _widen_s(params, given.rate_hz),
-        REACH_TOLERANCE,
-    )
-
-
-def response_gain(params: ButterworthParams, given: SignalSpec, freq_hz: Floats) -> Any:
-    """Return the gain of all passes: real both ways, complex forward."""
-    assert given.rate_hz is not None, "it is asked for once the rate is known"
-    rate_hz = float(given.rate_hz)
-    return _iir.response(design(params, rate_hz), freq_hz, rate_hz, params.passes)
-
-
-def mask(params: ButterworthParams, signal: Signal) -> Signal:
-    """Widen the masks by the filter's response, and mask the ends of the piece."""
-    return _iir.masked(signal, params.passes, _widen_s(params, signal.rate_hz))
-
-
-def run(params: ButterworthParams, signal: Signal) -> Signal:
-    """Filter one signal through its masks, widen them, and mask the ends of its piece."""
-    require_finite(signal, "filter.butterworth")
-    filtered = butterworth(signal.x, float(signal.rate_hz), params)
-    return mask(params, signal.with_samples(filtered))
-
-
 def derive(params: ButterworthParams, given: SignalSpec) -> list[Derived]:
     """Return the gains measured at the cut-offs after all passes, and how long it rings."""
     if given.rate_hz is None:
@@ -297,7 +239,7 @@ STAGE = Stage(
     spec=spec,
     run=run,
     context=context,
-    response=Response(gain=response_gain, mask=mask),
+    response=_FILTER.response(),
     derive=derive,
     example={"high_pass": "0.5 Hz", "low_pass": "40 Hz"},
     source="S. Butterworth, On the theory of filter amplifiers, Wireless Engineer 7, 536-541, 1930",

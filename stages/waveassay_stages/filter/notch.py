@@ -1,30 +1,22 @@
 """Notch at the mains frequency and its harmonics, run both ways or forward."""
 
-from fractions import Fraction
 from functools import lru_cache
-from typing import Annotated, Any, Literal, Self
+from typing import Annotated, Literal, Self
 
 import numpy as np
-from numpy.typing import ArrayLike
 from pydantic import Field, model_validator
 
 from waveassay.contract import (
-    REACH_TOLERANCE,
     Derived,
     Findings,
     Floats,
     Hertz,
     Kind,
     Params,
-    Reach,
-    Response,
     Seconds,
-    Signal,
     SignalSpec,
     Stage,
-    exact,
 )
-from waveassay_stages._finite import require_finite
 from waveassay_stages.filter import _iir
 
 
@@ -103,9 +95,7 @@ def notch(x: Floats, rate_hz: float, params: NotchParams) -> Floats:
     S. J. Orfanidis, Introduction to Signal Processing, section 11.3, 1996. The correction for two
     passes: derived.
     """
-    filters = design(params, rate_hz)
-    pad = _response_samples(params, rate_hz)
-    return _iir.run_sections(x, filters, params.passes, params.edges, pad)
+    return _FILTER.filtered(x, rate_hz, params)
 
 
 def notched_hz(params: NotchParams, rate_hz: float) -> tuple[float, ...]:
@@ -143,19 +133,9 @@ def design(params: NotchParams, rate_hz: float) -> _iir.Cascade:
     return _iir.cascade(sections, complex(1))
 
 
-def gain_at(params: NotchParams, rate_hz: float, freq_hz: ArrayLike) -> Floats:
-    """Return the gain in amplitude after all passes, measured from the designed sections."""
-    return _iir.gain(design(params, rate_hz), freq_hz, rate_hz, params.passes)
-
-
-@lru_cache(maxsize=256)
-def _response_samples(params: NotchParams, rate_hz: float) -> int:
-    return _iir.response_samples(design(params, rate_hz), params.passes)
-
-
-def response_s(params: NotchParams, rate_hz: Fraction) -> Fraction:
-    """Return how long the response stays above 1 %, to either side; see `response_samples`."""
-    return _response_samples(params, float(rate_hz)) / rate_hz
+_FILTER: _iir.Filter[NotchParams] = _iir.Filter("filter.notch", design)
+gain_at, response_s = _FILTER.gain_at, _FILTER.response_s
+run, context = _FILTER.run, _FILTER.context
 
 
 def spec(params: NotchParams, given: SignalSpec, findings: Findings) -> SignalSpec:
@@ -172,44 +152,6 @@ def spec(params: NotchParams, given: SignalSpec, findings: Findings) -> SignalSp
         "harmonics" if highest_hz > params.line else "line",
     )
     return given
-
-
-def _widen_s(params: NotchParams, rate_hz: Fraction) -> Fraction:
-    return response_s(params, rate_hz) if params.widen is None else exact(params.widen)
-
-
-def context(params: NotchParams, given: SignalSpec) -> Reach:
-    """Return how far back, and both ways how far ahead, a moment depends on the input."""
-    if given.rate_hz is None:
-        raise ValueError("the rate must be known")
-    rate_hz = float(given.rate_hz)
-    return _iir.reach(
-        design(params, rate_hz),
-        given.rate_hz,
-        params.passes,
-        _response_samples(params, rate_hz),
-        _widen_s(params, given.rate_hz),
-        REACH_TOLERANCE,
-    )
-
-
-def response_gain(params: NotchParams, given: SignalSpec, freq_hz: Floats) -> Any:
-    """Return the gain of all passes: real both ways, complex forward."""
-    assert given.rate_hz is not None, "it is asked for once the rate is known"
-    rate_hz = float(given.rate_hz)
-    return _iir.response(design(params, rate_hz), freq_hz, rate_hz, params.passes)
-
-
-def mask(params: NotchParams, signal: Signal) -> Signal:
-    """Widen the masks by the filter's response, and mask the ends of the piece."""
-    return _iir.masked(signal, params.passes, _widen_s(params, signal.rate_hz))
-
-
-def run(params: NotchParams, signal: Signal) -> Signal:
-    """Filter one signal through its masks, widen them, and mask the ends of its piece."""
-    require_finite(signal, "filter.notch")
-    filtered = notch(signal.x, float(signal.rate_hz), params)
-    return mask(params, signal.with_samples(filtered))
 
 
 def derive(params: NotchParams, given: SignalSpec) -> list[Derived]:
@@ -230,7 +172,7 @@ STAGE = Stage(
     spec=spec,
     run=run,
     context=context,
-    response=Response(gain=response_gain, mask=mask),
+    response=_FILTER.response(),
     derive=derive,
     example={"line": "50 Hz"},
     source="S. J. Orfanidis, Introduction to Signal Processing, section 11.3, 1996",
