@@ -19,21 +19,24 @@ from waveassay.execute.store import Store
 from waveassay.plan.passage import Lane, Passage
 from waveassay.plan.precision import Held
 from waveassay.plan.tasks import Task, overlapping
-from waveassay.recording import Facts, open_recording
+from waveassay.recording import Digital, Facts, open_recording
 
 FILE = "signals.arrays"
 #: In a file's facts: lanes with samples outside the digital limits of their header.
 OUTSIDE = "outside"
 
 Window = tuple[Fraction, Fraction]
+#: Samples as the file has them, and which of them.
+Stored = tuple[Digital, int]
 
 
 def read_from_file(
     passage: Passage, path: Path, facts: Facts, piece_no: int, windows: Mapping[int, Window]
-) -> tuple[dict[int, Floats], set[int]]:
+) -> tuple[dict[int, Stored], set[int]]:
     """Read lanes from the recording, each over its own window, in one pass for equal windows.
 
-    Returns the samples, and the lanes with samples outside the digital limits of their header.
+    Returns where the samples of each are, and the lanes with samples outside the digital limits of
+    their header.
 
     Parameters
     ----------
@@ -42,12 +45,12 @@ def read_from_file(
     groups: dict[Window, list[int]] = {}
     for index, window in windows.items():
         groups.setdefault(window, []).append(index)
-    read: dict[int, Floats] = {}
+    read: dict[int, Stored] = {}
     with open_recording(path, facts=facts, truncated="read") as recording:
         for (start_s, stop_s), lanes in groups.items():
             channels = [passage.lanes[index].channel for index in lanes]
-            arrays = recording.read(channels, piece_no, start_s, stop_s)
-            read.update(zip(lanes, arrays, strict=True))
+            digital = recording.read_digital(channels, piece_no, start_s, stop_s)
+            read.update({index: (digital, place) for place, index in enumerate(lanes)})
         outside = {i for i in read if recording.out_of_range.get(passage.lanes[i].channel)}
     return read, outside
 
@@ -63,12 +66,9 @@ def _as_signal(lane: Lane, piece: Interval, start_s: Fraction, x: Floats) -> Sig
     rate_hz = lane.spec.rate_hz
     assert rate_hz is not None, "a recording's rates are known"
     first = ceil((start_s - piece.start_s) * rate_hz)
-    samples = np.ascontiguousarray(x, np.float64)
     if lane.scale != 1.0:
-        samples = samples * lane.scale
-    return Signal(
-        lane.signal, lane.spec.unit, rate_hz, piece.start_s + first / rate_hz, samples, piece
-    )
+        x = x * lane.scale
+    return Signal(lane.signal, lane.spec.unit, rate_hz, piece.start_s + first / rate_hz, x, piece)
 
 
 def prepared_group(signal: Signal) -> Group:
@@ -145,7 +145,7 @@ class SignalSource:
             for move_no, window in windows.items():
                 if not self._is_prepared(lane_no, move_no):
                     from_file[lane_no] = self._within(window)
-        read: dict[int, Floats] = {}
+        read: dict[int, Stored] = {}
         if from_file:
             read, outside = read_from_file(
                 self.passage, self.path, self.facts, self.piece_no, from_file
@@ -156,7 +156,8 @@ class SignalSource:
             raw: Signal | None = None
             if lane_no in read:
                 lane, piece = self.passage.lanes[lane_no], self.passage.pieces[self.piece_no]
-                raw = _as_signal(lane, piece, from_file[lane_no][0], read.pop(lane_no))
+                digital, place = read[lane_no]
+                raw = _as_signal(lane, piece, from_file[lane_no][0], digital.physical(place))
             for move_no, window in windows.items():
                 if raw is not None and not self._is_prepared(lane_no, move_no):
                     signal = raw

@@ -91,7 +91,8 @@ class Recording:
         digital = self.read_digital(signals, piece, start_s, stop_s)
         # One array for all: of a large one, the system gives large pages.
         made = np.empty(sum(stored.size for stored in digital.stored))
-        parts = np.split(made, list(accumulate(stored.size for stored in digital.stored))[:-1])
+        ends = accumulate(stored.size for stored in digital.stored)
+        parts: list[Floats] = list(np.split(made, list(ends)[:-1]))
         for place, part in enumerate(parts):
             digital.physical(place, part)
         return parts[: len(digital)]
