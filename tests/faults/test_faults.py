@@ -238,23 +238,24 @@ def test_a_folder_that_may_not_be_written_is_said(made: Path, tmp_path: Path) ->
     assert "Traceback" not in done.stderr
 
 
+def children_of(process: int) -> list[int]:
+    """Return the processes that a process has started and that are still there."""
+    found = subprocess.run(["pgrep", "-P", str(process)], capture_output=True, text=True)
+    return [int(child) for child in found.stdout.split()]
+
+
 def test_a_killed_worker_fails_its_own_recordings_and_the_rest_go_on(
     made: Path, undisturbed: str, tmp_path: Path
 ) -> None:
     """The kernel's out-of-memory killer, as SIGKILL of one worker while it works."""
     process = start(made, tmp_path)
     wait_until(results_stored(tmp_path, 1))
-    children = subprocess.run(
-        ["pgrep", "-P", str(process.pid)], capture_output=True, text=True, check=True
-    )
-    workers = []
-    for child in children.stdout.split():
-        try:
-            text = Path(f"/proc/{child}/cmdline").read_bytes().decode()
-        except OSError:
-            continue
-        if "spawn_main" in text:
-            workers.append(int(child))
+    workers = [
+        worker
+        for child in children_of(process.pid)
+        if b"forkserver" in Path(f"/proc/{child}/cmdline").read_bytes()
+        for worker in children_of(child)
+    ]
     assert workers
     os.kill(workers[0], signal.SIGKILL)
     out, told = process.communicate(timeout=120)

@@ -198,9 +198,13 @@ def _do(bench: Bench, recording: str, task: Task) -> None:
         bench.prepared.know(task.key)
 
 
+#: What nearly every job imports, and takes far longer to import than to use.
+SLOW_MODULES = ("pyarrow.parquet", "scipy.fft", "scipy.signal")
+
+
 def warm_up() -> None:
-    """Import what jobs need, while the first job is being handed over."""
-    for module in ("pyarrow.parquet", "scipy.fft", "scipy.signal"):
+    """Import what jobs need, before anything is timed."""
+    for module in SLOW_MODULES:
         import_module(module)
 
 

@@ -1,18 +1,23 @@
 """Long-lived worker processes with the libraries loaded, each doing one job at a time.
 
-Starting a process and importing scipy costs most of a second; a job often takes less. So workers
-are started first of all, and load their libraries while Snakemake is being imported.
+Starting a process and importing scipy costs most of a second; a job often takes less. So one
+process loads the libraries while Snakemake is being imported, and every worker is forked from it.
 """
 
 import concurrent.futures
 import multiprocessing
 import os
 import signal
+import sys
 import threading
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from concurrent.futures.process import BrokenProcessPool
+from contextlib import contextmanager
+from multiprocessing import forkserver
 from multiprocessing.connection import wait
 from pathlib import Path
+
+from waveassay.execute import work
 
 #: A job is a process; threads in it would only get in each other's way.
 THREAD_VARIABLES = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
@@ -33,18 +38,20 @@ class Workers:
         self._idle: list[concurrent.futures.ProcessPoolExecutor] = []
         self._all: list[concurrent.futures.ProcessPoolExecutor] = []
         self._cancelled = False
+        self._context = multiprocessing.get_context("forkserver")
+        self._context.set_forkserver_preload([work.__name__, *work.SLOW_MODULES])
 
     def start(self, count: int) -> None:
         """Start workers ahead of their jobs."""
         for _ in range(count):
-            pool = self._new()
-            pool.submit(_nothing)  # a pool has no process before it has something to do
-            self._idle.append(pool)
+            self._idle.append(self._new())
 
     def _new(self) -> concurrent.futures.ProcessPoolExecutor:
         pool = concurrent.futures.ProcessPoolExecutor(
-            1, mp_context=multiprocessing.get_context("spawn"), initializer=_start_worker
+            1, mp_context=self._context, initializer=_start_worker
         )
+        with _no_main_module():
+            pool.submit(_nothing)  # a pool has no process before it has something to do
         self._all.append(pool)
         return pool
 
@@ -73,11 +80,14 @@ class Workers:
         future.add_done_callback(finished)
 
     def shutdown(self) -> None:
-        """Let the workers go when they have done what they are at."""
-        for pool in self._all:
-            pool.shutdown(wait=False)
-        for pool in self._all:
-            pool.shutdown(wait=True)
+        """Let the workers go when they have done what they are at, and wait for their ends."""
+        ending = [threading.Thread(target=pool.shutdown) for pool in self._all]
+        for thread in ending:
+            thread.start()
+        for thread in ending:
+            thread.join()
+        # Else nobody waits for the process they were forked from, nor counts what they all took.
+        forkserver._forkserver._stop()  # type: ignore[attr-defined]
 
     def cancel(self) -> None:
         """End the workers at once: Ctrl-C, or a fault of the scheduler."""
@@ -93,6 +103,20 @@ class Workers:
 at_hand: list[Workers] = []
 
 
+@contextmanager
+def _no_main_module() -> Iterator[None]:
+    """Hide the program from new processes, which would run its imports for nothing."""
+    main = sys.modules["__main__"]
+    known = {name: getattr(main, name) for name in ("__spec__", "__file__") if hasattr(main, name)}
+    main.__spec__ = None
+    main.__file__ = None
+    try:
+        yield
+    finally:
+        for name, value in known.items():
+            setattr(main, name, value)
+
+
 def _start_worker() -> None:
     """Prepare a worker: it dies with its parent, and leaves Ctrl-C to it."""
 
@@ -105,9 +129,6 @@ def _start_worker() -> None:
     threading.Thread(target=die_with_parent, daemon=True).start()
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     signal.signal(signal.SIGTERM, signal.SIG_DFL)
-    from waveassay.execute import work
-
-    work.warm_up()
 
 
 def _nothing() -> None:
@@ -115,6 +136,4 @@ def _nothing() -> None:
 
 
 def _run(folder: str, job: str) -> None:
-    from waveassay.execute import work
-
     work.run_job(Path(folder), job)
