@@ -152,9 +152,10 @@ def test_the_profile_for_slurm_asks_for_memory_time_and_another_try(tmp_path: Pa
 
 
 def test_results_that_cannot_be_seen_here_are_a_fault_of_the_disk(tmp_path: Path) -> None:
-    (tmp_path / "outcomes").mkdir()
-    plan = {"store": str(tmp_path / "store"), "jobs": {"a": [["p01", "f" * 64]]}}
-    (tmp_path / "plan.json").write_text(json.dumps(plan))
+    for name in ("outcomes", "tasks"):
+        (tmp_path / name).mkdir()
+    (tmp_path / "plan.json").write_text(json.dumps({"store": str(tmp_path / "store")}))
+    (tmp_path / "tasks" / "a.json").write_text(json.dumps({"tasks": [["p01", "f" * 64]]}))
     known = Profile(tmp_path / "config.yaml", "slurm", 10, latency_wait_s=0)
     told = Traces(tmp_path, known).missing("a") or ""
     assert "every node sees" in (machine_problem({"a": told}) or "")

@@ -9,7 +9,7 @@ from waveassay.cli.screen import console, plural
 from waveassay.contract import SignalError
 from waveassay.plan.passage import Passage
 from waveassay.plan.recordings import find_recordings
-from waveassay.recipe.model import Recipe
+from waveassay.plan.routes import Routes
 
 
 def check(argument: str, arguments: Sequence[Path], *, plan: bool = False) -> int:
@@ -36,23 +36,22 @@ def check(argument: str, arguments: Sequence[Path], *, plan: bool = False) -> in
         return 0
     found = find_recordings(arguments)
     planned: list[Passage] = []
-    failing = sum(not _would_run(recipe, item.name, item.path, planned) for item in found)
+    routes = Routes(recipe)
+    failing = sum(not _would_run(routes, item.name, item.path, planned) for item in found)
     if plan:
         show_plan(from_passages(planned))
     screen.print(f"{len(found) - failing} of {plural(len(found), 'recording')} would run.")
     return 3 if failing else 0
 
 
-def _would_run(recipe: Recipe, name: str, path: Path, planned: list[Passage]) -> bool:
-    from waveassay.plan.columns import columns_by_chain
+def _would_run(routes: Routes, name: str, path: Path, planned: list[Passage]) -> bool:
     from waveassay.plan.passage import passages
     from waveassay.recording import read_facts
 
     screen = console()
     try:
-        ways, warnings = passages(
-            recipe, columns_by_chain(recipe), name, "", read_facts(path, truncated=recipe.truncated)
-        )
+        facts = read_facts(path, truncated=routes.recipe.truncated)
+        ways, warnings = passages(routes, name, "", facts)
     except SignalError as error:
         screen.print(f"would fail  {name}: {error}")
         return False

@@ -2,7 +2,7 @@
 
 import json
 import shutil
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from functools import lru_cache
 from importlib.metadata import version
 from pathlib import Path
@@ -12,9 +12,9 @@ from waveassay.contract import SignalError
 from waveassay.contract.digests import digest
 from waveassay.execute.stamps import require_unchanged, stamp_of
 from waveassay.execute.store import Store
-from waveassay.execute.work import JOBS_FILE, OUTCOMES, PLAN_FILE
+from waveassay.execute.work import JOBS_FILE, OUTCOMES, PLAN_FILE, TASKS
 from waveassay.plan.jobs import Job
-from waveassay.plan.plan import Plan, ReadRecording
+from waveassay.plan.plan import Plan, PlannedRecording, ReadRecording
 from waveassay.plan.recordings import Found
 from waveassay.provenance.environment import environment_id
 from waveassay.provenance.files import machine_errors, write_text
@@ -65,30 +65,40 @@ def write_work(
     identifier = environment_id(env)
     # Runs of several places may share a store, and their folders a name.
     folder = store.root / "work" / f"{run.name}-{digest(str(run))[:8]}"
-    recordings = {
-        item.found.name: {
-            "path": str(item.found.path.resolve()),
-            "sha256": item.read.sha256,
-            "facts": item.read.facts.to_json(),
-            "stamp": item.read.stamp,
-        }
-        for item in plan.recordings
-        if item.read is not None
-    }
     work = {
         "recipe": plan.recipe.text,
         "recipe_path": plan.recipe.path,
         "store": str(store.root),
         "environment": identifier,
-        "recordings": recordings,
-        "jobs": {job.identifier: [[t.recording, t.key] for t in job.tasks] for job in jobs},
     }
     with machine_errors(folder):
         shutil.rmtree(folder, ignore_errors=True)
-        for name in (OUTCOMES, "jobs"):
+        for name in (OUTCOMES, TASKS, "jobs"):
             (folder / name).mkdir(parents=True)
     text = json.dumps(env, sort_keys=True, indent=1)
     write_text(store.root / "environments" / f"{identifier}.json", text)
     write_text(folder / PLAN_FILE, json.dumps(work))
-    write_text(folder / JOBS_FILE, json.dumps({job.identifier: job.needs for job in jobs}))
+    items = {item.found.name: item for item in plan.recordings}
+    for job in jobs:
+        write_text(folder / TASKS / f"{job.identifier}.json", json.dumps(_job(job, items)))
+    order = {job.identifier: [job.needs, round(job.path_s, 3)] for job in jobs}
+    write_text(folder / JOBS_FILE, json.dumps(order))
     return folder
+
+
+def _job(job: Job, items: Mapping[str, PlannedRecording]) -> dict[str, Any]:
+    """Return what a worker must know of a job: its tasks, and what was read of its recordings.
+
+    Of other recordings it learns nothing, so a job costs the same however many there are.
+    """
+    recordings = {}
+    for name in dict.fromkeys(task.recording for task in job.tasks):
+        item = items[name]
+        assert item.read is not None, "what was not read has no tasks"
+        recordings[name] = {
+            "path": str(item.found.path.resolve()),
+            "sha256": item.read.sha256,
+            "facts": item.read.facts.to_json(),
+            "stamp": item.read.stamp,
+        }
+    return {"tasks": [[t.recording, t.key] for t in job.tasks], "recordings": recordings}

@@ -22,16 +22,17 @@ from waveassay.execute.rows import make_rows
 from waveassay.execute.signals import SignalSource, prepared_keys
 from waveassay.execute.stamps import Stamp, require_unchanged
 from waveassay.execute.store import MissingArtefactError, Store
-from waveassay.plan.columns import FeatureColumn, columns_by_chain
 from waveassay.plan.passage import Passage, passages
+from waveassay.plan.routes import Routes
 from waveassay.plan.tasks import Task, tasks_of
 from waveassay.provenance.files import write_text
 from waveassay.recipe.check import check_recipe
-from waveassay.recipe.model import Recipe
 from waveassay.recipe.problems import RecipeError
 from waveassay.recording import Facts
 
-PLAN_FILE, JOBS_FILE, OUTCOMES = "plan.json", "jobs.json", "outcomes"
+PLAN_FILE, JOBS_FILE = "plan.json", "jobs.json"
+#: What is to be done in each job, and which recordings failed in it.
+TASKS, OUTCOMES = "tasks", "outcomes"
 
 
 @dataclass(frozen=True)
@@ -57,39 +58,37 @@ class Ready:
 
 
 class Bench:
-    """All that workers need to know, read from a work folder."""
+    """What workers need to know, read from a work folder: of the run, and of one job at a time."""
 
     def __init__(self, folder: Path) -> None:
         self.folder = folder
         plan = json.loads((folder / PLAN_FILE).read_text(encoding="utf-8"))
         self.environment: str = plan["environment"]
         self.store = Store(Path(plan["store"]))
-        self._plan: dict[str, Any] = plan
+        self._plan: dict[str, str] = plan
+        self._recordings: dict[str, Any] = {}
         self._ready: dict[str, Ready] = {}
 
     @cached_property
-    def recipe(self) -> Recipe:
-        """The recipe, checked again from its text."""
+    def routes(self) -> Routes:
+        """The routes of the recipe, which is checked again from its text."""
         checked = check_recipe(self._plan["recipe"], self._plan["recipe_path"])
         if checked.recipe is None:
             raise RecipeError(checked.problems)
-        return checked.recipe
+        return Routes(checked.recipe)
 
-    @cached_property
-    def columns(self) -> dict[str, tuple[FeatureColumn, ...]]:
-        """Columns of every chain's tables."""
-        return columns_by_chain(self.recipe)
-
-    def tasks_of_job(self, job: str) -> list[tuple[str, str]]:
-        """Return a job's tasks: (recording, key)."""
-        return [(recording, key) for recording, key in self._plan["jobs"][job]]
+    def take_up(self, job: str) -> list[tuple[str, str]]:
+        """Read what is to be done in a job; return its tasks: (recording, key)."""
+        known = json.loads((self.folder / TASKS / f"{job}.json").read_text(encoding="utf-8"))
+        self._recordings = known["recordings"]
+        return [(recording, key) for recording, key in known["tasks"]]
 
     def ready(self, recording: str) -> Ready:
-        """Work out a recording's passages and tasks, as the planner did."""
+        """Work out the passages and tasks of a recording of the job, as the planner did."""
         if recording not in self._ready:
-            known = self._plan["recordings"][recording]
+            known = self._recordings[recording]
             facts = Facts.from_json(known["facts"])
-            ways, _ = passages(self.recipe, self.columns, recording, known["sha256"], facts)
+            ways, _ = passages(self.routes, recording, known["sha256"], facts)
             tasks = {task.key: task for way in ways for task in tasks_of(way)}
             size, changed, touched = known["stamp"]
             self._ready.clear()  # jobs take recordings one after another
@@ -132,7 +131,7 @@ def run_job(folder: Path, job: str) -> None:
     keep_freed_memory()
     bench = _bench(folder, (folder / PLAN_FILE).stat().st_mtime_ns)
     failures: dict[str, Failure] = {}
-    for recording, key in bench.tasks_of_job(job):
+    for recording, key in bench.take_up(job):
         if recording in failures or bench.store.has(key):
             continue
         task: Task | None = None

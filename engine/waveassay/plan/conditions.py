@@ -15,6 +15,7 @@ The rules, in one place:
 """
 
 from bisect import bisect_right
+from collections import Counter
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import datetime
@@ -180,9 +181,10 @@ def _paired(
                 "with which: each they must come in turn"
             )
         pairs.append((begin_s, ends[index]))
-    used = [end_s for _, end_s in pairs]
+    used = {end_s for _, end_s in pairs}
+    counts = Counter(ends)
     for end_s in ends:
-        if end_s not in used or ends.count(end_s) > 1:
+        if end_s not in used or counts[end_s] > 1:
             raise _Unresolved(
                 f"condition {name}: '{last}' at {_time(end_s)} ends nothing that '{first}' has "
                 "started; with which: each they must come in turn"

@@ -8,12 +8,12 @@ from functools import cached_property
 from waveassay.contract import Condition, Interval, SignalError, SignalSpec
 from waveassay.plan.columns import FeatureColumn
 from waveassay.plan.conditions import resolve_conditions
-from waveassay.plan.labels import match_signals, unit_scale
-from waveassay.plan.program import Program, compile_program
+from waveassay.plan.labels import unit_scale
+from waveassay.plan.program import Program
+from waveassay.plan.routes import Route, Routes
 from waveassay.plan.stretches import Stretch, bounds_s
 from waveassay.plan.windows import Form
-from waveassay.recipe.fold import fold
-from waveassay.recipe.model import Chain, Recipe
+from waveassay.recipe.model import Chain
 from waveassay.recording import Facts, SignalFacts
 
 
@@ -36,19 +36,28 @@ class Lane:
     channel: int
     label: str
     scale: float
-    spec: SignalSpec
-    program: Program
+    route: Route
     borders_s: tuple[tuple[Fraction, ...], ...]
+
+    @property
+    def spec(self) -> SignalSpec:
+        """The signal as it is read."""
+        return self.route.spec
+
+    @property
+    def program(self) -> Program:
+        """What is to be done with it."""
+        return self.route.program
 
     def bounds_s(self, stretch: Stretch) -> tuple[Fraction, Fraction]:
         """Return this signal's own borders of a stretch."""
         borders = self.borders_s[stretch.piece]
         return borders[stretch.number], borders[stretch.number + 1]
 
-    @cached_property
+    @property
     def forms(self) -> tuple[Form, ...]:
         """How each pass over its samples is carried out."""
-        return tuple(Form(self.program, pass_no) for pass_no in range(self.program.passes))
+        return self.route.forms
 
 
 @dataclass(frozen=True)
@@ -82,15 +91,13 @@ class Passage:
 
 
 def passages(
-    recipe: Recipe,
-    columns: Mapping[str, tuple[FeatureColumn, ...]],
-    recording: str,
-    sha256: str,
-    facts: Facts,
+    routes: Routes, recording: str, sha256: str, facts: Facts
 ) -> tuple[tuple[Passage, ...], tuple[str, ...]]:
     """Return the recording's passage through every chain, and warnings about the recording.
 
-    ``columns`` are those of the recipe, see `columns_by_chain`.
+    Parameters
+    ----------
+    routes : of the recipe; what recordings share is worked out there once.
 
     Raises
     ------
@@ -98,21 +105,16 @@ def passages(
         When a signal or an annotation cannot be matched, a unit does not fit, or a stage refuses
         what the recording has (a band above its Nyquist frequency).
     """
+    recipe = routes.recipe
     conditions = resolve_conditions(
         recipe.conditions, facts.annotations, facts.start, facts.duration_s
     )
-    wanted = tuple(
-        dict.fromkeys(name for chain in recipe.chains.values() for name in chain.signals)
-    )
-    labels = [signal.label for signal in facts.signals]
-    matched = match_signals(recipe.signals, labels, wanted)
+    matched = routes.matched([signal.label for signal in facts.signals])
     warnings = list(facts.warnings)
     found: list[Passage] = []
     empty: list[str] = []
     for chain in recipe.chains.values():
-        passage = _passage(
-            recipe, chain, columns[chain.name], recording, sha256, facts, conditions, matched
-        )
+        passage = _passage(routes, chain, recording, sha256, facts, conditions, matched)
         if not passage.lanes:
             empty.append(chain.name)
         warnings.extend(passage.warnings)
@@ -123,9 +125,8 @@ def passages(
 
 
 def _passage(
-    recipe: Recipe,
+    routes: Routes,
     chain: Chain,
-    columns: tuple[FeatureColumn, ...],
     recording: str,
     sha256: str,
     facts: Facts,
@@ -134,34 +135,31 @@ def _passage(
 ) -> Passage:
     refusals: dict[str, list[str]] = {}
     warnings: dict[str, list[str]] = {}
-    planned: list[tuple[str, str, SignalFacts, float, SignalSpec, Program]] = []
+    planned: list[tuple[str, str, SignalFacts, float, Route]] = []
     for role in chain.signals:
-        rule = recipe.signals[role]
+        rule = routes.recipe.signals[role]
         for name, place in matched[role]:
             file_signal = facts.signals[place]
             scale = unit_scale(rule.unit, file_signal.unit, file_signal.label)
             spec = SignalSpec(name, rule.unit, rule.modality, file_signal.rate_hz)
-            folded = fold(chain, spec, rule=role)
-            for finding in folded.findings:
+            route = routes.route(chain, role, spec)
+            for finding in route.findings:
                 step = chain.steps[finding.step_index]
                 line = (step.places.get(finding.at) or step.places[""]).line
                 text = f"{chain.name}.{step.name} (line {line}): {finding.message}"
                 told = refusals if finding.severity == "error" else warnings
                 told.setdefault(text, []).append(name)
-            program = compile_program(chain, role, spec, folded)
-            planned.append((name, role, file_signal, scale, spec, program))
+            planned.append((name, role, file_signal, scale, route))
     if refusals:
         raise SignalError("; ".join(_with_signals(refusals)))
-    whole = any(program.whole_pieces() for *_, program in planned)
+    whole = any(route.program.whole_pieces() for *_, route in planned)
     lanes = []
-    for name, role, file_signal, scale, spec, program in planned:
-        for text in _short_pieces(chain, program, facts.pieces):
+    for name, role, file_signal, scale, route in planned:
+        for text in _short_pieces(chain, route.program, facts.pieces):
             warnings.setdefault(text, []).append(name)
-        step_s = program.grid_step_s
+        step_s = route.program.grid_step_s
         borders = tuple(bounds_s(piece, step_s, whole=whole) for piece in facts.pieces)
-        lanes.append(
-            Lane(name, role, file_signal.index, file_signal.label, scale, spec, program, borders)
-        )
+        lanes.append(Lane(name, role, file_signal.index, file_signal.label, scale, route, borders))
     return Passage(
         recording,
         sha256,
@@ -169,7 +167,7 @@ def _passage(
         facts.pieces,
         conditions,
         tuple(lanes),
-        columns,
+        routes.columns[chain.name],
         tuple(_with_signals(warnings)),
     )
 

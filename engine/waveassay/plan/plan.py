@@ -5,9 +5,9 @@ from dataclasses import dataclass
 
 from waveassay.contract import SignalError
 from waveassay.contract.digests import digest
-from waveassay.plan.columns import FeatureColumn, columns_by_chain
 from waveassay.plan.passage import Passage, passages
 from waveassay.plan.recordings import Found
+from waveassay.plan.routes import Routes
 from waveassay.plan.sources import engine, stage_source
 from waveassay.plan.tasks import Task, tasks_of
 from waveassay.recipe.model import Recipe
@@ -60,21 +60,16 @@ def make_plan(
     recipe: Recipe, found: Sequence[Found], read: Mapping[str, ReadRecording | SignalError]
 ) -> Plan:
     """Plan every recording; one that cannot be run carries its problem and stops no other."""
-    columns = columns_by_chain(recipe)
-    planned = (_planned(recipe, columns, item, read[item.name]) for item in found)
+    routes = Routes(recipe)
+    planned = (_planned(routes, item, read[item.name]) for item in found)
     return Plan(recipe, tuple(planned))
 
 
-def _planned(
-    recipe: Recipe,
-    columns: Mapping[str, tuple[FeatureColumn, ...]],
-    found: Found,
-    read: ReadRecording | SignalError,
-) -> PlannedRecording:
+def _planned(routes: Routes, found: Found, read: ReadRecording | SignalError) -> PlannedRecording:
     if isinstance(read, SignalError):
         return PlannedRecording(found, None, problem=str(read))
     try:
-        ways, warnings = passages(recipe, columns, found.name, read.sha256, read.facts)
+        ways, warnings = passages(routes, found.name, read.sha256, read.facts)
     except SignalError as error:
         return PlannedRecording(found, read, problem=str(error))
     tasks = tuple(task for way in ways for task in tasks_of(way))

@@ -12,7 +12,7 @@ from enum import StrEnum
 from fractions import Fraction
 from functools import cached_property
 
-from waveassay.contract import Kind, Reach, SignalSpec, Spec, Whole
+from waveassay.contract import Derived, Kind, Reach, SignalSpec, Spec, Whole
 from waveassay.plan.stretches import common_step_s
 from waveassay.recipe.fold import Folded, effective_source
 from waveassay.recipe.model import Chain, Step
@@ -68,12 +68,22 @@ class Move:
 
     def reach(self) -> Reach:
         """Return how much of its input a moment of its output depends on."""
+        return self._reach
+
+    @cached_property
+    def _reach(self) -> Reach:
         context = self.step.stage.context
         if callable(context) and not isinstance(context, Whole):
             reach = context(self.step.params, self.spec_in)
             if isinstance(reach, Reach):
                 return reach
         return NO_REACH
+
+    @cached_property
+    def derived(self) -> tuple[Derived, ...]:
+        """What follows from its parameters and the rate of what it takes."""
+        derive = self.step.stage.derive
+        return tuple(derive(self.step.params, self.spec_in)) if derive else ()
 
 
 @dataclass(frozen=True)
@@ -93,6 +103,15 @@ class Program:
 
     def kept_signals(self, pass_no: int) -> list[int]:
         """Return the moves whose signals a pass prepares for what comes after it, in order."""
+        if pass_no not in self._kept:
+            self._kept[pass_no] = self._find_kept(pass_no)
+        return self._kept[pass_no]
+
+    @cached_property
+    def _kept(self) -> dict[int, list[int]]:
+        return {}
+
+    def _find_kept(self, pass_no: int) -> list[int]:
         used: set[int] = set()
         for move in self.moves.values():
             source = move.source

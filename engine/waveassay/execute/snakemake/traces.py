@@ -10,7 +10,7 @@ from typing import Any
 
 from waveassay.execute.snakemake.profile import Profile
 from waveassay.execute.store import Store
-from waveassay.execute.work import OUTCOMES, PLAN_FILE
+from waveassay.execute.work import OUTCOMES, PLAN_FILE, TASKS
 
 _LOOK_S = 0.5
 _MOST_LINES = 40
@@ -35,18 +35,18 @@ class Traces:
         self._deadline = time.monotonic() + max(profile.latency_wait_s, 1.0)
 
     @cached_property
-    def _plan(self) -> dict[str, Any]:
-        known: dict[str, Any] = json.loads((self._folder / PLAN_FILE).read_text(encoding="utf-8"))
-        return known
+    def _store(self) -> Store:
+        return Store(Path(_read(self._folder / PLAN_FILE)["store"]))
 
     def missing(self, job: str) -> str | None:
         """Return what to say when a job that ended well left no outcome or result; else None."""
-        store = Store(Path(self._plan["store"]))
+        store = self._store
+        tasks = _read(self._folder / TASKS / f"{job}.json")["tasks"]
         while True:
             failed = self._failed_recordings(job)
             if failed is not None and all(
                 store.has(key)
-                for recording, key in self._plan["jobs"][job]
+                for recording, key in tasks
                 if recording not in failed and recording not in self._failed_elsewhere
             ):
                 return None
@@ -64,14 +64,13 @@ class Traces:
         os.listdir(path.parent)  # makes a network disk look again
         if not path.exists():
             return None
-        return {failure["recording"] for failure in json.loads(path.read_text(encoding="utf-8"))}
+        return {failure["recording"] for failure in _read(path)}
 
     @cached_property
     def _failed_elsewhere(self) -> set[str]:
         """Recordings that failed in any job: later jobs leave out what they then cannot do."""
         paths = (self._folder / OUTCOMES).glob("*.json")
-        outcomes = [json.loads(path.read_text(encoding="utf-8")) for path in paths]
-        return {failure["recording"] for outcome in outcomes for failure in outcome}
+        return {failure["recording"] for path in paths for failure in _read(path)}
 
     def why(self, job: str, said: str) -> str:
         """Return why a job failed: all that is known, and last a line for the user.
@@ -105,6 +104,10 @@ class Traces:
     def _clusters_log(self, job: str) -> list[str]:
         logs = list((self._folder / ".snakemake").glob(f"slurm_logs/*/{job}/*.log"))
         return _tail(max(logs, key=lambda path: path.stat().st_mtime)) if logs else []
+
+
+def _read(path: Path) -> Any:
+    return json.loads(path.read_text(encoding="utf-8"))
 
 
 def _tail(path: Path) -> list[str]:
