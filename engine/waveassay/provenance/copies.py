@@ -10,7 +10,7 @@ from types import TracebackType
 from waveassay.provenance.files import copy_file
 from waveassay.provenance.results import Output
 
-_THREADS = 4  # they wait for the disk more than they work
+_THREADS = 2  # one waits for the disk while one works; more would wait for the same folder
 _TOGETHER = 32  # files that a thread is given at once
 
 
