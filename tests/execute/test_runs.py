@@ -1,15 +1,24 @@
 """What a run computes, what it takes from the store, and what it leaves."""
 
 import csv
+import json
+import os
+from collections.abc import Callable
 from pathlib import Path
 
 import numpy as np
 import pytest
 
 from running import rows, run, write_eeg
-from waveassay.execute.run import RunOutcome
+from waveassay.execute.in_process import run_in_process
+from waveassay.execute.run import RunOutcome, run_recipe
+from waveassay.execute.runner import JobEvent
 from waveassay.plan import stretches
+from waveassay.plan.jobs import JobLength
+from waveassay.plan.recordings import find_recordings
+from waveassay.provenance import recording_digests
 from waveassay.provenance.log_check import verify_log
+from waveassay.recipe import check_recipe
 from waveassay.recording.facts import Annotation
 
 RECIPE = """\
@@ -224,6 +233,29 @@ def test_a_stored_result_that_was_changed_is_found_and_made_again(folder: Path) 
     assert first.results_digest != third.results_digest
 
 
+@pytest.mark.parametrize("name", ["epochs.parquet", "epochs.csv", "passage.json", "artefact.json"])
+@pytest.mark.parametrize("lost", [False, True])
+def test_a_stored_table_that_was_changed_or_lost_never_gets_into_a_run(
+    folder: Path, name: str, lost: bool
+) -> None:
+    first = run(RECIPE, [folder / "in"], folder / "out")
+    finished = {row["key"] for row in rows(first.folder, "steps") if row["step"] == "export.table"}
+    for path in (folder / "out" / "store" / "objects").glob(f"*/*/{name}"):
+        if path.parent.name in finished:
+            content = path.read_bytes()
+            path.unlink() if lost else path.write_bytes(b"!" + content[1:])
+    text = "# Another run, with nothing to compute.\n" + RECIPE
+    second = run(text, [folder / "in"], folder / "out")
+    if name == "artefact.json" and lost:  # then nothing is there, and all is made again
+        assert second.computed == 3
+    else:
+        assert {r.status for r in second.results} == {"failed"}
+        assert "stored result was changed" in second.results[0].message
+        assert not list(second.folder.glob("epochs/cortex/*"))
+        second = run(text, [folder / "in"], folder / "out")
+    assert second.results_digest == first.results_digest
+
+
 def test_a_condition_that_gives_nothing_is_warned_of(folder: Path) -> None:
     short = RECIPE.replace("length: 60 s", "length: 3 s")
     outcome = run(short, [folder / "in"], folder / "short")
@@ -242,6 +274,49 @@ def test_a_finished_run_that_was_changed_is_told_and_made_anew(folder: Path) -> 
     assert not second.already
     assert second.results_digest == first.results_digest
     assert any("changed after it was finished" in note for note in second.notes)
+
+
+def test_a_change_is_found_in_a_run_that_was_found_unchanged_before(
+    folder: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Files once checked are known by size and times; one of the same size was put in place."""
+    monkeypatch.setattr(recording_digests, "UNSETTLED_S", 0.0)
+    first = run(RECIPE, [folder / "in"], folder / "out")
+    for _ in range(2):
+        assert run(RECIPE, [folder / "in"], folder / "out").already
+    table = first.folder / "epochs" / "cortex" / "p1.parquet"
+    before = table.stat()
+    table.write_bytes(table.read_bytes()[:-1] + b"!")
+    os.utime(table, ns=(before.st_atime_ns, before.st_mtime_ns))
+    second = run(RECIPE, [folder / "in"], folder / "out")
+    assert not second.already
+    assert second.results_digest == first.results_digest
+    assert any(f"{first.folder.name} was changed" in note for note in second.notes)
+
+
+def test_a_worker_is_told_of_its_own_jobs_recordings_alone(folder: Path) -> None:
+    """What a job reads must not grow with the number of recordings."""
+    told: dict[str, set[str]] = {}
+
+    def look(folder: Path, workers: int, on_event: Callable[[JobEvent], None]) -> str | None:
+        common = json.loads((folder / "plan.json").read_text())
+        assert set(common) == {"recipe", "recipe_path", "store", "environment"}
+        for path in (folder / "tasks").iterdir():
+            known = json.loads(path.read_text())
+            told[path.stem] = set(known["recordings"])
+            assert told[path.stem] == {recording for recording, _ in known["tasks"]}
+        return run_in_process(folder, workers, on_event)
+
+    found = find_recordings([folder / "in"])
+    recipe = check_recipe(WITHOUT_CONDITIONS, "recipe.yaml").recipe
+    assert recipe is not None
+    outcome = run_recipe(
+        recipe, found, folder / "out", store_folder=None, workers=2, runner=look,
+        job_length=JobLength(0.001, 0.001, 100.0),
+    )  # fmt: skip
+    assert {r.status for r in outcome.results} == {"done"}
+    assert len(told) > 1
+    assert set.union(*told.values()) == {"p0", "p1", "p2"}
 
 
 def test_other_content_under_the_same_name_and_edition_is_told(folder: Path) -> None:

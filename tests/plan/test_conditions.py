@@ -1,5 +1,6 @@
 """Conditions are found where the recipe says, or the recording fails by name."""
 
+import time
 from datetime import datetime
 from fractions import Fraction
 from typing import Any
@@ -306,3 +307,20 @@ def test_a_time_of_day_is_the_first_one_after_the_start(
     else:
         assert 0 <= begin < 86_400
         assert (micros / 1e6 + begin) % 86_400 == pytest.approx(wanted_s, abs=1e-6)
+
+
+def test_thousands_of_pairs_are_found_in_about_the_time_of_as_many_lengths() -> None:
+    """A stimulus every few seconds of a night: the time must not grow with the square."""
+    events = [(text, 4 * k + at) for k in range(4000) for text, at in (("on", 1), ("off", 3))]
+    marks = notes(*events)
+    began_s = time.process_time()
+    lengths = found(
+        rule(start=note("on", which="each"), length="2 s"), marks, duration_s=Fraction(16_000)
+    )
+    between_s = time.process_time()
+    pairs = found(
+        rule(start=note("on", which="each"), end=note("off")), marks, duration_s=Fraction(16_000)
+    )
+    took_s = time.process_time() - between_s
+    assert pairs == lengths == [(4 * k + 1, 4 * k + 3) for k in range(4000)]
+    assert took_s < 20 * (between_s - began_s)

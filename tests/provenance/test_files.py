@@ -15,6 +15,7 @@ import pytest
 from waveassay.contract.errors import MachineError
 from waveassay.provenance.files import (
     PART_PREFIX,
+    copy_file,
     machine_errors,
     sha256_of,
     sweep,
@@ -197,3 +198,33 @@ def test_sha256_of_the_published_example(tmp_path: Path) -> None:
     assert sha256_of(tmp_path / "a") == (
         "ba7816bf8f01cfea414140de5dae2223b00361a396177a9cb410ff61f20015ad"
     )
+
+
+@pytest.mark.parametrize("size", [0, 1, 1 << 20, (1 << 20) + 7])
+@pytest.mark.parametrize("fails_at", [None, 0, 1])
+def test_a_copy_has_the_same_bytes_whatever_the_system_can_do(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, size: int, fails_at: int | None
+) -> None:
+    """The system copies, or cannot between these disks, or stops in between."""
+    source, target = tmp_path / "source", tmp_path / "target"
+    source.write_bytes(os.urandom(size))
+    calls: list[int] = []
+
+    def copy_range(taken: int, given: int, count: int) -> int:
+        if len(calls) == fails_at:
+            raise OSError(errno.EXDEV, "Invalid cross-device link")
+        calls.append(count)
+        return os.write(given, os.read(taken, min(count, 1000)))
+
+    monkeypatch.setattr(os, "copy_file_range", copy_range, raising=False)
+    copy_file(source, target)
+    assert target.read_bytes() == source.read_bytes()
+    target.write_bytes(b"changed")
+    assert source.stat().st_size == size  # not a link
+
+
+def test_a_copy_replaces_what_stood_there(tmp_path: Path) -> None:
+    (tmp_path / "target").write_bytes(b"longer than what comes")
+    (tmp_path / "source").write_bytes(b"short")
+    copy_file(tmp_path / "source", tmp_path / "target")
+    assert (tmp_path / "target").read_bytes() == b"short"

@@ -278,3 +278,23 @@ def test_a_killed_writer_leaves_a_log_that_is_continued(tmp_path: Path) -> None:
     log.append("resumed")
     assert log.lines >= 2
     assert verify_log(path, log.head, log.lines).sound
+
+
+def test_many_lines_at_once_are_as_many_one_by_one(tmp_path: Path) -> None:
+    together, single = Log(tmp_path / "a.jsonl", "me@here"), Log(tmp_path / "b.jsonl", "me@here")
+    facts = [{"recording": f"r{number}"} for number in range(5)]
+    together.append_all("recording", facts)
+    for known in facts:
+        single.append("recording", **known)
+    assert verify_log(together.path, together.head, 5).sound
+    kept = [
+        [
+            (line["sequence"], line["recording"])
+            for line in map(json.loads, log.path.read_text().splitlines())
+        ]
+        for log in (together, single)
+    ]
+    assert kept[0] == kept[1] == [(number + 1, f"r{number}") for number in range(5)]
+    with pytest.raises(ValueError, match="actor, time"):
+        together.append_all("recording", [{"fine": 1}, {"time": 2}, {"actor": 3}])
+    assert together.lines == 5

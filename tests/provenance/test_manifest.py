@@ -5,13 +5,15 @@ import json
 import os
 import shutil
 import subprocess
+import time
 from collections.abc import Callable
 from pathlib import Path
 
 import pytest
 
 from waveassay.contract.errors import RefusedError
-from waveassay.provenance.files import PART_PREFIX
+from waveassay.provenance import recording_digests
+from waveassay.provenance.files import PART_PREFIX, sha256_of
 from waveassay.provenance.log import Log
 from waveassay.provenance.manifest import (
     MANIFEST,
@@ -22,6 +24,7 @@ from waveassay.provenance.manifest import (
     write_manifest,
 )
 from waveassay.provenance.manifest_check import Difference, verify_manifest
+from waveassay.provenance.recording_digests import RecordingDigests
 
 CONTENT = {
     "recipe.source.yaml": "recipe: a\n",
@@ -281,3 +284,74 @@ def test_a_link_is_refused(tmp_path: Path) -> None:
         pytest.skip("links are not allowed here")
     with pytest.raises(RefusedError, match="plain file"):
         write_manifest(tmp_path, log.head)
+
+
+def test_a_digest_that_its_writer_knows_is_taken_and_another_content_is_found(
+    tmp_path: Path,
+) -> None:
+    before = fill(tmp_path)
+    (tmp_path / MANIFEST).unlink()
+    known = {entry.path: entry.sha256 for entry in before.files if entry.path.endswith(".parquet")}
+    assert write_manifest(tmp_path, before.log_head, known) == before
+    (tmp_path / MANIFEST).unlink()
+    (tmp_path / "averages/cortex/p03.parquet").write_text("other")
+    manifest = write_manifest(tmp_path, before.log_head, known)
+    assert manifest.results_digest == before.results_digest  # of what was to be written
+    assert found(tmp_path) == {("averages/cortex/p03.parquet", Difference.CHANGED)}
+
+
+class _Settled:
+    """Digests remembered of files that changed long ago, and how many were read."""
+
+    def __init__(self, folder: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+        self.read: list[Path] = []
+        self.folder = folder
+        now_ns = time.time_ns() + 3600 * 10**9
+        monkeypatch.setattr(time, "time_ns", lambda: now_ns)
+        monkeypatch.setattr(recording_digests, "sha256_of", self._sha256_of)
+
+    def _sha256_of(self, path: Path) -> str:
+        self.read.append(path)
+        return sha256_of(path)
+
+    def found(self, run: Path) -> set[tuple[str, Difference]]:
+        self.read.clear()
+        with RecordingDigests(self.folder, "run.sqlite") as digests:
+            return {(f.path, f.difference) for f in verify_manifest(run, digests.digest)}
+
+
+def test_unchanged_files_are_read_once_and_any_change_is_still_found(
+    run: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    settled = _Settled(tmp_path / "checked", monkeypatch)
+    assert settled.found(run) == set()
+    assert len(settled.read) == len(CONTENT) + 1
+    assert settled.found(run) == set()
+    assert settled.read == []
+    path = run / "epochs/cortex/site1/p03.parquet"
+    times = path.stat()
+    path.write_text("P03")  # the same size, and the time of its change is set back
+    os.utime(path, ns=(times.st_atime_ns, times.st_mtime_ns))
+    changed = {("epochs/cortex/site1/p03.parquet", Difference.CHANGED)}
+    assert settled.found(run) == changed
+    assert settled.read == [path]
+    assert settled.found(run) == changed  # remembered as it is, not as intact
+    path.unlink()
+    (run / "extra").write_text("x")
+    assert settled.found(run) == {
+        ("epochs/cortex/site1/p03.parquet", Difference.MISSING),
+        ("extra", Difference.ADDED),
+    }
+
+
+def test_a_file_renamed_over_another_of_the_same_size_is_found(
+    run: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    settled = _Settled(tmp_path / "checked", monkeypatch)
+    assert settled.found(run) == set()
+    one, two = run / "epochs/cortex/site1/p03.parquet", run / "epochs/cortex/site1/p04.parquet"
+    os.utime(two, ns=(one.stat().st_atime_ns, one.stat().st_mtime_ns))
+    two.rename(run / "kept")
+    one.rename(two)
+    (run / "kept").rename(one)
+    assert {d for _, d in settled.found(run)} == {Difference.SWAPPED}

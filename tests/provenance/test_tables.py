@@ -21,12 +21,14 @@ from hypothesis import strategies as st
 from waveassay.contract.errors import MachineError
 from waveassay.provenance.tables import (
     Column,
-    concat_parquet_to_csv,
+    concat_to_csv,
     parquet_writer,
     read_parquet,
+    row_count,
     table_of,
     write_csv,
     write_parquet,
+    write_short_csv,
 )
 
 COLUMNS = [
@@ -286,21 +288,48 @@ def test_many_parquet_files_become_the_csv_of_all_rows(tmp_path: Path) -> None:
     for i, (start, count) in enumerate([(0, 10), (10, 0), (10, 20_000), (20_010, 9_990)]):
         paths.append(tmp_path / f"{i}.parquet")
         write_parquet(paths[-1], table.slice(start, count))
-    assert concat_parquet_to_csv(paths, tmp_path / "all.csv") == 30_000
+    concat_to_csv(paths, tmp_path / "all.csv")
+    assert row_count(paths) == 30_000
     write_csv(tmp_path / "whole.csv", columns, table)
     assert (tmp_path / "all.csv").read_bytes() == (tmp_path / "whole.csv").read_bytes()
+
+
+def test_short_files_can_be_joined_as_text_with_the_same_bytes(tmp_path: Path) -> None:
+    columns, data = big(30_000)
+    table = table_of(columns, data)
+    parts = []
+    for i, (start, count) in enumerate([(0, 10), (10, 0), (10, 20_000), (20_010, 9_990 - 5_000)]):
+        path = tmp_path / f"{i}.parquet"
+        write_parquet(path, table.slice(start, count))
+        assert write_short_csv(path) == (count < 8_192)
+        parts.append(path.with_suffix(".csv") if count < 8_192 else path)
+    concat_to_csv(parts, tmp_path / "all.csv")
+    write_csv(tmp_path / "whole.csv", columns, table.slice(0, 25_000))
+    assert (tmp_path / "all.csv").read_bytes() == (tmp_path / "whole.csv").read_bytes()
+    assert row_count(parts) == 25_000
+    assert 15_000 <= row_count(parts, 15_000) < 25_000
+
+
+def test_short_files_with_other_columns_are_refused_by_name(tmp_path: Path) -> None:
+    for name in ("a", "b"):
+        write_parquet(tmp_path / f"{name}.parquet", pa.table({name: [1.0]}))
+        write_short_csv(tmp_path / f"{name}.parquet")
+    for first, second in (("a.csv", "b.parquet"), ("a.parquet", "b.csv"), ("a.csv", "b.csv")):
+        with pytest.raises(ValueError, match=second.replace(".", r"\.")):
+            concat_to_csv([tmp_path / first, tmp_path / second], tmp_path / "t.csv")
+    assert not (tmp_path / "t.csv").exists()
 
 
 MEMORY = """
 import resource, sys
 from pathlib import Path
-from waveassay.provenance.tables import concat_parquet_to_csv
+from waveassay.provenance.tables import concat_to_csv
 def peak():
     return resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
 source, target = Path(sys.argv[1]), Path(sys.argv[2])
-concat_parquet_to_csv([source] * 2, target)
+concat_to_csv([source] * 2, target)
 before = peak()
-concat_parquet_to_csv([source] * 20, target)
+concat_to_csv([source] * 20, target)
 print(peak() - before)
 """
 
@@ -317,7 +346,7 @@ def test_memory_does_not_grow_with_the_number_of_files(tmp_path: Path) -> None:
 
 
 def test_no_parquet_files_at_all(tmp_path: Path) -> None:
-    assert concat_parquet_to_csv([], tmp_path / "t.csv", COLUMNS) == 0
+    concat_to_csv([], tmp_path / "t.csv", COLUMNS)
     assert (tmp_path / "t.csv").read_text() == "recording,band_power.alpha,epoch,kept\n"
 
 
@@ -327,7 +356,7 @@ def test_parquet_files_with_other_columns_are_refused_by_name(tmp_path: Path) ->
     write_parquet(tmp_path / "c.parquet", pa.table({"x": ["text"]}))
     for other in ("b.parquet", "c.parquet"):
         with pytest.raises(ValueError, match=other.replace(".", r"\.")):
-            concat_parquet_to_csv([tmp_path / "a.parquet", tmp_path / other], tmp_path / "t.csv")
+            concat_to_csv([tmp_path / "a.parquet", tmp_path / other], tmp_path / "t.csv")
     assert not (tmp_path / "t.csv").exists()
 
 

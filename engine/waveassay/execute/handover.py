@@ -81,7 +81,8 @@ def write_work(
     items = {item.found.name: item for item in plan.recordings}
     for job in jobs:
         write_text(folder / TASKS / f"{job.identifier}.json", json.dumps(_job(job, items)))
-    write_text(folder / JOBS_FILE, json.dumps({job.identifier: job.needs for job in jobs}))
+    order = {job.identifier: [job.needs, round(job.path_s, 3)] for job in jobs}
+    write_text(folder / JOBS_FILE, json.dumps(order))
     return folder
 
 

@@ -9,12 +9,13 @@ from pathlib import Path
 from waveassay.contract.errors import MachineError
 from waveassay.execute import work
 from waveassay.execute.runner import JobEvent
+from waveassay.execute.work import JOBS_FILE
 
 
 def run_in_process(folder: Path, workers: int, on_event: Callable[[JobEvent], None]) -> str | None:
     """Run the jobs of ``folder/jobs.json``; ``workers`` is not used."""
-    needs = json.loads((folder / "jobs.json").read_text())
-    for job in TopologicalSorter(needs).static_order():
+    jobs = json.loads((folder / JOBS_FILE).read_text())
+    for job in TopologicalSorter({job: needs for job, (needs, _) in jobs.items()}).static_order():
         on_event(JobEvent("started", job))
         try:
             work.run_job(folder, job)

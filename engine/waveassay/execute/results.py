@@ -106,7 +106,7 @@ def _result(item: PlannedRecording, store: Store, failures: Mapping[str, Failure
 def _output(store: Store, chain: str, key: str) -> Output:
     artefact = store.read(key)
     text = artefact.path(FACTS_FILE).read_text(encoding="utf-8")
-    return Output(chain, artefact.folder, json.loads(text))
+    return Output(chain, artefact.folder, json.loads(text), artefact.files)
 
 
 def step_rows(
@@ -123,6 +123,7 @@ def step_rows(
             continue
         for passage in item.passages:
             tasks = [task for task in item.tasks if task.chain == passage.chain.name]
+            known: dict[str, list[Any]] = {}
             for index, step in enumerate(passage.chain.steps):
                 moves = [
                     lane.program.moves[index]
@@ -131,8 +132,10 @@ def step_rows(
                 ]
                 if moves:
                     held = _holding(passage, moves[0], tasks)
-                    row = _step_row(held, store, computed)
-                    yield [item.found.name, passage.chain.name, step.name, *row]
+                    key = held[0].key if len(held) == 1 else digest([task.key for task in held])
+                    if key not in known:  # steps of one task share its result
+                        known[key] = [key, *_kept(held, store, computed)]
+                    yield [item.found.name, passage.chain.name, step.name, *known[key]]
 
 
 def derived_rows(plan: Plan, results: Sequence[Result]) -> Iterator[list[Any]]:
@@ -151,9 +154,7 @@ def derived_rows(plan: Plan, results: Sequence[Result]) -> Iterator[list[Any]]:
                     for move, held in takers_of_rows(lane.program, passage.precision)
                 }
                 for move in lane.program.moves.values():
-                    derive = move.step.stage.derive
-                    derived = derive(move.step.params, move.spec_in) if derive else ()
-                    for known in (*derived, *given.get(move.index, ())):
+                    for known in (*move.derived, *given.get(move.index, ())):
                         value = known.value
                         text = value if isinstance(value, str) else number_text(value)
                         yield [
@@ -179,12 +180,11 @@ def _holding(passage: Passage, move: Move, tasks: Sequence[Task]) -> list[Task]:
     return [t for t in tasks if t.action == action and t.pass_no in (move.pass_no, 0)]
 
 
-def _step_row(held: Sequence[Task], store: Store, computed: set[str]) -> list[Any]:
-    kept = [task for task in held if store.has(task.key)]
-    facts = [store.facts(task.key) for task in kept]
+def _kept(held: Sequence[Task], store: Store, computed: set[str]) -> list[Any]:
+    """Return of tasks' results: digest, whether all was there before, and environments."""
+    facts = [known for known in map(store.facts, [task.key for task in held]) if known]
     reused = not any(task.key in computed for task in held)
     environments = ";".join(sorted({environment for _, environment in facts}))
-    if len(kept) == 1 and len(held) == 1:
-        return [kept[0].key, facts[0][0], reused, environments]
-    key = digest([task.key for task in held])
-    return [key, digest([d for d, _ in facts]), reused, environments]
+    if len(facts) == 1 and len(held) == 1:
+        return [facts[0][0], reused, environments]
+    return [digest([d for d, _ in facts]), reused, environments]

@@ -1,5 +1,6 @@
 """The main job: one recipe over some recordings, into a run folder."""
 
+import gc
 import shutil
 import signal
 import threading
@@ -110,7 +111,7 @@ def run_recipe(
             name: item.sha256 for name, item in read.items() if isinstance(item, ReadRecording)
         }
         known = run_digest(recipe, {item.name: sha256.get(item.name, "") for item in found})
-        finished = finished_run(into / "runs", recipe, known)
+        finished = finished_run(into / "runs", recipe, known, store.checked)
         if finished is not None:
             seconds = time.monotonic() - started
             return RunOutcome(*finished, already=True, timings_s={"all": seconds})
@@ -139,26 +140,28 @@ class _Run:
     ) -> RunOutcome:
         """Plan, compute what the store lacks, and write the run folder."""
         clock = _Clock({"reading": reading_s})
-        notes = notes_on(runs, self.recipe)
+        notes = notes_on(runs, self.recipe, self.store.checked)
         env = environment(installed_bundles())
         folder = RunFolder.open(runs, self.recipe)
         folder.begin(self.recipe, known, env, workers=self.workers, recordings=len(found))
-        plan = make_plan(self.recipe, found, read)
-        todo = [missing_tasks(item.tasks, self.store.has) for item in plan.recordings]
-        self._require_room(plan, todo, folder)
-        jobs = group_into_jobs(todo, self.workers, self.job_length)
+        with _nothing_collected():
+            plan = make_plan(self.recipe, found, read)
+            todo = [missing_tasks(item.tasks, self.store.has) for item in plan.recordings]
+            self._require_room(plan, todo, folder)
+            jobs = group_into_jobs(todo, self.workers, self.job_length)
         self.watcher.planned(len(jobs), sum(job.cost_s for job in jobs))
         clock.lap("planning")
         failures = self._compute(plan, jobs, env, folder) if jobs else {}
         clock.lap("jobs")
         computed = {task.key for tasks in todo for task in tasks}
-        results = collect_results(plan, self.store, failures)
-        steps = list(step_rows(plan, self.store, computed, results))
-        used = sorted({name for row in steps for name in row[-1].split(";") if name})
-        records = [self.store.root / "environments" / f"{name}.json" for name in used]
-        results_digest = folder.complete(
-            self.recipe, results, steps, derived_rows(plan, results), records
-        )
+        with _nothing_collected():
+            results = collect_results(plan, self.store, failures)
+            steps = list(step_rows(plan, self.store, computed, results))
+            used = sorted({name for row in steps for name in row[-1].split(";") if name})
+            records = [self.store.root / "environments" / f"{name}.json" for name in used]
+            results_digest = folder.complete(
+                self.recipe, results, steps, derived_rows(plan, results), records
+            )
         clock.lap("tables")
         return RunOutcome(
             folder.path,
@@ -240,6 +243,18 @@ def _read_all(
             read[item.name] = error
         watcher.reading(number + 1, len(found))
     return read
+
+
+@contextmanager
+def _nothing_collected() -> Iterator[None]:
+    """Look for no garbage: all that is made here is kept, and would be gone through ever again."""
+    was_on = gc.isenabled()
+    gc.disable()
+    try:
+        yield
+    finally:
+        if was_on:
+            gc.enable()
 
 
 @contextmanager

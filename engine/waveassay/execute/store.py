@@ -11,7 +11,7 @@ import json
 import os
 import shutil
 import tempfile
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from pathlib import Path
@@ -28,12 +28,13 @@ class MissingArtefactError(SignalError):
 
 @dataclass(frozen=True)
 class Artefact:
-    """A stored result."""
+    """A stored result; ``files`` are the names of its files with their SHA-256."""
 
     key: str
     folder: Path
     digest: str
     environment: str
+    files: Mapping[str, str]
 
     def path(self, name: str) -> Path:
         """Return one of its files."""
@@ -45,14 +46,24 @@ class Store:
 
     def __init__(self, root: Path) -> None:
         self.root = root
+        self._objects = f"{root / 'objects'}/"
+
+    @property
+    def checked(self) -> Path:
+        """Where is remembered which files of finished runs were found unchanged."""
+        return self.root / "checked"
 
     def place(self, key: str) -> Path:
         """Return the folder that a result has, or would have."""
         return self.root / "objects" / key[:2] / key
 
+    def _file(self, key: str, name: str = _FACTS) -> str:
+        # As text: paths are put together for every result of thousands of recordings.
+        return f"{self._objects}{key[:2]}/{key}/{name}"
+
     def has(self, key: str) -> bool:
         """Tell whether a result is there, whole."""
-        return (self.place(key) / _FACTS).exists()
+        return os.path.exists(self._file(key))
 
     @contextmanager
     def writing(self, key: str, environment: str) -> Iterator[Path]:
@@ -112,17 +123,21 @@ class Store:
         """
         place = self.place(key)
         try:
-            facts = json.loads((place / _FACTS).read_text())
+            with open(self._file(key), "rb") as file:
+                facts = json.load(file)
             files = dict(facts["files"])
         except FileNotFoundError:
             raise MissingArtefactError(f"result {key[:12]} is not in the store") from None
         except (ValueError, KeyError, TypeError):
             raise self._damaged(place / _FACTS) from None
         for name, sha256 in files.items():
-            path = place / name
-            if not path.exists() or _sha256(path) != sha256:
-                raise self._damaged(path)
-        return Artefact(key, place, facts["digest"], facts["environment"])
+            try:
+                sound = _sha256(self._file(key, name)) == sha256
+            except FileNotFoundError:
+                sound = False
+            if not sound:
+                raise self._damaged(place / name)
+        return Artefact(key, place, facts["digest"], facts["environment"], files)
 
     def _damaged(self, path: Path) -> SignalError:
         """Remove the result that a damaged file belongs to, and say so."""
@@ -132,9 +147,13 @@ class Store:
             "is computed afresh."
         )
 
-    def facts(self, key: str) -> tuple[str, str]:
-        """Return a result's digest and environment without reading its files."""
-        facts = json.loads((self.place(key) / _FACTS).read_text())
+    def facts(self, key: str) -> tuple[str, str] | None:
+        """Return a result's digest and environment without reading its files; None without it."""
+        try:
+            with open(self._file(key), "rb") as file:
+                facts = json.load(file)
+        except FileNotFoundError:
+            return None
         return facts["digest"], facts["environment"]
 
     @contextmanager
@@ -162,8 +181,8 @@ class Store:
             shutil.rmtree(part, ignore_errors=True)
 
 
-def _sha256(path: Path) -> str:
-    with path.open("rb") as file:
+def _sha256(path: str | Path) -> str:
+    with open(path, "rb", buffering=0) as file:
         return hashlib.file_digest(file, "sha256").hexdigest()
 
 

@@ -23,6 +23,7 @@ from waveassay.execute.signals import PreparedFiles, SignalSource, prepared_keys
 from waveassay.execute.stamps import Stamp, require_unchanged
 from waveassay.execute.states import combine, read_states
 from waveassay.execute.store import MissingArtefactError, Store
+from waveassay.execute.texts import add_texts
 from waveassay.plan.passage import Passage, passages
 from waveassay.plan.routes import Routes
 from waveassay.plan.tasks import Task, tasks_of
@@ -177,6 +178,7 @@ def _do(bench: Bench, recording: str, task: Task) -> None:
     with store.writing(task.key, bench.environment) as folder:
         if task.action == "finish":
             finish(passage, gather(store, by_action["rows"]), folder)
+            add_texts(folder)
         elif task.action == "combine":
             combine(passage, task.pass_no, gather(store, by_action["rows"]), folder)
         else:

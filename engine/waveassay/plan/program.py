@@ -103,6 +103,15 @@ class Program:
 
     def kept_signals(self, pass_no: int) -> list[int]:
         """Return the moves whose signals a pass prepares for what comes after it, in order."""
+        if pass_no not in self._kept:
+            self._kept[pass_no] = self._find_kept(pass_no)
+        return self._kept[pass_no]
+
+    @cached_property
+    def _kept(self) -> dict[int, list[int]]:
+        return {}
+
+    def _find_kept(self, pass_no: int) -> list[int]:
         used: set[int] = set()
         for move in self.moves.values():
             source = move.source

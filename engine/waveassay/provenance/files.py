@@ -4,6 +4,7 @@ import errno
 import hashlib
 import os
 import secrets
+import shutil
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager, suppress
@@ -72,7 +73,7 @@ def _concerns(error: OSError, path: Path) -> bool:
 
 
 @contextmanager
-def write_beside(path: Path) -> Iterator[BinaryIO]:
+def write_beside(path: Path, *, sync: bool = True) -> Iterator[BinaryIO]:
     """Give a file to write to, which takes the name ``path`` only once it is whole and on disk.
 
     It is written in the same folder (made if need be) as ``.part-...``, synced, then renamed over
@@ -80,6 +81,10 @@ def write_beside(path: Path) -> Iterator[BinaryIO]:
     part is left for `sweep`. Permissions are those of any new file (0644 under the usual umask).
     The folder itself is not synced: a power cut may lose the new name, never leave half a file
     under it.
+
+    Parameters
+    ----------
+    sync : False where whoever reads the file finds out that it is not whole.
 
     Raises
     ------
@@ -93,8 +98,9 @@ def write_beside(path: Path) -> Iterator[BinaryIO]:
         try:
             with open(descriptor, "wb") as file:
                 yield file
-                file.flush()
-                os.fsync(file.fileno())
+                if sync:
+                    file.flush()
+                    os.fsync(file.fileno())
             os.replace(part, path)
         except BaseException:  # Ctrl-C too: nothing half written stays behind
             with suppress(OSError):
@@ -131,6 +137,23 @@ def sweep(folder: Path, older_than_s: float = 0.0) -> list[Path]:
                     part.unlink()
                     removed.append(part)
     return sorted(removed)
+
+
+def copy_file(source: Path, target: Path) -> None:
+    """Copy the bytes of a file to a new one; a disk that can share them between files does.
+
+    The copy is a file of its own: what is later written to one never shows in the other.
+    """
+    copy_range = getattr(os, "copy_file_range", None)
+    with source.open("rb", buffering=0) as taken, target.open("wb", buffering=0) as given:
+        try:
+            while copy_range is not None and copy_range(taken.fileno(), given.fileno(), 1 << 30):
+                pass
+        except OSError:  # not between these two disks: from where it stopped, by hand
+            copy_range = None
+        if copy_range is None:
+            taken.seek(given.seek(0, os.SEEK_END))
+            shutil.copyfileobj(taken, given, 1 << 20)
 
 
 def sha256_of(path: Path) -> str:

@@ -11,7 +11,7 @@ import hashlib
 import os
 import platform
 import time
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager, suppress
 from datetime import UTC, datetime
 from pathlib import Path
@@ -104,14 +104,22 @@ class Log:
         TypeError
             For a fact that is not JSON.
         """
+        self.append_all(event, [facts])
+
+    def append_all(self, event: str, lines: Sequence[Mapping[str, object]]) -> None:
+        """Add a line for each of some facts, all of one event, in one change; see `append`.
+
+        When one cannot be written, those before it stay.
+        """
         if not event:
             raise ValueError("a log line needs an event")
-        taken = RESERVED.intersection(facts)
+        taken = sorted({name for facts in lines for name in facts} & RESERVED)
         if taken:
-            raise ValueError(f"these names belong to the log itself: {', '.join(sorted(taken))}")
+            raise ValueError(f"these names belong to the log itself: {', '.join(taken)}")
         with self._locked() as descriptor:
             self._catch_up(descriptor)
-            self._write(descriptor, event, facts)
+            for facts in lines:
+                self._write(descriptor, event, facts)
 
     def sync(self) -> None:
         """Have every line so far on the disk itself."""
@@ -175,7 +183,7 @@ class Log:
             }
             self._write(descriptor, "line_cut", lost)
 
-    def _write(self, descriptor: int, event: str, facts: dict[str, object]) -> None:
+    def _write(self, descriptor: int, event: str, facts: Mapping[str, object]) -> None:
         """Write a line behind the last whole one, over a torn line if there is one."""
         now = datetime.now(UTC)
         record: dict[str, object] = {

@@ -7,6 +7,7 @@ file, its SHA-256. The manifest is written last, so a folder without one is unfi
 import hashlib
 import json
 import os
+import stat
 from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -93,7 +94,7 @@ def results_digest(entries: Iterable[FileEntry]) -> str:
     return whole.hexdigest()
 
 
-def write_manifest(folder: Path, log_head: str) -> Manifest:
+def write_manifest(folder: Path, log_head: str, known: Mapping[str, str] | None = None) -> Manifest:
     """List the folder, which must be finished, and write its manifest.
 
     Leftovers of unfinished writers are removed first.
@@ -102,6 +103,9 @@ def write_manifest(folder: Path, log_head: str) -> Manifest:
     ----------
     folder : the run folder; nothing else may be writing to it.
     log_head : digest of the log's last line as its writer knows it.
+    known : relative path -> SHA-256 of the bytes that were to be written there, where their writer
+        knows it. These files are not read again: should one hold anything else, it differs from
+        its manifest, and every later check says so.
 
     Raises
     ------
@@ -120,10 +124,13 @@ def write_manifest(folder: Path, log_head: str) -> Manifest:
         )
     entries = []
     for path in listed(folder):
-        where = folder / path
-        if where.is_symlink() or not where.is_file():
-            raise RefusedError(f"{where}: is not a plain file; a run folder holds nothing else")
-        entries.append(FileEntry(path, where.stat().st_size, sha256_of(where)))
+        size = plain_size(f"{folder}/{path}")
+        if size is None:
+            raise RefusedError(
+                f"{folder / path}: is not a plain file; a run folder holds nothing else"
+            )
+        sha256 = (known or {}).get(path) or sha256_of(folder / path)
+        entries.append(FileEntry(path, size, sha256))
     manifest = Manifest(tuple(entries), log_head, verdict.lines, results_digest(entries))
     write_bytes(folder / MANIFEST, manifest.to_json())
     return manifest
@@ -160,11 +167,28 @@ def _entry(item: Mapping[str, Any]) -> FileEntry:
 
 def listed(folder: Path) -> Iterator[str]:
     """Yield the relative paths of all files but the manifest, sorted; links are not followed."""
-    found = []
-    for where, folders, names in os.walk(folder):
-        linked = [name for name in folders if Path(where, name).is_symlink()]
-        found += [Path(where, name).relative_to(folder).as_posix() for name in [*names, *linked]]
-    yield from sorted((path for path in found if path != MANIFEST), key=os.fsencode)
+    yield from sorted((path for path in _below(folder, "") if path != MANIFEST), key=os.fsencode)
+
+
+def _below(folder: str | Path, prefix: str) -> Iterator[str]:
+    try:
+        entries = list(os.scandir(folder))
+    except OSError:  # what cannot be looked into is missing
+        return
+    for entry in entries:
+        if entry.is_dir(follow_symlinks=False):
+            yield from _below(entry.path, f"{prefix}{entry.name}/")
+        else:
+            yield f"{prefix}{entry.name}"
+
+
+def plain_size(path: str | Path) -> int | None:
+    """Return the size of a plain file; None where a link or something else stands."""
+    try:
+        status = os.lstat(path)
+    except FileNotFoundError:
+        return None
+    return status.st_size if stat.S_ISREG(status.st_mode) else None
 
 
 def _log_verdict(folder: Path, head: str, lines: int | None = None) -> LogVerdict:

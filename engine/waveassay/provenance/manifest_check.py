@@ -1,7 +1,7 @@
 """Is a run folder as its manifest says."""
 
 from collections import defaultdict
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from enum import StrEnum
 from pathlib import Path
@@ -13,6 +13,7 @@ from waveassay.provenance.manifest import (
     MANIFEST,
     FileEntry,
     listed,
+    plain_size,
     read_manifest,
     results_digest,
 )
@@ -42,16 +43,22 @@ class Finding:
         return f"{self.path}: {self.difference}: {self.message}"
 
 
-def verify_manifest(folder: Path) -> list[Finding]:
+def verify_manifest(folder: Path, digest_of: Callable[[Path], str] = sha256_of) -> list[Finding]:
     """Compare a run folder with its manifest; an empty list means that it is intact.
 
-    A manifest that was rewritten to fit changed files agrees with itself: only its results digest
-    and log head, kept elsewhere (printed in a report, a notebook), can show that.
+    Parameters
+    ----------
+    digest_of : gives the SHA-256 of a file. By default every file is read.
 
     Raises
     ------
     OSError
         When a file cannot be read.
+
+    Notes
+    -----
+    A manifest that was rewritten to fit changed files agrees with itself: only its results digest
+    and log head, kept elsewhere (printed in a report, a notebook), can show that.
     """
     try:
         manifest = read_manifest(folder)
@@ -61,7 +68,7 @@ def verify_manifest(folder: Path) -> list[Finding]:
     except ValueError as error:
         return [Finding(MANIFEST, Difference.NO_MANIFEST, str(error))]
     recorded = {entry.path: entry for entry in manifest.files}
-    found = {path: _now(folder, path) for path in listed(folder)}
+    found = {path: _now(folder, path, digest_of) for path in listed(folder)}
     findings = [*_file_findings(recorded, found)]
     if results_digest(manifest.files) != manifest.results_digest:
         why = "its results digest is not that of the files it lists: the manifest was edited"
@@ -77,12 +84,10 @@ def verify_manifest(folder: Path) -> list[Finding]:
     return sorted(findings, key=lambda f: (f.path, f.difference))
 
 
-def _now(folder: Path, path: str) -> FileEntry | None:
+def _now(folder: Path, path: str, digest_of: Callable[[Path], str]) -> FileEntry | None:
     """Return what a file is now; None where a link or something else stands in its place."""
-    where = folder / path
-    if where.is_symlink() or not where.is_file():
-        return None
-    return FileEntry(path, where.stat().st_size, sha256_of(where))
+    size = plain_size(f"{folder}/{path}")
+    return None if size is None else FileEntry(path, size, digest_of(folder / path))
 
 
 def _file_findings(

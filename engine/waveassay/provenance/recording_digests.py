@@ -1,8 +1,9 @@
 """What is known of recordings that have not changed: their SHA-256, and facts such as the header's.
 
 A small database in the store remembers them beside path, size, times of change and inode, so that
-a second run over many gigabytes reads none of them. It is only ever a saving of time: what is lost
-is computed again, and an entry is used only while the system says that the file is the same.
+a second run over many gigabytes reads none of them. The files of each finished run are remembered
+likewise, in a database of their own. It is only ever a saving of time: what is lost is computed
+again, and an entry is used only while the system says that the file is the same.
 """
 
 import json
@@ -72,6 +73,7 @@ class RecordingDigests:
     Parameters
     ----------
     store_folder : made if need be.
+    name : of the database.
 
     Raises
     ------
@@ -79,8 +81,8 @@ class RecordingDigests:
         When the disk or a permission declines.
     """
 
-    def __init__(self, store_folder: Path) -> None:
-        self.path = store_folder / DATABASE
+    def __init__(self, store_folder: Path, name: str = DATABASE) -> None:
+        self.path = store_folder / name
         self._entries: dict[bytes, _Entry] = {}
         self._unsaved: set[bytes] = set()
         self._facts_loaded = False

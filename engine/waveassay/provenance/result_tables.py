@@ -1,13 +1,13 @@
 """The tables of results: epochs, averages, summary, excluded time, and what every column means."""
 
-import shutil
 from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
 from waveassay.plan.columns import FeatureColumn
+from waveassay.provenance.copies import Copies
 from waveassay.provenance.results import Result
-from waveassay.provenance.tables import Column, concat_parquet_to_csv, write_csv
+from waveassay.provenance.tables import Column, concat_to_csv, row_count, write_csv
 
 #: Above so many rows, the CSV of all recordings is written only when a recipe asks.
 CSV_ROWS = 1_000_000
@@ -150,7 +150,10 @@ _MEANINGS |= {
 
 
 def write_result_tables(
-    folder: Path, columns: Mapping[str, Sequence[FeatureColumn]], results: Sequence[Result]
+    folder: Path,
+    columns: Mapping[str, Sequence[FeatureColumn]],
+    results: Sequence[Result],
+    copies: Copies,
 ) -> None:
     """Write all tables of a run.
 
@@ -158,12 +161,13 @@ def write_result_tables(
     ----------
     columns : chain -> its feature columns.
     results : in order of the recordings' names.
+    copies : makes the copies of every recording's own tables.
     """
     written = []
     for chain in columns:
         for kind, place in _PLACES.items():
             path = folder / place.format(chain=chain)
-            if _wide_table(path, chain, results, f"{kind}.parquet"):
+            if _wide_table(path, chain, results, f"{kind}.parquet", copies):
                 written.append((chain, kind))
     write_csv(folder / "summary.csv", _SUMMARY, list(_rows(results, "summary")))
     write_csv(folder / "excluded.csv", _EXCLUDED, list(_rows(results, "excluded")))
@@ -178,32 +182,28 @@ def _rows(results: Sequence[Result], table: str) -> Iterator[list[Any]]:
             yield from output.facts[table]
 
 
-def _wide_table(folder: Path, chain: str, results: Sequence[Result], file: str) -> bool:
+def _wide_table(
+    folder: Path, chain: str, results: Sequence[Result], file: str, copies: Copies
+) -> bool:
     """Copy every recording's table, and join them as CSV where they are few; tell if any is."""
-    paths: list[Path] = []
+    parts: list[Path] = []
     choices = set()
     for result in results:
         for output in result.outputs:
-            source = output.folder / file
-            if output.chain == chain and source.exists():
+            if output.chain == chain and file in output.digests:
                 path = folder / f"{result.recording}.parquet"
-                path.parent.mkdir(parents=True, exist_ok=True)
-                shutil.copyfile(source, path)
-                paths.append(path)
+                copies.take(output, file, path)
+                text = f"{file.removesuffix('.parquet')}.csv"
+                parts.append(output.folder / text if text in output.digests else path)
                 choices.add(output.facts["csv"])
-    if not paths:
+    if not parts:
         return False
+    copies.done()
     limit = None if "always" in choices else CSV_ROWS
     csv_path = folder.with_name(f"{folder.name}.csv")
-    if choices != {"never"} and (limit is None or _row_count(paths) < limit):
-        concat_parquet_to_csv(paths, csv_path)
+    if choices != {"never"} and (limit is None or row_count(parts, limit) < limit):
+        concat_to_csv(parts, csv_path)
     return True
-
-
-def _row_count(paths: Sequence[Path]) -> int:
-    import pyarrow.parquet as pq
-
-    return sum(pq.read_metadata(path).num_rows for path in paths)
 
 
 def _dictionary(

@@ -16,11 +16,13 @@ class Output:
     ----------
     folder : its tables and figures.
     facts : summary and excluded rows, figures with captions, and when to write CSV.
+    digests : SHA-256 by name of the folder's files, as they were found when they were read.
     """
 
     chain: str
     folder: Path
     facts: Mapping[str, Any]
+    digests: Mapping[str, str]
 
 
 @dataclass(frozen=True)

@@ -12,11 +12,13 @@ from typing import Any
 
 from waveassay.contract.errors import RefusedError
 from waveassay.plan.columns import columns_by_chain
+from waveassay.provenance.copies import Copies
 from waveassay.provenance.environment import environment_id
 from waveassay.provenance.files import machine_errors, write_text
 from waveassay.provenance.log import Log
 from waveassay.provenance.manifest import LOG, MANIFEST, read_manifest, write_manifest
-from waveassay.provenance.manifest_check import verify_manifest
+from waveassay.provenance.manifest_check import Finding, verify_manifest
+from waveassay.provenance.recording_digests import RecordingDigests
 from waveassay.provenance.result_tables import write_result_tables
 from waveassay.provenance.results import Result
 from waveassay.provenance.tables import Column, write_csv
@@ -124,25 +126,20 @@ class RunFolder:
         write_csv(self.path / "steps.csv", _STEP_COLUMNS, steps)
         write_csv(self.path / "derived.csv", _DERIVED_COLUMNS, list(derived))
         with machine_errors(self.path):
-            write_result_tables(self.path, columns_by_chain(recipe), results)
-            _copy_figures(self.path, results)
+            with Copies(self.path) as copies:
+                write_result_tables(self.path, columns_by_chain(recipe), results, copies)
+                _copy_figures(self.path, results, copies)
+                copies.done()
             for record in environments:
                 (self.path / "environments").mkdir(exist_ok=True)
                 shutil.copyfile(record, self.path / "environments" / record.name)
-        for result in results:
-            self.log.append(
-                "recording",
-                recording=result.recording,
-                sha256=result.sha256,
-                status=result.status,
-                chain=result.chain,
-                step=result.step,
-                message=result.message,
-            )
+        told = ("recording", "sha256", "status", "chain", "step", "message")
+        lines = [{name: getattr(result, name) for name in told} for result in results]
+        self.log.append_all("recording", lines)
         failed = sum(result.status == "failed" for result in results)
         self.log.append("run_finished", recipe_digest=recipe.digest, failed=failed)
         self.log.close()
-        return write_manifest(self.path, self.log.head).results_digest
+        return write_manifest(self.path, self.log.head, copies.digests).results_digest
 
     def _write_parameters(self, recipe: Recipe) -> None:
         rows = [
@@ -158,12 +155,16 @@ class RunFolder:
 
 
 def finished_run(
-    runs: Path, recipe: Recipe, run_digest: str
+    runs: Path, recipe: Recipe, run_digest: str, checked: Path
 ) -> tuple[Path, list[Result], str] | None:
     """Return the newest finished run that a new one would only repeat: folder, results, digest.
 
     One in which a recording failed is not taken: a new run tries that recording again. Nor is one
     that was changed after it was finished.
+
+    Parameters
+    ----------
+    checked : where is remembered which files of finished runs were found unchanged, and when.
     """
     for folder in reversed(_folders(runs, recipe)):
         if not (folder / MANIFEST).exists() or not _same_recipe(folder, recipe):
@@ -172,20 +173,23 @@ def finished_run(
         started = [event for event in events if event["event"] == "run_started"]
         ended = [event for event in events if event["event"] == "run_finished"]
         if started and ended and started[-1]["run_digest"] == run_digest:
-            if ended[-1]["failed"] or verify_manifest(folder):
+            if ended[-1]["failed"] or _changes(folder, checked):
                 continue
             digest = read_manifest(folder).results_digest
             return folder, _read_results(folder), digest
     return None
 
 
-def notes_on(runs: Path, recipe: Recipe) -> list[str]:
-    """Return what a user should know of earlier runs of this name and edition."""
+def notes_on(runs: Path, recipe: Recipe, checked: Path) -> list[str]:
+    """Return what a user should know of earlier runs of this name and edition.
+
+    ``checked`` is as in `finished_run`.
+    """
     notes = []
     for folder in _folders(runs, recipe):
         if not (folder / MANIFEST).exists():
             continue
-        if found := verify_manifest(folder):
+        if found := _changes(folder, checked):
             notes.append(f"{folder.name} was changed after it was finished: {found[0].message}")
         digests = [event.get("recipe_digest", "") for event in _events(folder)]
         if digests and digests[-1] and digests[-1] != recipe.digest:
@@ -194,6 +198,15 @@ def notes_on(runs: Path, recipe: Recipe) -> list[str]:
                 f"({folder.name}). Raise the edition when a number can change."
             )
     return notes[-3:]
+
+
+def _changes(folder: Path, checked: Path) -> list[Finding]:
+    """Return what was changed in a finished run.
+
+    A file is read once: then it is known by its size, times of change and inode, as recordings are.
+    """
+    with RecordingDigests(checked, f"{folder.name}.sqlite") as digests:
+        return verify_manifest(folder, digests.digest)
 
 
 def _events(folder: Path) -> list[dict[str, Any]]:
@@ -244,7 +257,7 @@ def _free(path: Path, taken: set[Path]) -> Path:
     return free
 
 
-def _copy_figures(folder: Path, results: Sequence[Result]) -> None:
+def _copy_figures(folder: Path, results: Sequence[Result], copies: Copies) -> None:
     rows = []
     taken: set[Path] = set()
     for result in results:
@@ -254,8 +267,7 @@ def _copy_figures(folder: Path, results: Sequence[Result]) -> None:
                 file = f"{Path(result.recording).name}.{figure['signal']}.{figure['name']}.png"
                 safe = "".join(c if c.isalnum() or c in "-_." else "_" for c in file)
                 path = _free(Path("figures", output.chain, result.recording).with_name(safe), taken)
-                (folder / path).parent.mkdir(parents=True, exist_ok=True)
-                shutil.copyfile(output.folder / figure["file"], folder / path)
+                copies.take(output, figure["file"], folder / path)
                 rows.append([path.as_posix(), figure["caption"]])
     if rows:
         columns = (Column("figure", "text"), Column("caption", "text"))

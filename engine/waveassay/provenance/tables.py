@@ -100,7 +100,8 @@ def parquet_writer(path: Path, schema: Any) -> Iterator[Callable[[Any], None]]:
 
     Zstandard, dictionaries for text only, row groups of 131,072; NaN is written as missing. How
     the rows are cut into tables, and their metadata, leave no trace. The bytes hold the version of
-    the pyarrow that wrote them. No more than a row group is held.
+    the pyarrow that wrote them. No more than a row group is held. The file is not synced to the
+    disk: the store, which it is for, checks its files when they are read.
 
     Raises
     ------
@@ -114,7 +115,7 @@ def parquet_writer(path: Path, schema: Any) -> Iterator[Callable[[Any], None]]:
     waiting: list[Any] = []
 
     with (
-        write_beside(path) as file,
+        write_beside(path, sync=False) as file,
         _parquet().ParquetWriter(
             file,
             plain,
@@ -152,15 +153,51 @@ def read_parquet(path: Path) -> Any:
         return file.read()
 
 
-def concat_parquet_to_csv(
-    paths: Iterable[Path], csv_path: Path, columns: Sequence[Column] = ()
-) -> int:
-    """Write the rows of Parquet files, one after another, as one CSV; return how many there are.
+def write_short_csv(path: Path) -> bool:
+    """Write the rows of a Parquet file as CSV beside it, if they are few; tell if they are.
+
+    Of thousands of short files, most of the time to join them would go into opening each.
+
+    Raises
+    ------
+    MachineError
+        When the disk or a permission declines.
+    """
+    table = read_parquet(path)
+    if table.num_rows > _BATCH_ROWS:
+        return False
+    with write_beside(path.with_suffix(".csv"), sync=False) as file:
+        file.write(_header(table.column_names))
+        _write_rows(file, table.to_batches())
+    return True
+
+
+def row_count(paths: Iterable[Path], limit: int | None = None) -> int:
+    """Return how many rows files have, as in `concat_to_csv`; beyond the limit no more are counted.
+
+    In a CSV file, lines are counted: a text that holds a line end counts for more than one.
+    """
+    pq = _parquet()
+
+    count = 0
+    for path in paths:
+        if path.suffix == ".csv":
+            count += path.read_bytes().count(b"\n") - 1
+        else:
+            count += pq.read_metadata(path).num_rows
+        if limit is not None and count >= limit:
+            break
+    return count
+
+
+def concat_to_csv(paths: Iterable[Path], csv_path: Path, columns: Sequence[Column] = ()) -> None:
+    """Write the rows of Parquet files, one after another, as one CSV.
 
     A batch of rows is held at a time, whatever the files' size.
 
     Parameters
     ----------
+    paths : Parquet files; in the place of any, the CSV that `write_short_csv` made of it.
     columns : for the header, where there may be no file at all.
 
     Raises
@@ -172,26 +209,33 @@ def concat_parquet_to_csv(
     """
     pq = _parquet()
 
-    count = 0
-    names = [column.name for column in columns]
+    header = _header([column.name for column in columns]) if columns else b""
     schema = None
     with write_beside(csv_path) as target:
-        if names:
-            target.write(_header(names))
+        target.write(header)
         for path in paths:
+            if path.suffix == ".csv":
+                text = path.read_bytes()
+                begun = text.index(b"\n") + 1
+                header = _same_header(target, header, text[:begun], path)
+                target.write(memoryview(text)[begun:])
+                continue
             with pq.ParquetFile(path, memory_map=False) as source:
                 found = source.schema_arrow.remove_metadata()
-                if not names:
-                    names = list(found.names)
-                    target.write(_header(names))
-                if list(found.names) != names or (schema is not None and found != schema):
-                    raise ValueError(
-                        f"{path}: has the columns {found}, the others {schema or names}"
-                    )
+                header = _same_header(target, header, _header(found.names), path)
+                if schema is not None and found != schema:
+                    raise ValueError(f"{path}: has the columns {found}, the others {schema}")
                 schema = found
-                count += source.metadata.num_rows
                 _write_rows(target, source.iter_batches(batch_size=_BATCH_ROWS))
-    return count
+
+
+def _same_header(target: BinaryIO, header: bytes, own: bytes, path: Path) -> bytes:
+    """Write the first file's header; refuse a file that has another."""
+    if not header:
+        target.write(own)
+    elif own != header:
+        raise ValueError(f"{path}: has the columns {own!r}, the others {header!r}")
+    return own
 
 
 def _compute() -> Any:
@@ -249,10 +293,9 @@ def _without_nan(array: Any) -> Any:
     """Turn NaN into missing: one way to say it, and one bit pattern on disk."""
     import pyarrow as pa
 
-    pc = _compute()
-
     if not pa.types.is_floating(array.type):
         return array
+    pc = _compute()
     nan = pc.is_nan(array)
     return pc.if_else(nan, None, array) if pc.any(nan).as_py() else array
 

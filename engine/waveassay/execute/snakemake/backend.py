@@ -85,7 +85,7 @@ def _run(folder: Path, workers: int, on_event: Callable[[JobEvent], None]) -> st
                     lock=False, keep_going=True, keep_metadata=False, latency_wait=0
                 ),
                 remote_execution_settings=RemoteExecutionSettings(),
-                scheduling_settings=SchedulingSettings(scheduler="greedy", subsample=100),
+                scheduling_settings=SchedulingSettings(scheduler="greedy", subsample=1000),
                 scheduler_settings=greedy,
                 greedy_scheduler_settings=greedy,
             )

@@ -20,7 +20,7 @@ from waveassay.execute.work import OUTCOMES
 _OPTIONS = [
     *("--workflow-profile", "none", "--nocolor", "--nolock", "--keep-going", "--drop-metadata"),
     *("--rerun-triggers", "mtime", "--rerun-incomplete"),
-    *("--scheduler", "greedy", "--scheduler-subsample", "100"),
+    *("--scheduler", "greedy", "--scheduler-subsample", "1000"),
 ]
 _LOOK_S = 2.0
 _FIRST_WORD_S, _LATER_WORDS = 60.0, 5.0

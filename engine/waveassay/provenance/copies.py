@@ -1,0 +1,86 @@
+"""Copies of what the store holds, for a run folder."""
+
+from collections import deque
+from collections.abc import Sequence
+from concurrent.futures import Future, ThreadPoolExecutor
+from dataclasses import dataclass, field
+from pathlib import Path
+from types import TracebackType
+
+from waveassay.provenance.files import copy_file
+from waveassay.provenance.results import Output
+
+_THREADS = 2  # one waits for the disk while one works; more would wait for the same folder
+_TOGETHER = 32  # files that a thread is given at once
+
+
+@dataclass
+class Copies:
+    """Copies files of results into a run folder, several at a time.
+
+    A run folder's files are copies, never links: who changes one must change no other run.
+
+    Attributes
+    ----------
+    folder : the run folder.
+    digests : relative path -> SHA-256 of each file copied, as it was when the store was read.
+    """
+
+    folder: Path
+    digests: dict[str, str] = field(default_factory=dict)
+
+    def __post_init__(self) -> None:
+        self._pool = ThreadPoolExecutor(_THREADS)
+        self._running: deque[Future[None]] = deque()
+        self._waiting: list[tuple[Path, Path]] = []
+        self._made: set[Path] = set()
+
+    def take(self, output: Output, file: str, target: Path) -> None:
+        """Copy a file of a result, soon.
+
+        Raises
+        ------
+        OSError
+            When an earlier copy could not be made.
+        """
+        if target.parent not in self._made:
+            target.parent.mkdir(parents=True, exist_ok=True)
+            self._made.add(target.parent)
+        self.digests[target.relative_to(self.folder).as_posix()] = output.digests[file]
+        self._waiting.append((output.folder / file, target))
+        if len(self._waiting) == _TOGETHER:
+            self._hand_over()
+        while len(self._running) > 2 * _THREADS:
+            self._running.popleft().result()
+
+    def done(self) -> None:
+        """Wait until all copies are made.
+
+        Raises
+        ------
+        OSError
+            When one could not be made.
+        """
+        self._hand_over()
+        while self._running:
+            self._running.popleft().result()
+
+    def _hand_over(self) -> None:
+        self._running.append(self._pool.submit(_copy, tuple(self._waiting)))
+        self._waiting.clear()
+
+    def __enter__(self) -> "Copies":
+        return self
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        error: BaseException | None,
+        trace: TracebackType | None,
+    ) -> None:
+        self._pool.shutdown(cancel_futures=True)
+
+
+def _copy(pairs: Sequence[tuple[Path, Path]]) -> None:
+    for source, target in pairs:
+        copy_file(source, target)
