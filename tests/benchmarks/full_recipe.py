@@ -3,7 +3,7 @@
 from collections.abc import Mapping
 
 #: Whether recipes know the key ``precision``; without it every run is in double precision.
-PRECISION_KEY = False
+PRECISION_KEY = True
 #: What is measured: "standard" filters in float64 and transforms epochs in float32.
 PRECISIONS = ("standard", "double") if PRECISION_KEY else ("double",)
 #: What a run does that is not asked for a precision, as the command's users see it.

@@ -10,7 +10,18 @@ from typing import Any
 
 import numpy as np
 
-from waveassay.contract import Data, Features, FeaturesSpec, Figure, Kind, Rows, Spectra, Table
+from waveassay.contract import (
+    Data,
+    Derived,
+    Features,
+    FeaturesSpec,
+    Figure,
+    Kind,
+    Rows,
+    Spectra,
+    Table,
+    number_text,
+)
 from waveassay.execute.arrays import coded
 from waveassay.execute.gathered import Gathered, LaneRows
 from waveassay.execute.moves import collect_move, combine_move, run_move
@@ -23,6 +34,7 @@ from waveassay.execute.tables import (
 )
 from waveassay.plan.columns import column_name
 from waveassay.plan.passage import Lane, Passage
+from waveassay.plan.precision import takers_of_rows
 from waveassay.plan.program import Level, Move
 from waveassay.provenance.tables import parquet_writer, write_parquet
 
@@ -37,6 +49,7 @@ class _Told:
     excluded: list[list[Any]] = field(default_factory=list)
     figures: list[dict[str, str]] = field(default_factory=list)
     summary: list[list[Any]] = field(default_factory=list)
+    derived: list[list[Any]] = field(default_factory=list)
     averages: list[tuple[str, Spectra]] = field(default_factory=list)
 
 
@@ -76,6 +89,7 @@ def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
         "excluded": told.excluded,
         "figures": told.figures,
         "summary": told.summary,
+        "derived": told.derived,
         "csv": _csv_choice(passage),
     }
     (folder / FACTS_FILE).write_text(json.dumps(facts, sort_keys=True))
@@ -102,9 +116,27 @@ def _tell(
         recording, chain, lane.signal, rows.excluded, passage.pieces, conditions
     )
     told.warnings += _without_epochs(passage, blocks)
+    told.derived += _derived(passage, lane)
     if _table_moves(lane):
         own = [c for c in passage.columns if not c.averaged]
         told.summary += summary_rows(recording, chain, blocks, own, _units(lane), conditions)
+
+
+def _derived(passage: Passage, lane: Lane) -> Iterator[list[Any]]:
+    """Yield what follows from a signal's parameters and rates.
+
+    A row is: recording, chain, step, signal, quantity, value, unit.
+    """
+    given = {
+        move.index: [Derived("samples given as", held)]
+        for move, held in takers_of_rows(lane.program, passage.precision)
+    }
+    for move in lane.program.moves.values():
+        for known in (*move.derived, *given.get(move.index, ())):
+            value = known.value
+            text = value if isinstance(value, str) else number_text(value)
+            row = [passage.recording, passage.chain.name, move.step.name, lane.signal]
+            yield [*row, known.quantity, text, known.unit]
 
 
 def _without_epochs(passage: Passage, blocks: Sequence[Block]) -> Iterator[str]:

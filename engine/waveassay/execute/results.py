@@ -5,7 +5,7 @@ from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
-from waveassay.contract import Derived, SignalError, number_text
+from waveassay.contract import SignalError
 from waveassay.contract.digests import digest
 from waveassay.execute.finish import FACTS_FILE
 from waveassay.execute.store import Store
@@ -13,7 +13,6 @@ from waveassay.execute.work import OUTCOMES, Failure
 from waveassay.plan.jobs import Job
 from waveassay.plan.passage import Passage
 from waveassay.plan.plan import Plan, PlannedRecording
-from waveassay.plan.precision import takers_of_rows
 from waveassay.plan.program import Level, Move
 from waveassay.plan.tasks import Task
 from waveassay.provenance.results import Output, Result
@@ -136,36 +135,6 @@ def step_rows(
                     if key not in known:  # steps of one task share its result
                         known[key] = [key, *_kept(held, store, computed)]
                     yield [item.found.name, passage.chain.name, step.name, *known[key]]
-
-
-def derived_rows(plan: Plan, results: Sequence[Result]) -> Iterator[list[Any]]:
-    """Yield what follows from parameters and rates.
-
-    A row is: recording, chain, step, signal, quantity, value, unit.
-    """
-    done = {result.recording for result in results if result.status != "failed"}
-    for item in plan.recordings:
-        if item.found.name not in done:
-            continue
-        for passage in item.passages:
-            for lane in passage.lanes:
-                given = {
-                    move.index: [Derived("samples given as", held)]
-                    for move, held in takers_of_rows(lane.program, passage.precision)
-                }
-                for move in lane.program.moves.values():
-                    for known in (*move.derived, *given.get(move.index, ())):
-                        value = known.value
-                        text = value if isinstance(value, str) else number_text(value)
-                        yield [
-                            item.found.name,
-                            passage.chain.name,
-                            move.step.name,
-                            lane.signal,
-                            known.quantity,
-                            text,
-                            known.unit,
-                        ]
 
 
 def _holding(passage: Passage, move: Move, tasks: Sequence[Task]) -> list[Task]:

@@ -18,7 +18,6 @@ from waveassay.execute.handover import read_recording, write_work
 from waveassay.execute.lock import one_run_in
 from waveassay.execute.results import (
     collect_results,
-    derived_rows,
     failures_by_recording,
     machine_problem,
     step_rows,
@@ -159,9 +158,7 @@ class _Run:
             steps = list(step_rows(plan, self.store, computed, results))
             used = sorted({name for row in steps for name in row[-1].split(";") if name})
             records = [self.store.root / "environments" / f"{name}.json" for name in used]
-            results_digest = folder.complete(
-                self.recipe, results, steps, derived_rows(plan, results), records
-            )
+            results_digest = folder.complete(self.recipe, results, steps, records)
         clock.lap("tables")
         return RunOutcome(
             folder.path,

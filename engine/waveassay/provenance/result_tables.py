@@ -37,6 +37,11 @@ _EXCLUDED = (
     Column("share_of_condition", "number"),
 )
 
+_DERIVED = tuple(
+    Column(name, "text")
+    for name in ("recording", "chain", "step", "signal", "quantity", "value", "unit")
+)
+
 # Where the tables of each kind stand.
 _PLACES = {
     "epochs": "epochs/{chain}",
@@ -171,6 +176,7 @@ def write_result_tables(
                 written.append((chain, kind))
     write_csv(folder / "summary.csv", _SUMMARY, list(_rows(results, "summary")))
     write_csv(folder / "excluded.csv", _EXCLUDED, list(_rows(results, "excluded")))
+    write_csv(folder / "derived.csv", _DERIVED, list(_rows(results, "derived")))
     dictionary = list(_dictionary(columns, written))
     names = ("table", "column", "unit", "meaning", "step")
     write_csv(folder / "columns.csv", [Column(name, "text") for name in names], dictionary)

@@ -42,10 +42,6 @@ _RECORDING_COLUMNS = (
 _PARAMETER_COLUMNS = tuple(
     Column(name, "text") for name in ("step", "parameter", "value", "unit", "origin", "where")
 )
-_DERIVED_COLUMNS = tuple(
-    Column(name, "text")
-    for name in ("recording", "chain", "step", "signal", "quantity", "value", "unit")
-)
 _STEP_COLUMNS = (
     Column("recording", "text"),
     Column("chain", "text"),
@@ -111,7 +107,6 @@ class RunFolder:
         recipe: Recipe,
         results: Sequence[Result],
         steps: Sequence[Sequence[Any]],
-        derived: Iterable[Sequence[Any]],
         environments: Iterable[Path],
     ) -> str:
         """Write every table and figure, then the manifest; return the results digest.
@@ -124,7 +119,6 @@ class RunFolder:
         self._write_parameters(recipe)
         self._write_recordings(results)
         write_csv(self.path / "steps.csv", _STEP_COLUMNS, steps)
-        write_csv(self.path / "derived.csv", _DERIVED_COLUMNS, list(derived))
         with machine_errors(self.path):
             with Copies(self.path) as copies:
                 write_result_tables(self.path, columns_by_chain(recipe), results, copies)

@@ -1,6 +1,5 @@
 """Run jobs through Snakemake, embedded."""
 
-import json
 import signal
 import threading
 from collections.abc import Callable, Iterator
@@ -25,8 +24,7 @@ def run_with_snakemake(
     Every failed job is told through ``on_event``. The jobs' work is described by other files in the
     folder, which Snakemake never sees.
     """
-    needs = json.loads((folder / "jobs.json").read_text(encoding="utf-8"))
-    with _workers(folder, min(workers, len(needs))):
+    with _workers(folder):
         return _run(folder, workers, on_event)
 
 
@@ -95,10 +93,9 @@ def _run(folder: Path, workers: int, on_event: Callable[[JobEvent], None]) -> st
 
 
 @contextmanager
-def _workers(folder: Path, count: int) -> Iterator[None]:
-    """Start the workers that the executor will use; none outlives this."""
+def _workers(folder: Path) -> Iterator[None]:
+    """Have the workers at hand that the executor will use, and let them go afterwards."""
     workers = Workers(folder)
-    workers.start(count)
     at_hand.append(workers)
     try:
         yield

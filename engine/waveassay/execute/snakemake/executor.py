@@ -70,8 +70,7 @@ class Executor(RealExecutor):  # type: ignore[misc]  # untyped upstream
         self.report_job_success(info)
 
     def shutdown(self) -> None:
-        """Let the workers go."""
-        self._workers.shutdown()
+        """Do nothing: who started the workers lets them go."""
 
     def cancel(self) -> None:
         """End the workers at once: Ctrl-C, or a fault of the scheduler."""

@@ -39,12 +39,10 @@ class Workers:
         self._all: list[concurrent.futures.ProcessPoolExecutor] = []
         self._cancelled = False
         self._context = multiprocessing.get_context("forkserver")
+        _wait_for_the_last()
         self._context.set_forkserver_preload([work.__name__, *work.SLOW_MODULES])
-
-    def start(self, count: int) -> None:
-        """Start workers ahead of their jobs."""
-        for _ in range(count):
-            self._idle.append(self._new())
+        with _no_main_module():
+            forkserver.ensure_running()  # it loads the libraries while we go on
 
     def _new(self) -> concurrent.futures.ProcessPoolExecutor:
         pool = concurrent.futures.ProcessPoolExecutor(
@@ -80,12 +78,14 @@ class Workers:
         future.add_done_callback(finished)
 
     def shutdown(self) -> None:
-        """Let the workers go when they have done what they are at, and wait for their ends."""
-        ending = [threading.Thread(target=pool.shutdown) for pool in self._all]
-        for thread in ending:
-            thread.start()
-        for thread in ending:
-            thread.join()
+        """Let the workers go when they have done what they are at; nobody has to wait for it."""
+        ending = threading.Thread(target=self._end)  # the interpreter's own end waits for it
+        _ending.append(ending)
+        ending.start()
+
+    def _end(self) -> None:
+        for pool in self._all:
+            pool.shutdown()
         # Else nobody waits for the process they were forked from, nor counts what they all took.
         forkserver._forkserver._stop()  # type: ignore[attr-defined]
 
@@ -101,6 +101,13 @@ class Workers:
 
 #: Snakemake makes the executor: who starts Snakemake puts here the workers that it is to use.
 at_hand: list[Workers] = []
+#: There is one process to fork from: the last one must have gone before the next is started.
+_ending: list[threading.Thread] = []
+
+
+def _wait_for_the_last() -> None:
+    while _ending:
+        _ending.pop().join()
 
 
 @contextmanager
