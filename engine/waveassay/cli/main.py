@@ -95,9 +95,17 @@ def run_command(
     A recording that fails is named and the others go on. A run that was cut off goes on where it
     was when the same command is given again.
     """
-    from waveassay.cli.run import run
+    from waveassay.execute.snakemake import warming
 
-    _leave(run(target, recordings or [], into, workers, store, cluster, cluster_wait))
+    if cluster is None:
+        warming.start()  # what workers need is loaded while all that follows is imported
+    try:
+        from waveassay.cli.run import run
+
+        code = run(target, recordings or [], into, workers, store, cluster, cluster_wait)
+    finally:
+        warming.end()
+    _leave(code)
 
 
 @app.command("check")

@@ -30,6 +30,7 @@ from waveassay.plan.tasks import Task, tasks_of
 from waveassay.provenance.files import write_text
 from waveassay.recipe.check import check_recipe
 from waveassay.recipe.problems import RecipeError
+from waveassay.recipe.registry import load_registry
 from waveassay.recording import Facts
 
 PLAN_FILE, JOBS_FILE = "plan.json", "jobs.json"
@@ -200,14 +201,11 @@ def _do(bench: Bench, recording: str, task: Task) -> None:
         bench.prepared.know(task.key)
 
 
-#: What nearly every job imports, and takes far longer to import than to use.
-SLOW_MODULES = ("pyarrow.parquet", "scipy.fft", "scipy.signal")
-
-
 def warm_up() -> None:
-    """Import what jobs need, before anything is timed."""
-    for module in SLOW_MODULES:
+    """Load what nearly every job needs, and takes far longer to load than to use."""
+    for module in ("pyarrow.parquet", "scipy.fft", "scipy.signal"):
         import_module(module)
+    load_registry()
 
 
 if __name__ == "__main__":

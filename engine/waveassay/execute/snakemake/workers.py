@@ -1,26 +1,21 @@
 """Long-lived worker processes with the libraries loaded, each doing one job at a time.
 
-Starting a process and importing scipy costs most of a second; a job often takes less. So one
-process loads the libraries while Snakemake is being imported, and every worker is forked from it.
+Starting a process and importing scipy costs most of a second; a job often takes less. So workers
+are forked from one process that has loaded all of it, see `waveassay.execute.snakemake.warming`.
 """
 
 import concurrent.futures
 import multiprocessing
 import os
 import signal
-import sys
 import threading
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from concurrent.futures.process import BrokenProcessPool
-from contextlib import contextmanager
-from multiprocessing import forkserver
 from multiprocessing.connection import wait
 from pathlib import Path
 
 from waveassay.execute import work
-
-#: A job is a process; threads in it would only get in each other's way.
-THREAD_VARIABLES = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
+from waveassay.execute.snakemake import warming
 
 Done = concurrent.futures.Future[None]
 
@@ -32,23 +27,17 @@ class Workers:
     """
 
     def __init__(self, folder: Path) -> None:
-        for name in THREAD_VARIABLES:
-            os.environ[name] = "1"  # before the workers load numpy
         self._folder = folder
         self._idle: list[concurrent.futures.ProcessPoolExecutor] = []
         self._all: list[concurrent.futures.ProcessPoolExecutor] = []
         self._cancelled = False
-        self._context = multiprocessing.get_context("forkserver")
-        _wait_for_the_last()
-        self._context.set_forkserver_preload([work.__name__, *work.SLOW_MODULES])
-        with _no_main_module():
-            forkserver.ensure_running()  # it loads the libraries while we go on
+        self._context = warming.start()
 
     def _new(self) -> concurrent.futures.ProcessPoolExecutor:
         pool = concurrent.futures.ProcessPoolExecutor(
             1, mp_context=self._context, initializer=_start_worker
         )
-        with _no_main_module():
+        with warming.no_main_module():
             pool.submit(_nothing)  # a pool has no process before it has something to do
         self._all.append(pool)
         return pool
@@ -79,15 +68,12 @@ class Workers:
 
     def shutdown(self) -> None:
         """Let the workers go when they have done what they are at; nobody has to wait for it."""
-        ending = threading.Thread(target=self._end)  # the interpreter's own end waits for it
-        _ending.append(ending)
-        ending.start()
+        warming.stop_after(threading.Thread(target=self._end))
 
     def _end(self) -> None:
         for pool in self._all:
             pool.shutdown()
-        # Else nobody waits for the process they were forked from, nor counts what they all took.
-        forkserver._forkserver._stop()  # type: ignore[attr-defined]
+        warming.stop()
 
     def cancel(self) -> None:
         """End the workers at once: Ctrl-C, or a fault of the scheduler."""
@@ -101,27 +87,6 @@ class Workers:
 
 #: Snakemake makes the executor: who starts Snakemake puts here the workers that it is to use.
 at_hand: list[Workers] = []
-#: There is one process to fork from: the last one must have gone before the next is started.
-_ending: list[threading.Thread] = []
-
-
-def _wait_for_the_last() -> None:
-    while _ending:
-        _ending.pop().join()
-
-
-@contextmanager
-def _no_main_module() -> Iterator[None]:
-    """Hide the program from new processes, which would run its imports for nothing."""
-    main = sys.modules["__main__"]
-    known = {name: getattr(main, name) for name in ("__spec__", "__file__") if hasattr(main, name)}
-    main.__spec__ = None
-    main.__file__ = None
-    try:
-        yield
-    finally:
-        for name, value in known.items():
-            setattr(main, name, value)
 
 
 def _start_worker() -> None:
