@@ -2,10 +2,8 @@
 
 from collections.abc import Mapping
 
-#: Whether recipes know the key ``precision``; without it every run is in double precision.
-PRECISION_KEY = True
 #: What is measured: "standard" filters in float64 and transforms epochs in float32.
-PRECISIONS = ("standard", "double") if PRECISION_KEY else ("double",)
+PRECISIONS = ("standard", "double")
 #: What a run does that is not asked for a precision, as the command's users see it.
 DEFAULT = PRECISIONS[0]
 
@@ -95,4 +93,4 @@ def _bands(bands: Mapping[str, tuple[float, float]]) -> str:
 def _key(precision: str) -> str:
     if precision not in PRECISIONS:
         raise ValueError(f"{precision} is not measured, only {', '.join(PRECISIONS)}")
-    return f"precision: {precision}\n" if PRECISION_KEY else ""
+    return f"precision: {precision}\n"

@@ -96,14 +96,6 @@ def test_recipes_are_sound(precision: str) -> None:
         assert check_recipe(text, "recipe.yaml").recipe is not None
 
 
-def test_precision_is_asked_for_once_recipes_know_it() -> None:
-    text = full_recipe.chain(full_recipe.DEFAULT)
-    if not full_recipe.PRECISION_KEY:
-        text = text.replace("signals:", "precision: double\nsignals:", 1)
-    known = check_recipe(text, "recipe.yaml").recipe is not None
-    assert known == full_recipe.PRECISION_KEY, "set PRECISION_KEY in full_recipe.py"
-
-
 def test_recordings_are_as_long_as_asked_and_the_same_each_time(tmp_path: Path) -> None:
     length_s = full_data.TILE_S + 7
     one = full_data.write(tmp_path / "one.edf", CHANNELS, length_s)
