@@ -105,11 +105,15 @@ def _misplaced(taken: Signal, out: Signal) -> Iterator[str]:
 
 
 def _gaps(out: Features) -> Iterator[str]:
-    for part, values in out.columns.items():
-        if values.size != len(out.rows) or len(out.missing) != len(out.rows):
-            continue
-        if not np.all(np.isnan(values[~out.rows.kept])):
-            yield f"column '{part}' has values in rows that are not kept"
-        silent = [i for i in np.flatnonzero(out.rows.kept & np.isnan(values)) if not out.missing[i]]
+    count, kept = len(out.rows), out.rows.kept
+    columns = {part: x for part, x in out.columns.items() if x.size == count}
+    if not columns or len(out.missing) != count:
+        return
+    absent = np.isnan(np.array(list(columns.values())))  # of all columns at once
+    for part in np.flatnonzero(~np.all(absent | kept, axis=-1)):
+        yield f"column '{list(columns)[part]}' has values in rows that are not kept"
+    for part in np.flatnonzero(np.any(absent & kept, axis=-1)):
+        silent = [row for row in np.flatnonzero(absent[part] & kept) if not out.missing[row]]
         if silent:
-            yield f"column '{part}' lacks a value in kept row {silent[0]}, and says no reason"
+            name = list(columns)[part]
+            yield f"column '{name}' lacks a value in kept row {silent[0]}, and says no reason"

@@ -13,7 +13,7 @@ from dataclasses import dataclass, field, replace
 from enum import StrEnum
 from fractions import Fraction
 from functools import cached_property
-from itertools import compress
+from itertools import compress, pairwise
 from typing import Any
 
 import numpy as np
@@ -90,10 +90,11 @@ class Condition(Interval):
 
 def merged(exclusions: Iterable[Exclusion]) -> tuple[Exclusion, ...]:
     """Join touching exclusions of one reason; sorted by start, then stop, then reason."""
+    items = [item for item in exclusions if item.start_s < item.stop_s]
+    if all(a.reason == b.reason and a.stop_s < b.start_s for a, b in pairwise(items)):
+        return tuple(items)  # as they mostly are
     by_reason: dict[str, list[Exclusion]] = {}
-    for item in sorted(exclusions, key=lambda e: (e.reason, e.start_s, e.stop_s)):
-        if item.stop_s <= item.start_s:
-            continue
+    for item in sorted(items, key=lambda e: (e.reason, e.start_s, e.stop_s)):
         known = by_reason.setdefault(item.reason, [])
         if known and item.start_s <= known[-1].stop_s:
             last = known.pop()

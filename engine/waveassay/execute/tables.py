@@ -175,30 +175,30 @@ def summary_rows(
         for condition in dict.fromkeys(c.name for c in conditions):
             number = names.index(condition) if condition in names else -1
             inside = (codes == number) & block.rows.kept
-            for column in columns:
-                if column.step_index not in block.features:
-                    continue
-                values = block.column(column)[inside]
-                values = values[np.isfinite(values)]
+            known = [column for column in columns if column.step_index in block.features]
+            values = np.array([block.column(column)[inside] for column in known])
+            for column, statistics in zip(known, _statistics(values), strict=True):
                 unit = units.get((block.signal, column.name), column.unit)
-                yield [
-                    recording,
-                    chain,
-                    block.signal,
-                    None,
-                    condition,
-                    column.name,
-                    unit,
-                    *_statistics(values),
-                ]
+                place = [recording, chain, block.signal, None, condition, column.name, unit]
+                yield [*place, *statistics]
 
 
-def _statistics(values: Floats) -> list[Any]:
+def _statistics(values: Floats) -> list[list[Any]]:
+    """Return n, mean, sd and quartiles of each row's finite values."""
+    complete = np.all(np.isfinite(values), axis=-1)
+    if np.all(complete) and values.shape[-1] > 1:  # all rows at once
+        quartiles = np.quantile(values, [0.5, 0.25, 0.75], axis=-1)
+        parts = (np.mean(values, axis=-1), np.std(values, axis=-1, ddof=1), *quartiles)
+        return [[values.shape[-1], *row] for row in np.array(parts).T.tolist()]
+    return [_of_one(row[np.isfinite(row)]) for row in values]
+
+
+def _of_one(values: Floats) -> list[Any]:
     if not values.size:
         return [0, None, None, None, None, None]
-    quartiles = np.quantile(values, [0.5, 0.25, 0.75])
-    sd = float(np.std(values, ddof=1)) if values.size > 1 else None
-    return [int(values.size), float(np.mean(values)), sd, *(float(q) for q in quartiles)]
+    if values.size == 1:
+        return [1, float(values[0]), None, *[float(values[0])] * 3]
+    return _statistics(values[None, :])[0]
 
 
 def excluded_rows(

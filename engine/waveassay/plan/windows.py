@@ -3,7 +3,7 @@
 All is counted in steps of the grid of stretches from the start of the piece.
 """
 
-from collections.abc import Mapping
+from collections.abc import Hashable, Mapping
 from dataclasses import dataclass
 from fractions import Fraction
 from functools import cached_property
@@ -13,6 +13,11 @@ from waveassay.contract import Interval
 from waveassay.plan.blocks import Span
 from waveassay.plan.fusing import Unit, units_of
 from waveassay.plan.program import Program
+
+Window = tuple[Fraction, Fraction]
+
+_MOST_WINDOWS = 10_000
+_windows: dict[Hashable, Window] = {}
 
 
 @dataclass(frozen=True)
@@ -53,10 +58,23 @@ class Form:
             wanted[unit.source] = (min(known[0], taken[0]), max(known[1], taken[1]))
         return wanted
 
-    def window_s(
-        self, piece: Interval, start_s: Fraction, stop_s: Fraction
-    ) -> tuple[Fraction, Fraction]:
+    @cached_property
+    def _alike(self) -> Hashable:
+        """What two forms have in common that need the same of every stretch."""
+        units = tuple((u.index, u.source, u.before, u.after, u.block_s) for u in self.units)
+        return self.step_s, self.kept, units
+
+    def window_s(self, piece: Interval, start_s: Fraction, stop_s: Fraction) -> Window:
         """Return what must be read for all that lies from start to stop."""
+        # The signals of a recording are mostly alike, and each is asked for every stretch.
+        key = (self._alike, piece, start_s, stop_s)
+        if key not in _windows:
+            if len(_windows) > _MOST_WINDOWS:
+                _windows.clear()
+            _windows[key] = self._window_s(piece, start_s, stop_s)
+        return _windows[key]
+
+    def _window_s(self, piece: Interval, start_s: Fraction, stop_s: Fraction) -> Window:
         spans = self.spans(piece, self.own(piece, start_s, stop_s))
         given = {unit.index for unit in self.units}
         inputs = [span for index, span in spans.items() if index not in given]
@@ -64,7 +82,7 @@ class Form:
             return start_s, stop_s
         return self.time_s(piece, (min(s[0] for s in inputs), max(s[1] for s in inputs)))
 
-    def time_s(self, piece: Interval, span: Span) -> tuple[Fraction, Fraction]:
+    def time_s(self, piece: Interval, span: Span) -> Window:
         """Return a span's start and stop."""
         low, high = (piece.start_s + count * self.step_s for count in span)
         return low, min(piece.stop_s, high)
