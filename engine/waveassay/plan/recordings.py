@@ -60,7 +60,7 @@ def _without_clashes(found: Sequence[Found]) -> tuple[Found, ...]:
     by_name: dict[str, Found] = {}
     for item in sorted(found, key=lambda f: (f.name, str(f.path))):
         known = by_name.setdefault(item.name, item)
-        if known.path.resolve() != item.path.resolve():
+        if known.path != item.path and known.path.resolve() != item.path.resolve():
             raise UsageError(
                 f"Two recordings would both be named '{item.name}': {known.path} and {item.path}. "
                 "Rename one, or give the folder that holds both."

@@ -25,6 +25,10 @@ from waveassay.provenance.tables import Column, write_csv
 from waveassay.recipe.canonical import parameters, resolved_yaml
 from waveassay.recipe.model import Recipe
 
+#: Earlier runs that a new one looks at: to look at all would take longer from run to run.
+_LAST_FEW = 3
+_OF_THE_RUN = '"run_'
+
 SOURCE, RESOLVED = "recipe.source.yaml", "recipe.resolved.yaml"
 RECORDINGS = "recordings.csv"
 
@@ -175,14 +179,13 @@ def finished_run(
 
 
 def notes_on(runs: Path, recipe: Recipe, checked: Path) -> list[str]:
-    """Return what a user should know of earlier runs of this name and edition.
+    """Return what a user should know of the last few runs of this name and edition.
 
     ``checked`` is as in `finished_run`.
     """
     notes = []
-    for folder in _folders(runs, recipe):
-        if not (folder / MANIFEST).exists():
-            continue
+    finished = [folder for folder in _folders(runs, recipe) if (folder / MANIFEST).exists()]
+    for folder in finished[-_LAST_FEW:]:
         if found := _changes(folder, checked):
             notes.append(f"{folder.name} was changed after it was finished: {found[0].message}")
         digests = [event.get("recipe_digest", "") for event in _events(folder)]
@@ -191,7 +194,7 @@ def notes_on(runs: Path, recipe: Recipe, checked: Path) -> list[str]:
                 f"edition {recipe.edition} of {recipe.name} was run here with other content "
                 f"({folder.name}). Raise the edition when a number can change."
             )
-    return notes[-3:]
+    return notes[-_LAST_FEW:]
 
 
 def _changes(folder: Path, checked: Path) -> list[Finding]:
@@ -204,10 +207,14 @@ def _changes(folder: Path, checked: Path) -> list[Finding]:
 
 
 def _events(folder: Path) -> list[dict[str, Any]]:
-    """Return a log's lines; none where it cannot be read, which is told elsewhere."""
+    """Return a log's events of the run itself, and none of its thousands of recordings.
+
+    None where it cannot be read, which is told elsewhere.
+    """
     try:
-        lines = (folder / LOG).read_text(encoding="utf-8").rstrip("\n").split("\n")
-        return [json.loads(line) for line in lines]
+        lines = (folder / LOG).read_text(encoding="utf-8").splitlines()
+        events = [json.loads(line) for line in lines if _OF_THE_RUN in line]
+        return [event for event in events if event["event"].startswith("run_")]
     except (OSError, ValueError):
         return []
 
