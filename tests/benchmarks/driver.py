@@ -18,6 +18,7 @@ from benchmarks import (
     full_sizes,
     full_stages,
     gate,
+    many_recordings,
     plain_chain,
     reader,
     second_run,
@@ -43,6 +44,7 @@ _FULL: Parts = {
     "full_stages": lambda: full_stages.measure(32, 3600, rounds=3),
     "full_sizes": lambda: full_sizes.measure([(1, 0.5), (4, 0.5), (16, 0.5)], rounds=3),
     "full_long": lambda: full_long.measure({4: 3, 24: 1}),
+    "many_recordings": lambda: many_recordings.measure(recordings=5000, rounds=3),
     "backend_own": lambda: backend_own.measure({1: 5, 10: 5, 100: 3, 1000: 1}),
 }
 _QUICK: Parts = {
@@ -57,6 +59,7 @@ _QUICK: Parts = {
     "full_stages": lambda: full_stages.measure(4, 1800, rounds=1),
     "full_sizes": lambda: full_sizes.measure([(1, 0.1), (2, 0.25)], rounds=1),
     "full_long": lambda: full_long.measure({1: 1}, channels=8),
+    "many_recordings": lambda: many_recordings.measure(recordings=20, rounds=1),
     "backend_own": lambda: backend_own.measure({1: 1, 10: 1}),
 }
 

@@ -11,7 +11,7 @@ from typing import Any
 from benchmarks.measured import Spread, Timed, child, command, in_turn, ratios
 
 EXAMPLE = Path(__file__).parents[2] / "workdir_example"
-TARGET_S = 12.0
+TARGET_S = 8.0
 _PARTS = re.compile(r"\(reading ([\d.]+) s, planning ([\d.]+) s, jobs ([\d.]+) s, tables ([\d.]+)")
 _DIGEST = re.compile(r"Results digest: (\w+)")
 

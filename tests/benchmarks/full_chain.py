@@ -41,6 +41,7 @@ def measure(
             ways = {
                 **{f"ours {p}": partial(run, long, folder, p) for p in full_recipe.PRECISIONS},
                 **{f"start {p}": partial(run, short, folder, p) for p in full_recipe.PRECISIONS},
+                "as given": partial(run, long, folder, full_recipe.DEFAULT, workers=None),
                 "vectorised": partial(script, "vectorised", long, folder),
                 "bound": partial(child, "full_bound", long, channels, length_s),
             }
@@ -76,7 +77,7 @@ def summary(found: dict[str, list[Timed]]) -> dict[str, Any]:
         p: [a.cpu_s - b.cpu_s for a, b in zip(found[f"ours {p}"], found[f"start {p}"], strict=True)]
         for p in full_recipe.PRECISIONS
     }
-    default = found[f"ours {full_recipe.DEFAULT}"]
+    one_worker = found[f"ours {full_recipe.DEFAULT}"]
     return {
         "wall_s": {name: Spread.of(t.wall_s for t in times) for name, times in timed.items()},
         "cpu_s": {name: Spread.of(t.cpu_s for t in times) for name, times in timed.items()},
@@ -88,21 +89,29 @@ def summary(found: dict[str, list[Timed]]) -> dict[str, Any]:
         },
         "own_cpu_s": {p: Spread.of(values) for p, values in own_s.items()},
         "over_bound": {p: ratios(values, totals[p]) for p, values in own_s.items()},
-        "times_faster": {
-            name: ratios(
-                (t.wall_s for t in found[name]), (t.wall_s for t in default[: len(found[name])])
-            )
-            for name in SCRIPT_TARGETS
-        },
+        "times_faster": _times_faster(found, found["as given"]),
+        "times_faster_one_worker": _times_faster(found, one_worker),
     }
 
 
-def run(recording: Path, folder: Path, precision: str, workers: int = 1) -> Timed:
-    """Run the command from a fresh store; what it leaves is in ``folder/into`` until the next."""
+def _times_faster(found: dict[str, list[Timed]], ours: list[Timed]) -> dict[str, Spread]:
+    """Return the wall of each script over ours."""
+    return {
+        name: ratios((t.wall_s for t in found[name]), (t.wall_s for t in ours[: len(found[name])]))
+        for name in SCRIPT_TARGETS
+    }
+
+
+def run(recording: Path, folder: Path, precision: str, workers: int | None = 1) -> Timed:
+    """Run the command from a fresh store; what it leaves is in ``folder/into`` until the next.
+
+    Without ``workers`` it is given as users give it: there is one a core then.
+    """
     shutil.rmtree(folder / "into", ignore_errors=True)
     recipe = folder / "recipe.yaml"
     recipe.write_text(full_recipe.chain(precision), encoding="utf-8")
-    return command("run", recipe, recording, "--into", folder / "into", "--workers", workers)
+    asked = () if workers is None else ("--workers", workers)
+    return command("run", recipe, recording, "--into", folder / "into", *asked)
 
 
 def script(way: str, recording: Path, folder: Path) -> Timed:

@@ -3,7 +3,7 @@
 from collections.abc import Iterator, Mapping
 from typing import Any
 
-from benchmarks import full_chain, full_check, full_long, full_recipe, stage_ratios
+from benchmarks import full_chain, full_check, full_long, full_recipe, many_recordings, stage_ratios
 from benchmarks.measured import Spread
 from benchmarks.rows import Row
 
@@ -27,6 +27,7 @@ def full_target_rows(found: Mapping[str, Any]) -> Iterator[Row]:
             what = f"largest error of a bin, {name}, {precision} precision"
             limit, excellent = full_check.PSD_TARGETS.values()
             yield Row(what, Spread.of([error]), "", limit, excellent)
+    yield from _many_rows(found["many_recordings"])
     for long in found["full_long"]:
         if long["asked_hours"] != long["hours"]:
             continue
@@ -41,6 +42,16 @@ def full_target_rows(found: Mapping[str, Any]) -> Iterator[Row]:
             yield Row(what, long["speed_up"], "", *limits, at_least=True)
 
 
+def _many_rows(many: Mapping[str, Any]) -> Iterator[Row]:
+    count, plan = many["recordings"], many["plan"]
+    yield Row(f"plan of {count} recordings", plan["wall_s"], "s", many_recordings.PLAN_S)
+    yield Row("its memory, all of the process", plan["peak_mb"], "MB", many_recordings.PLAN_MB)
+    again, more = many["again_s"], many["one_more_beyond_s"]
+    yield Row(f"identical second run of {count}", again, "s", many_recordings.AGAIN_S)
+    what = f"one recording more than {count}, beyond that one alone"
+    yield Row(what, more, "s", many_recordings.ONE_MORE_S)
+
+
 def full_more_rows(found: Mapping[str, Any]) -> Iterator[Row]:
     """Yield what else was measured."""
     chain = found["full_chain"]
@@ -48,6 +59,8 @@ def full_more_rows(found: Mapping[str, Any]) -> Iterator[Row]:
         yield Row(f"whole chain: {_way(name)}, wall", spread, "s")
         yield Row(f"whole chain: {_way(name)}, CPU", chain["cpu_s"][name], "s")
         yield Row(f"whole chain: {_way(name)}, largest process", chain["peak_mb"][name], "MB")
+    for name, spread in chain["times_faster_one_worker"].items():
+        yield Row(f"whole chain: {name} script / ours by one worker, wall", spread)
     for precision, spread in chain["bound_s"].items():
         yield Row(f"whole chain: bound, CPU, {precision} precision", spread, "s")
     for stage, spread in chain["bound_stages_s"][full_recipe.DEFAULT].items():
@@ -63,6 +76,9 @@ def full_more_rows(found: Mapping[str, Any]) -> Iterator[Row]:
             long["asked_hours"] != long["hours"]
         ):
             yield Row(f"{_size(long)}, one worker / two workers, wall", long["speed_up"])
+    many = found["many_recordings"]
+    yield Row(f"first run of {many['recordings']} recordings", Spread.of([many["first_s"]]), "s")
+    yield Row("one recording alone, as the one more", many["one_alone_s"], "s")
     for own in found["backend_own"]:
         what = f"the backend's own, {own['recordings']} recordings"
         yield Row(what, Spread.of([own["own_s"]]), "s")
@@ -90,10 +106,12 @@ def full_facts(found: Mapping[str, Any]) -> dict[str, str]:
 
 
 def _way(name: str) -> str:
+    if name == "as given":
+        return "ours, a worker a core"
     way, _, precision = name.partition(" ")
     if not precision:
         return f"{way} script"
-    return f"{'ours' if way == 'ours' else 'start alone'} ({precision} precision)"
+    return f"{'ours, one worker' if way == 'ours' else 'start alone'} ({precision} precision)"
 
 
 def _size(long: Mapping[str, Any]) -> str:

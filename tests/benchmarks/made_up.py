@@ -60,7 +60,11 @@ def findings() -> dict[str, Any]:
 
 def _whole_chain() -> dict[str, Any]:
     precisions = full_recipe.PRECISIONS
-    ways = [*(f"{kind} {p}" for kind in ("ours", "start") for p in precisions), "vectorised"]
+    ways = [
+        *(f"{kind} {p}" for kind in ("ours", "start") for p in precisions),
+        "vectorised",
+        "as given",
+    ]
     timed = {name: S for name in (*ways, "loop")}
     stages = {stage: S for stage in full_bound.STAGES}
     workers = {"1": S, "2": S}
@@ -79,6 +83,7 @@ def _whole_chain() -> dict[str, Any]:
             "own_cpu_s": {precision: S for precision in precisions},
             "over_bound": {precision: S for precision in precisions},
             "times_faster": {"vectorised": Spread(6, 7, 9), "loop": Spread(11, 12, 16)},
+            "times_faster_one_worker": {"vectorised": S, "loop": S},
         },
         "psd_errors": {p: {"welch": 1e-6, "multitaper": 2e-6} for p in precisions},
         "stage_ratios": {name: Spread(1, 2.5, 3) for name in stage_ratios.targets()},
@@ -102,6 +107,14 @@ def _whole_chain() -> dict[str, Any]:
             }
             for hours in (4, 24)
         ],
+        "many_recordings": {
+            "recordings": 5000,
+            "plan": {"wall_s": S, "peak_mb": S},
+            "first_s": 40.0,
+            "again_s": S,
+            "one_alone_s": S,
+            "one_more_beyond_s": S,
+        },
         "backend_own": [
             {"recordings": n, "rounds": 1, "own_s": 1.0, "snakemake": 2.0, "in_process": 1.0}
             for n in (1, 10, 100)

@@ -1,15 +1,10 @@
-"""Thousands of short recordings: the plan, a finished run given again, and one recording more.
-
-And what the backend costs beside the work itself, against the number of recordings: the wall time
-of a run of trivially short ones on all cores but for the CPU time of their jobs in one process,
-shared out to as many cores.
-"""
+"""Thousands of short recordings: the plan, a finished run given again, and one recording more."""
 
 import json
 import sys
 import tempfile
 import time
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Iterable
 from datetime import datetime
 from fractions import Fraction
 from pathlib import Path
@@ -17,8 +12,7 @@ from typing import Any
 
 import numpy as np
 
-from benchmarks.measured import Timed, child, command, own_peak_mb
-from waveassay.execute.runner import JobEvent
+from benchmarks.measured import Spread, Timed, child, command, own_peak_mb
 
 LENGTH_S, RATE_HZ = 20, 128
 LABELS = ("EEG Fp1-F7", "EEG Fp2-F8")
@@ -49,65 +43,45 @@ chains:
 """
 
 
-def measure(
-    recordings: int = 5000, counts: Sequence[int] = (10, 100, 1000, 5000)
-) -> dict[str, Any]:
+def measure(recordings: int = 5000, rounds: int = 3) -> dict[str, Any]:
     """Return what a plan and runs over many recordings take.
 
     Parameters
     ----------
     recordings : over how many the plan is made, and to how many one more is added.
-    counts : numbers of recordings for the cost of the backend.
+    rounds : how often each is measured, but for the first run.
     """
     with tempfile.TemporaryDirectory() as place:
         folder = Path(place)
         write(folder / "all", range(recordings))
-        write(folder / "one", [recordings])
         (folder / "recipe.yaml").write_text(RECIPE, encoding="utf-8")
         time.sleep(SETTLED_S)
-        child("many_recordings", "plan", folder / "recipe.yaml", folder / "all", folder / "plan")
-        planned = child(
-            "many_recordings", "plan", folder / "recipe.yaml", folder / "all", folder / "plan"
-        )
+        planned = _planned(folder, rounds)
         first = _run(folder, "all", "into")
-        again = [_run(folder, "all", "into") for _ in range(3)]
-        alone = _run(folder, "one", "alone")
-        write(folder / "all", [recordings])
-        time.sleep(SETTLED_S)
-        more = _run(folder, "all", "into")
+        again = [_run(folder, "all", "into") for _ in range(rounds)]
+        alone, more = [], []
+        for number in range(recordings, recordings + rounds):
+            write(folder / "all", [number])
+            write(folder / f"one{number}", [number])
+            time.sleep(SETTLED_S)
+            more.append(_run(folder, "all", "into"))
+            alone.append(_run(folder, f"one{number}", f"alone{number}"))
+    beyond = [(a.wall_s - b.wall_s, a.cpu_s - b.cpu_s) for a, b in zip(more, alone, strict=True)]
     return {
         "recordings": recordings,
-        "plan": planned.json,
+        "plan": {name: Spread.of(one[name] for one in planned) for name in planned[0]},
         "first_s": first.wall_s,
-        "again_s": [run.wall_s for run in again],
-        "one_alone_s": alone.wall_s,
-        "one_more_s": more.wall_s,
-        "one_more_beyond_s": more.wall_s - alone.wall_s,
-        "one_more_beyond_cpu_s": more.cpu_s - alone.cpu_s,
-        "backend": [overhead(count) for count in counts],
+        "again_s": Spread.of(run.wall_s for run in again),
+        "one_alone_s": Spread.of(run.wall_s for run in alone),
+        "one_more_beyond_s": Spread.of(wall_s for wall_s, _ in beyond),
+        "one_more_beyond_cpu_s": Spread.of(cpu_s for _, cpu_s in beyond),
     }
 
 
-def overhead(recordings: int) -> dict[str, Any]:
-    """Return what a run takes beside the work of its jobs, and the jobs that there were."""
-    with tempfile.TemporaryDirectory() as place:
-        folder = Path(place)
-        write(folder / "all", range(recordings))
-        (folder / "recipe.yaml").write_text(RECIPE, encoding="utf-8")
-        time.sleep(SETTLED_S)
-        run = _run(folder, "all", "into")
-        work = child(
-            "many_recordings", "work", folder / "recipe.yaml", folder / "all", folder / "alone"
-        ).json
-    beside_s = run.wall_s - work["jobs_s"] / work["workers"]
-    return {
-        "recordings": recordings,
-        "wall_s": run.wall_s,
-        "cpu_s": run.cpu_s,
-        "beside_the_work_s": beside_s,
-        "beside_the_work_ms_a_recording": 1000 * beside_s / recordings,
-        **work,
-    }
+def _planned(folder: Path, rounds: int) -> list[dict[str, float]]:
+    """Plan in processes of their own; the headers are known from the second time on."""
+    to = ("plan", folder / "recipe.yaml", folder / "all", folder / "plan")
+    return [child("many_recordings", *to).json for _ in range(rounds + 1)][1:]
 
 
 def write(folder: Path, numbers: Iterable[int]) -> None:
@@ -157,35 +131,6 @@ def plan(recipe_path: Path, recordings: Path, store_folder: Path) -> dict[str, f
     }
 
 
-def work(recipe_path: Path, recordings: Path, into: Path) -> dict[str, float]:
-    """Run in this process; return the CPU seconds of the jobs and how many there were."""
-    from waveassay.cli.run import _usable_cores
-    from waveassay.execute.in_process import run_in_process
-    from waveassay.execute.run import run_recipe
-    from waveassay.execute.work import warm_up
-    from waveassay.plan.recordings import find_recordings
-
-    warm_up()
-    known: dict[str, float] = {"workers": _usable_cores()}
-
-    def timed(folder: Path, workers: int, on_event: Callable[[JobEvent], None]) -> str | None:
-        known["jobs"] = len(json.loads((folder / "jobs.json").read_text()))
-        begun_s = time.process_time()
-        ended = run_in_process(folder, workers, on_event)
-        known["jobs_s"] = time.process_time() - begun_s
-        return ended
-
-    run_recipe(
-        _recipe(recipe_path),
-        find_recordings([recordings]),
-        into,
-        store_folder=None,
-        workers=_usable_cores(),
-        runner=timed,
-    )
-    return known
-
-
 def _recipe(path: Path) -> Any:
     from waveassay.recipe import check_recipe
 
@@ -199,9 +144,5 @@ def _run(folder: Path, recordings: str, into: str) -> Timed:
 
 
 if __name__ == "__main__":
-    way, *arguments = sys.argv[1:] or ["all"]
-    if way == "all":
-        most, *counts = map(int, arguments or ["5000", "10", "100", "1000", "5000"])
-        print(json.dumps(measure(most, counts), indent=1))
-    else:
-        print(json.dumps({"plan": plan, "work": work}[way](*map(Path, arguments))))
+    _, *places = sys.argv[1:]
+    print(json.dumps(plan(*map(Path, places))))

@@ -107,8 +107,8 @@ met by every round, and half of the rounds or more are excellent.
 - **The example.** `waveassay run` on a fresh copy of `workdir_example/` without a store, whole
   processes, wall. *In process* is the same command with the same jobs as for one worker, done one
   after another in its own process. What one worker takes longer is **the backend's own**: importing
-  Snakemake, its graph and scheduler, and a worker process that imports the libraries again, less
-  what of this runs beside other work on the second core.
+  Snakemake, its graph and scheduler, and a process that imports the libraries again, from which
+  workers are forked, less what of this runs beside other work on the second core.
 - **Second run.** {recordings} recordings of {length_s} s and one signal, through the recipe of
   the plain chain. The first run ({tasks} tasks) took {first_s} s, and is made once. *Identical*:
   the same command, nothing to compute. *One recording more*: a new run folder for all, with one
@@ -124,8 +124,9 @@ met by every round, and half of the rounds or more are excellent.
 - **Whole chain.** {full_channels} channels at 512 Hz, {full_hours} h, EDF of {full_size} MB:
   Butterworth 0.5 to 40 Hz both ways, notch 50 Hz, 128 Hz, amplitude, epochs of 4 s that overlap by
   half, Welch (2 s), multitaper (NW 3, 5 tapers), ten band powers, three edges, entropy
-  (`full_recipe.py`). *Ours* is `waveassay run` with Snakemake and one worker, from an empty store:
-  all processes, from start to end. The *scripts* (`full_script.py`) do the same by hand with numpy
+  (`full_recipe.py`). *Ours* is `waveassay run` with Snakemake, from an empty store: all processes,
+  from start to end; as users give it, with a worker a core, unless *one worker* is said. The
+  *scripts* (`full_script.py`) do the same by hand with numpy
   and scipy, in loops over channels and epochs or on whole arrays, and write a CSV file. They find
   the same: powers and shares of epochs in mid recording differed by at most {full_apart}
   ({full_tolerance} allowed; they resample with scipy's own kernel, which is shorter).
@@ -139,6 +140,10 @@ met by every round, and half of the rounds or more are excellent.
   the textbook's chain: the steps one after another on the whole recording, in float64.
 - **Long recordings** ({full_long}). Wall of the command, and of its processes the one with most
   memory.{full_cut}
+- **Many recordings** (`many_recordings.py`). Of 20 s and two signals, each with other samples. The
+  plan is made in a process of its own, from known headers to what workers are handed. *One
+  recording more* makes a new run folder for all; what the same command takes on that recording
+  alone is subtracted.
 - **Share of CPU** (`full_stages.py`). A run in process, its functions clocked.
 - **The backend's own, by recordings** (`backend_own.py`). Recordings of 30 s through the recipe of
   the plain chain by one worker: wall with Snakemake less wall in process.

@@ -149,6 +149,7 @@ def test_ratios_leave_out_the_start() -> None:
     found = {
         **{f"ours {p}": timed(8.0, 6.0) for p in full_recipe.PRECISIONS},
         **{f"start {p}": timed(2.0, 1.5) for p in full_recipe.PRECISIONS},
+        "as given": timed(9.0, 5.0),
         "vectorised": timed(40.0, 42.0),
         "loop": timed(50.0, 60.0),
         "bound": [Timed(9.0, 9.0, 1.0, bounds)],
@@ -156,7 +157,9 @@ def test_ratios_leave_out_the_start() -> None:
     said = full_chain.summary(found)
     for precision in full_recipe.PRECISIONS:
         assert said["over_bound"][precision] == Spread.of([(8 - 2) / len(full_bound.STAGES)])
-    assert said["times_faster"] == {"vectorised": Spread.of([7]), "loop": Spread.of([10])}
+    one_worker = {"vectorised": Spread.of([7]), "loop": Spread.of([10])}
+    assert said["times_faster_one_worker"] == one_worker
+    assert said["times_faster"] == {"vectorised": Spread.of([42 / 5]), "loop": Spread.of([12])}
 
 
 def _stages() -> str:
