@@ -29,10 +29,10 @@ from waveassay.plan.stretches import Stretch
 Action = Literal["prepare", "rows", "combine", "finish"]
 
 # Rough CPU seconds, only to balance jobs: they change no byte.
-_READ_COST_S = 1.0e-8  # a sample
-_PLAIN_COST_S = 6.0e-8  # a sample and step
-_FUSED_COST_S = 2.0e-8  # a sample and fused group
-_ROWS_COST_S = 1.0e-7  # a sample and step
+_READ_COST_S = 2.0e-9  # a sample
+_PLAIN_COST_S = 1.5e-8  # a sample and step
+_FUSED_COST_S = 1.0e-8  # a sample and fused group
+_ROWS_COST_S = 8.0e-9  # a sample and step
 _TASK_COST_S = 0.01
 _FINISH_COST_S = 0.02
 _FIGURE_COST_S = 0.13
