@@ -6,7 +6,6 @@ import resource
 import statistics
 import subprocess
 import sys
-import time
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -61,32 +60,37 @@ def timed(command: Sequence[str | Path]) -> Timed:
         When it fails; what it wrote is in the message.
     """
     env = {**os.environ, "PYTHONPATH": _with_tests()}
-    start = time.perf_counter()
+    said, pipe = os.pipe()
+    words = [str(part) for part in command]
     # One pipe for both streams, read to its end: one that nobody reads would block, and be timed.
     with subprocess.Popen(
-        [str(part) for part in command],
+        [sys.executable, "-S", str(_HERE / "launched.py"), str(pipe), *words],
         stdout=subprocess.PIPE,
         stderr=subprocess.STDOUT,
         text=True,
         env=env,
+        pass_fds=(pipe,),
     ) as process:
+        os.close(pipe)
         assert process.stdout is not None
         text = process.stdout.read()
-        _, status, usage = os.wait4(process.pid, 0)
-        wall_s = time.perf_counter() - start
-        process.returncode = os.waitstatus_to_exitcode(status)
-    if process.returncode:
-        raise RuntimeError(f"{command} ended with {process.returncode}: {text}")
-    return Timed(wall_s, usage.ru_utime + usage.ru_stime, _peak_mb(usage), text)
+        with os.fdopen(said, encoding="utf-8") as file:
+            took = file.read()
+    if not took:
+        raise RuntimeError(f"{words} could not be started: {text}")
+    known = json.loads(took)
+    if known["code"]:
+        raise RuntimeError(f"{words} ended with {known['code']}: {text}")
+    return Timed(known["wall_s"], known["cpu_s"], _peak_mb(known["peak"]), text)
 
 
 def own_peak_mb() -> float:
     """Return the most memory that this process has had resident."""
-    return _peak_mb(resource.getrusage(resource.RUSAGE_SELF))
+    return _peak_mb(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)
 
 
-def _peak_mb(usage: resource.struct_rusage) -> float:
-    return usage.ru_maxrss * (1 if sys.platform == "darwin" else 1024) / _MB
+def _peak_mb(most: int) -> float:
+    return most * (1 if sys.platform == "darwin" else 1024) / _MB
 
 
 def child(module: str, *arguments: str | Path | float) -> Timed:

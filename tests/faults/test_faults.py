@@ -262,6 +262,7 @@ def test_a_killed_worker_fails_its_own_recordings_and_the_rest_go_on(
     assert process.returncode in (0, 3), told
     if process.returncode == 3:
         assert "killed" in out
+        assert "--workers" in out
     again = command("run", made, "--into", tmp_path)
     assert again.returncode == 0, again.stderr
     newest = sorted((tmp_path / "runs").glob("faults-1-*"))[-1]

@@ -47,7 +47,10 @@ def failures_by_recording(
         if not text:
             continue
         lines = [line for line in text.splitlines() if line.strip()]
-        message = f"the work was cut off: {lines[-1].strip() if lines else text}. Run again."
+        message = f"the work was cut off: {lines[-1].strip() if lines else text}. Run again"
+        if "memory" in message:  # the only sign that a killed process leaves
+            message += "; if it happens again, with fewer processes at once (--workers)"
+        message += "."
         for task in job.tasks:
             failures.setdefault(
                 task.recording, Failure(task.recording, task.chain, "", message, text)
