@@ -76,9 +76,9 @@ def _backend(axes: Any, found: Mapping[str, Any]) -> None:
         ("own_s", "the backend's own", "#000000", "^"),
     ):
         axes.plot(count, [one[key] for one in known], color=colour, marker=marker, label=label)
+    axes.axhline(0, color="#cccccc", linewidth=0.8, zorder=0)  # a difference may be below it
     axes.set(
         xscale="log",
-        yscale="log",
         xlabel="recordings of 30 s",
         ylabel="wall time (s)",
         title="The backend, one worker",

@@ -238,6 +238,22 @@ def test_a_folder_that_may_not_be_written_is_said(made: Path, tmp_path: Path) ->
     assert "Traceback" not in done.stderr
 
 
+def test_a_folder_of_temporary_files_with_too_long_a_name_for_a_socket_will_do(
+    made: Path, undisturbed: str, tmp_path: Path
+) -> None:
+    temporary = tmp_path / ("a" * 100) / "temporary"
+    temporary.mkdir(parents=True)
+    done = subprocess.run(
+        [sys.executable, "-m", "waveassay", "run", str(made), "--into", str(tmp_path / "into")],
+        capture_output=True,
+        text=True,
+        env={**os.environ, "TMPDIR": str(temporary)},
+    )
+    assert done.returncode == 0, done.stderr
+    assert "Traceback" not in done.stderr
+    assert read_manifest(only_run(tmp_path / "into")).results_digest == undisturbed
+
+
 def children_of(process: int) -> list[int]:
     """Return the processes that a process has started and that are still there."""
     found = subprocess.run(["pgrep", "-P", str(process)], capture_output=True, text=True)

@@ -181,12 +181,14 @@ def finished_run(
 def notes_on(runs: Path, recipe: Recipe, checked: Path) -> list[str]:
     """Return what a user should know of the last few runs of this name and edition.
 
+    Only the newest is read for changes: each was, when the next one began.
+
     ``checked`` is as in `finished_run`.
     """
     notes = []
     finished = [folder for folder in _folders(runs, recipe) if (folder / MANIFEST).exists()]
     for folder in finished[-_LAST_FEW:]:
-        if found := _changes(folder, checked):
+        if folder == finished[-1] and (found := _changes(folder, checked)):
             notes.append(f"{folder.name} was changed after it was finished: {found[0].message}")
         digests = [event.get("recipe_digest", "") for event in _events(folder)]
         if digests and digests[-1] and digests[-1] != recipe.digest:

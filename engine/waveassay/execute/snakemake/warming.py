@@ -12,7 +12,7 @@ import threading
 from collections.abc import Iterator
 from contextlib import contextmanager, suppress
 from multiprocessing import forkserver
-from multiprocessing.context import ForkServerContext
+from multiprocessing.context import BaseContext
 from typing import Any
 
 #: A job is a process; threads in it would only get in each other's way.
@@ -23,16 +23,23 @@ _PRELOAD = "waveassay.execute.snakemake.preload"
 _ending: list[threading.Thread] = []
 
 
-def start() -> ForkServerContext:
-    """Start the process unless it runs, without waiting for it; return how to fork from it."""
+def start() -> BaseContext:
+    """Start the process unless it runs, without waiting for it; return how to fork from it.
+
+    Where it cannot be started, workers are started one by one: it is reached by a socket, whose
+    place (the folder of temporary files) may have too long a name or be closed to us.
+    """
     while _ending:
         _ending.pop().join()
     for name in THREAD_VARIABLES:
         os.environ[name] = "1"  # before numpy is loaded
     context = multiprocessing.get_context("forkserver")
     context.set_forkserver_preload([_PRELOAD])
-    with no_main_module():
-        forkserver.ensure_running()
+    try:
+        with no_main_module():
+            forkserver.ensure_running()
+    except OSError:
+        return multiprocessing.get_context("spawn")
     return context
 
 
