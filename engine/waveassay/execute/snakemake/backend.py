@@ -99,7 +99,7 @@ def _workers(folder: Path) -> Iterator[None]:
     at_hand.append(workers)
     try:
         yield
-    except BaseException:
+    except BaseException:  # Ctrl-C too: no worker may go on
         workers.cancel()
         raise
     finally:
