@@ -30,6 +30,11 @@ if os.environ.get("WAVEASSAY_SLURM") != "1":
         allow_module_level=True,
     )
 HERE = Path(__file__).parent
+FIGURES = """\
+    - export.figure: {show: spectrogram}
+    - spectrum.average: {}
+    - export.figure: {show: spectrum}
+"""
 
 
 @pytest.fixture(scope="module", autouse=True)
@@ -49,8 +54,14 @@ def _cluster(tmp_path_factory: pytest.TempPathFactory) -> Iterator[None]:
 
 @pytest.fixture(scope="module")
 def made(tmp_path_factory: pytest.TempPathFactory) -> Path:
-    """Write 40 short recordings; `$`, a space and a brace stand in the path."""
-    return working_directory(tmp_path_factory.mktemp("made") / "a $HOME {x}", 40, 120)
+    """Write 40 short recordings; `$`, a space and a brace stand in the path.
+
+    Without figures all of it would be one job.
+    """
+    folder = working_directory(tmp_path_factory.mktemp("made") / "a $HOME {x}", 40, 120)
+    with (folder / "recipe.yaml").open("a") as recipe:
+        recipe.write(FIGURES)
+    return folder
 
 
 @pytest.fixture(scope="module")
