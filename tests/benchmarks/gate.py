@@ -22,9 +22,9 @@ CHANNELS, LENGTH_S, SHORT_S, ROUNDS = 8, 3600, 8, 5
 #: The loop takes long, and as much for each epoch: a part of the recording will do.
 LOOP_LENGTH_S = 300
 STAGES_HOURS = 0.5
-#: Share by which the favourable quartile of a ratio may miss. Rounds of the same code lie up to a
-#: fifth off their median, on a virtual machine with neighbours.
-NOISE = 0.25
+#: Share by which the favourable quartile of a ratio may miss: what it varies by from run to run of
+#: the same code on a busy machine. Single rounds lie further off; that is what the quartile is for.
+NOISE = 0.15
 
 
 @dataclass(frozen=True)

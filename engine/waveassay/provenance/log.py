@@ -205,7 +205,7 @@ class Log:
             written = 0
             while written < len(line):
                 written += os.write(descriptor, line[written:])
-        except BaseException:
+        except BaseException:  # Ctrl-C too
             # A full disk leaves no half line behind, so that the run can say so in its log later.
             with suppress(OSError):
                 os.ftruncate(descriptor, start)
