@@ -113,8 +113,9 @@ def width_of(text: str, size: float) -> float:
 def shortened(text: str, length: int) -> str:
     """Return a text of at most ``length`` characters, its middle replaced by an ellipsis.
 
-    Names that belong together mostly differ at their ends.
+    Names that belong together mostly differ at their ends. Spaces around it take no room.
     """
+    text = text.strip()
     if len(text) <= length:
         return text
     tail = (length - 1) // 3
@@ -124,7 +125,7 @@ def shortened(text: str, length: int) -> str:
 def fitted(text: str, room: float, size: float) -> str:
     """Return a text shortened to about ``room`` pixels; empty where three characters are cut."""
     length = int(room / width_of("x", size))
-    return shortened(text, length) if length >= min(4, len(text)) else ""
+    return shortened(text, length) if length >= min(4, len(text.strip())) else ""
 
 
 def title(figure: "Figure", name: str, note: str, right: int = WIDTH) -> None:
