@@ -6,6 +6,7 @@ from pathlib import Path
 from typing import Any
 
 from waveassay.contract import Data, Features, Part, Signal
+from waveassay.contract.kinds import exclusions_within
 from waveassay.execute.arrays import Group, exclusions_to_json, group_writer
 from waveassay.execute.feature_arrays import ROWS_OF, features_to_arrays
 from waveassay.execute.moves import collect_move, run_move, starting_in
@@ -25,8 +26,11 @@ MASKS = "masks"
 
 def make_rows(
     source: SignalSource, pass_no: int, stretch: Stretch, states: States, folder: Path
-) -> None:
-    """Run the steps on rows over a stretch; keep features, what is collected, and masks."""
+) -> dict[str, str]:
+    """Run the steps on rows over a stretch; keep features, what is collected, and masks.
+
+    Returns the SHA-256 of the file written, by its name.
+    """
     with group_writer(folder / FILE) as writer:
         for lane_no, signals in source.by_lane(_wanted(source, pass_no, stretch)):
             lane = source.passage.lanes[lane_no]
@@ -36,6 +40,7 @@ def make_rows(
             group = _lane_rows(lane, pass_no, precision, bounds_s, {**signals}, applied)
             writer.add(str(lane_no), group)
         writer.end({OUTSIDE: sorted(source.outside)})
+    return {FILE: writer.sha256}
 
 
 def _lane_rows(
@@ -58,7 +63,9 @@ def _lane_rows(
         if move.pass_no != pass_no:
             continue
         if isinstance(taken, Signal):
-            masks[str(move.index)] = exclusions_to_json(taken.cut(*bounds_s).excluded)
+            masks[str(move.index)] = exclusions_to_json(
+                exclusions_within(taken.excluded, *bounds_s)
+            )
         if isinstance(made, Features):
             features[move.index] = made
     arrays, rows_of = features_to_arrays(features)
