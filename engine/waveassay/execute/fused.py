@@ -150,23 +150,27 @@ def _middle(ready: Filter, signal: Signal, span: Span, own: Span) -> list[Floats
     return parts
 
 
-def _rows(ready: Filter, signal: Signal, firsts: Sequence[int]) -> Floats:
-    """Return blocks of input that begin at some samples, zeros where the piece has none."""
-    x, apart = signal.x, np.diff(firsts)
+def _rows(ready: Filter, signal: Signal, firsts: Sequence[int]) -> Sequence[Floats] | Floats:
+    """Return blocks of input that begin at some samples, zeros where the piece has none.
+
+    Where all is there they are views, which overlap: copies cost a tenth of all.
+    """
+    x, length, apart = signal.x, ready.length, np.diff(firsts)
     inside = firsts[0] >= 0 and firsts[-1] + ready.reads <= x.size
-    if inside and ready.reads == ready.length and np.all(apart == apart[:1]):
-        # Blocks are views, which overlap: a copy costs a tenth of all.
-        several = sliding_window_view(x[firsts[0] :], ready.length)
+    if inside and ready.reads == length and np.all(apart == apart[:1]):
+        several = sliding_window_view(x[firsts[0] :], length)
         return several[:: int(apart[0]) if len(firsts) > 1 else 1][: len(firsts)]
-    rows = np.empty((len(firsts), ready.length))
+    rows = []
     starts_with_piece = signal.start_s == signal.piece.start_s
-    for row, first in zip(rows, firsts, strict=True):
+    for first in firsts:
         begin, stop = max(0, first), min(first + ready.reads, x.size)
         assert first >= 0 or starts_with_piece, "a block's input is there, or begins with the piece"
         assert stop == first + ready.reads or signal.stop_s == signal.piece.stop_s, "likewise"
-        row[: begin - first] = 0
-        row[begin - first : stop - first] = x[begin:stop]
-        row[stop - first :] = 0
+        row = x[begin:stop]
+        if row.size < length:
+            row = np.zeros(length)
+            row[begin - first : stop - first] = x[begin:stop]
+        rows.append(row)
     return rows
 
 

@@ -87,7 +87,7 @@ class Fold:
     parts: tuple[_Part, ...]
     leaks: tuple[_Part, ...]
 
-    def of_blocks(self, blocks: Floats) -> Complex:
+    def of_blocks(self, blocks: Sequence[Floats] | Floats) -> Complex:
         """Return the output's bins of blocks of samples, shape (blocks, bins)."""
         from scipy import fft
 
@@ -179,7 +179,7 @@ class Decimation:
     length_out: int
     gain: Complex
 
-    def of_blocks(self, blocks: Floats) -> Complex:
+    def of_blocks(self, blocks: Sequence[Floats] | Floats) -> Complex:
         """Return the output's bins of blocks of samples, shape (blocks, bins)."""
         from scipy import fft
 
@@ -275,8 +275,10 @@ def _whole(gain: Gain, length: int) -> Gain:
     return np.concatenate((gain, np.conj(back)))
 
 
-def apply(blocks: Floats, first: Fold | Decimation, more: Sequence[Fold] = ()) -> Floats:
-    """Return blocks of output; input of shape (blocks, n), zeros where there is none."""
+def apply(
+    blocks: Sequence[Floats] | Floats, first: Fold | Decimation, more: Sequence[Fold] = ()
+) -> Floats:
+    """Return blocks of output; input of n samples each, zeros where there is none."""
     from scipy import fft
 
     bins, length = first.of_blocks(blocks), first.length_out
