@@ -1,6 +1,8 @@
 """Arrays and facts in one file: what is written is read, and equal content is equal bytes."""
 
+import hashlib
 from pathlib import Path
+from tempfile import TemporaryDirectory
 from typing import Any
 
 import numpy as np
@@ -13,6 +15,7 @@ from waveassay.execute.arrays import (
     ArrayFile,
     Group,
     coded,
+    group_writer,
     save_groups,
     texts_from_arrays,
     texts_to_arrays,
@@ -65,6 +68,40 @@ def test_a_group_is_read_without_the_others(tmp_path: Path) -> None:
     file = ArrayFile(tmp_path / "file")
     np.testing.assert_array_equal(file.group("b").arrays["x"], np.ones(500))
     assert not np.array_equal(file.group("c").arrays["x"], np.zeros(500))
+
+
+@given(st.integers(0, 300), st.integers(0, 300), st.sampled_from(["<f4", "<f8"]))
+def test_a_part_of_an_array_is_what_stands_there(first: int, count: int, kind: str) -> None:
+    with TemporaryDirectory() as folder:
+        path = Path(folder) / "file"
+        arrays = {"before": np.ones(3), "x": np.arange(200).astype(kind)}
+        save_groups(path, {"a": Group({"x": np.zeros(9)}), "b": Group(arrays, "fact")})
+        file, out = ArrayFile(path), np.empty(count, kind)
+        assert file.facts_of("b") == "fact"
+        if first + count > 200:
+            with pytest.raises(ValueError, match="x of b is 200 numbers"):
+                file.fill(out, "b", "x", first)
+            return
+        file.fill(out, "b", "x", first)
+        np.testing.assert_array_equal(out, arrays["x"][first : first + count])
+
+
+def test_a_part_is_refused_where_the_file_ends_or_the_kind_is_another(tmp_path: Path) -> None:
+    save_groups(tmp_path / "file", {"a": Group({"x": np.ones(100)})})
+    file = ArrayFile(tmp_path / "file")
+    with pytest.raises(ValueError, match="of kind <f8"):
+        file.fill(np.empty(100, np.float32), "a", "x", 0)
+    (tmp_path / "file").write_bytes(bytes(700))
+    with pytest.raises(ValueError, match="the file ends within x of a"):
+        file.fill(np.empty(100), "a", "x", 0)
+
+
+def test_a_writer_knows_the_digest_of_what_it_wrote(tmp_path: Path) -> None:
+    with group_writer(tmp_path / "file") as writer:
+        writer.add("a", Group({"x": np.arange(3.0), "y": np.zeros(0)}, {"fact": 1}))
+        writer.add("b", Group({"x": np.arange(64.0)}))
+        writer.end(None)
+    assert writer.sha256 == hashlib.sha256((tmp_path / "file").read_bytes()).hexdigest()
 
 
 def test_python_objects_are_refused(tmp_path: Path) -> None:

@@ -271,12 +271,25 @@ def test_a_fold_is_zeros_between_a_gain_and_every_dth_sample(
     spread[:, ::up] = x * up
     kept = np.fft.irfft(np.fft.rfft(spread) * between, n * up)[:, ::down]
     expected = np.fft.irfft(np.fft.rfft(kept) * after, n * up // down)
-    made = overlap_save.apply(blocks, [fold])
+    made = overlap_save.apply(blocks, fold)
     scale = float(np.max(np.abs(expected)))
     # What is taken in single precision is right to 3e-7 of a gain of 1e-4, in each of D parts.
     assert made == pytest.approx(expected, abs=1e-12 * max(1.0, scale) + 3e-11 * down * size)
-    alone = [overlap_save.apply(blocks[k : k + 1], [fold]) for k in range(3)]
+    alone = [overlap_save.apply(blocks[k : k + 1], fold) for k in range(3)]
     assert np.concatenate(alone).tobytes() == made.tobytes()
+
+
+@given(st.integers(2, 9), st.integers(1, 5), st.booleans(), st.integers(0, 1000))
+def test_a_decimation_is_a_gain_and_every_dth_sample(
+    down: int, size: int, turns: bool, seed: int
+) -> None:
+    rng = np.random.default_rng(seed)
+    n = size * down
+    gain = np.fft.rfft(rng.standard_normal(n)) if turns else rng.random(n // 2 + 1)
+    blocks = rng.standard_normal((3, n))
+    expected = np.fft.irfft(np.fft.rfft(blocks) * gain, n)[:, ::down]
+    made = overlap_save.apply(blocks, overlap_save.decimation_of(n, down, gain))
+    assert made == pytest.approx(expected, abs=1e-12 * max(1.0, float(np.max(np.abs(expected)))))
 
 
 def test_many_leaks_are_summed_in_single_precision_and_large_samples_in_double() -> None:
@@ -292,10 +305,10 @@ def test_many_leaks_are_summed_in_single_precision_and_large_samples_in_double()
     spread = np.zeros((3, n * up))
     spread[:, ::up] = blocks * up
     expected = np.fft.irfft(np.fft.rfft(spread) * between, n * up)[:, ::down]
-    made = overlap_save.apply(blocks, [fold])
+    made = overlap_save.apply(blocks, fold)
     assert np.max(np.abs(made - expected)) < 1e-10
     large = blocks * np.array([[1.0], [1e60], [1.0]])
-    beside = overlap_save.apply(large, [fold])
+    beside = overlap_save.apply(large, fold)
     assert beside[::2].tobytes() == made[::2].tobytes()
     assert beside[1] == pytest.approx(1e60 * expected[1], abs=1e60 * 1e-10)
 

@@ -1,5 +1,6 @@
 """The store: whole results or none, found by key, checked when read."""
 
+import hashlib
 import subprocess
 import sys
 from pathlib import Path
@@ -9,7 +10,7 @@ import pytest
 from waveassay.contract import SignalError
 from waveassay.execute.store import MissingArtefactError, Store
 
-KEY = "ab" + "0" * 62
+KEY, OTHER = "ab" + "0" * 62, "cd" + "0" * 62
 
 
 def put(store: Store, text: str = "number") -> None:
@@ -33,6 +34,23 @@ def test_the_digest_is_of_the_content_alone(tmp_path: Path) -> None:
         put(store, text)
     digests = [store.read(KEY).digest for store in stores]
     assert digests[0] == digests[1] != digests[2]
+
+
+def test_a_digest_that_is_told_spares_reading_the_file_and_must_be_its(tmp_path: Path) -> None:
+    store, known = Store(tmp_path), dict[str, str]()
+    with store.writing(KEY, "e", known) as folder:
+        (folder / "value.txt").write_text("number")
+        (folder / "other.txt").write_text("other")
+        known["value.txt"] = hashlib.sha256(b"number").hexdigest()
+    told = store.read(KEY).files
+    assert told == {
+        "other.txt": hashlib.sha256(b"other").hexdigest(),
+        "value.txt": known["value.txt"],
+    }
+    with store.writing(OTHER, "e", {"value.txt": hashlib.sha256(b"wrong").hexdigest()}) as folder:
+        (folder / "value.txt").write_text("number")
+    with pytest.raises(SignalError, match="was changed or lost"):
+        store.read(OTHER)
 
 
 def test_work_that_fails_leaves_nothing(tmp_path: Path) -> None:

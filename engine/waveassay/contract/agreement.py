@@ -2,12 +2,14 @@
 
 from collections.abc import Iterator
 from math import isclose
+from typing import Any
 
 import numpy as np
 
 from waveassay.contract.kinds import Epochs, Features, Signal, Spectra
 from waveassay.contract.spec import EpochsSpec, FeaturesSpec, SignalSpec, SpectraSpec
 
+_DOUBLE, _SINGLE = np.dtype(np.float64), np.dtype(np.float32)
 _ANNOUNCED: dict[type, type] = {
     SignalSpec: Signal,
     EpochsSpec: Epochs,
@@ -32,10 +34,7 @@ def disagreements(spec: object, taken: object, out: object) -> Iterator[str]:
         yield f"its spec says {kind.__name__}, and {type(out).__name__} comes out"
         return
     for what, said, found in _said_and_found(spec, out):
-        same = said == found
-        if isinstance(said, float) and isinstance(found, float):
-            same = isclose(said, found, rel_tol=1e-9)
-        if not same:
+        if said is not found and said != found and not _close(said, found):
             yield f"its spec says {what} {said}, and {found} comes out"
     if isinstance(out, Signal) and isinstance(taken, Signal):
         yield from _misplaced(taken, out)
@@ -44,58 +43,75 @@ def disagreements(spec: object, taken: object, out: object) -> Iterator[str]:
     yield from _imprecise(taken, out)
 
 
-def _said_and_found(spec: object, out: object) -> Iterator[tuple[str, object, object]]:
+def _close(said: object, found: object) -> bool:
+    if isinstance(said, float) and isinstance(found, float):
+        return isclose(said, found, rel_tol=1e-9)
+    return False
+
+
+def _said_and_found(spec: object, out: object) -> tuple[tuple[str, object, object], ...]:
     if isinstance(spec, SignalSpec) and isinstance(out, Signal):
-        yield "name", spec.name, out.name
-        yield "unit", spec.unit, out.unit
-        yield "rate", spec.rate_hz, out.rate_hz
-    elif isinstance(spec, EpochsSpec) and isinstance(out, Epochs):
-        yield "length", spec.length_s, float(out.length / out.signal.rate_hz)
-        yield "unit", spec.signal.unit, out.signal.unit
-        yield "rate", spec.signal.rate_hz, out.signal.rate_hz
-    elif isinstance(spec, SpectraSpec) and isinstance(out, Spectra):
-        yield "name", spec.signal.name, out.signal
-        yield "unit", spec.signal.unit, out.unit
-        yield "resolution", spec.resolution_hz, out.resolution_hz
-        yield "spacing", spec.bin_hz, out.bin_hz
-        yield "highest frequency", spec.top_hz, float(out.freq_hz[-1])
-        yield "densities", (len(out.rows), out.freq_hz.size), out.density.shape
-    elif isinstance(spec, FeaturesSpec) and isinstance(out, Features):
-        yield "name", spec.signal.name, out.signal
-        yield "columns", [column.part for column in spec.columns], list(out.columns)
+        return (
+            ("name", spec.name, out.name),
+            ("unit", spec.unit, out.unit),
+            ("rate", spec.rate_hz, out.rate_hz),
+        )
+    if isinstance(spec, EpochsSpec) and isinstance(out, Epochs):
+        return (
+            ("length", spec.length_s, float(out.length / out.signal.rate_hz)),
+            ("unit", spec.signal.unit, out.signal.unit),
+            ("rate", spec.signal.rate_hz, out.signal.rate_hz),
+        )
+    if isinstance(spec, SpectraSpec) and isinstance(out, Spectra):
+        return (
+            ("name", spec.signal.name, out.signal),
+            ("unit", spec.signal.unit, out.unit),
+            ("resolution", spec.resolution_hz, out.resolution_hz),
+            ("spacing", spec.bin_hz, out.bin_hz),
+            ("highest frequency", spec.top_hz, float(out.freq_hz[-1])),
+            ("densities", (len(out.rows), out.freq_hz.size), out.density.shape),
+        )
+    if isinstance(spec, FeaturesSpec) and isinstance(out, Features):
         sizes = {values.size for values in out.columns.values()} | {len(out.missing)}
-        yield "one value a row:", {len(out.rows)}, sizes
+        return (
+            ("name", spec.signal.name, out.signal),
+            ("columns", [column.part for column in spec.columns], list(out.columns)),
+            ("one value a row:", {len(out.rows)}, sizes),
+        )
+    return ()
 
 
 def _imprecise(taken: object, out: object) -> Iterator[str]:
     """Yield what is held in a precision that was not given: see `waveassay.contract.kinds`."""
-    if isinstance(out, Signal) and out.x.dtype != np.float64:
+    if isinstance(out, Signal) and out.x.dtype != _DOUBLE:
         yield (
             f"samples come out as {out.x.dtype}, and float64 is expected "
             "(Signal.with_samples sees to it)"
         )
     if isinstance(out, Spectra):
-        given = _held(taken)
-        allowed = ("float64",) if given == "float64" else ("float64", "float32")
-        if str(out.density.dtype) not in allowed:
+        given, held = _held(taken), out.density.dtype
+        if held != _DOUBLE and (held != _SINGLE or given == _DOUBLE):
+            allowed = "float64" if given == _DOUBLE else "float64 or float32"
             yield (
-                f"densities come out as {out.density.dtype} of what is held as {given}, and "
-                f"{' or '.join(allowed)} is expected"
+                f"densities come out as {held} of what is held as {given or 'arrays'}, and "
+                f"{allowed} is expected"
             )
 
 
-def _held(data: object) -> str:
-    """Return how samples or densities are held; ``arrays`` where a step combines what it has."""
+def _held(data: object) -> np.dtype[Any] | None:
+    """Return how samples or densities are held; None where a step combines what it has."""
     if isinstance(data, Epochs):
-        return str(data.signal.x.dtype)
+        return data.signal.x.dtype
     if isinstance(data, Signal):
-        return str(data.x.dtype)
-    return str(data.density.dtype) if isinstance(data, Spectra) else "arrays"
+        return data.x.dtype
+    return data.density.dtype if isinstance(data, Spectra) else None
 
 
 def _misplaced(taken: Signal, out: Signal) -> Iterator[str]:
     if out.start_s != taken.start_s:
         yield f"the signal starts at {taken.start_s} s, and {out.start_s} s comes out"
+    if out.x.size == taken.x.size and out.rate_hz == taken.rate_hz:
+        return
     count = taken.x.size * out.rate_hz / taken.rate_hz
     if abs(out.x.size - count) >= 1:
         yield (
@@ -110,6 +126,8 @@ def _gaps(out: Features) -> Iterator[str]:
     if not columns or len(out.missing) != count:
         return
     absent = np.isnan(np.array(list(columns.values())))  # of all columns at once
+    if not np.any(absent == out.rows.kept):
+        return  # as it mostly is: values where rows are kept, and nowhere else
     for part in np.flatnonzero(~np.all(absent | kept, axis=-1)):
         yield f"column '{list(columns)[part]}' has values in rows that are not kept"
     for part in np.flatnonzero(np.any(absent & kept, axis=-1)):

@@ -46,7 +46,7 @@ def _freeze(*arrays: NDArray[Any]) -> None:
         array.flags.writeable = False
 
 
-def _place_of(time_s: Fraction, origin_s: Fraction, rate_hz: Fraction) -> int:
+def place_of(time_s: Fraction, origin_s: Fraction, rate_hz: Fraction) -> int:
     """Return ``ceil((time - origin) * rate)`` in whole numbers: `Fraction` reduces at each step."""
     behind = origin_s.numerator * time_s.denominator - time_s.numerator * origin_s.denominator
     each = time_s.denominator * origin_s.denominator * rate_hz.denominator
@@ -103,6 +103,17 @@ def merged(exclusions: Iterable[Exclusion]) -> tuple[Exclusion, ...]:
     return tuple(sorted(item for items in by_reason.values() for item in items))
 
 
+def exclusions_within(
+    exclusions: Iterable[Exclusion], start_s: Fraction, stop_s: Fraction
+) -> tuple[Exclusion, ...]:
+    """Return what of exclusions lies between two times."""
+    return merged(
+        Exclusion(max(start_s, e.start_s), min(stop_s, e.stop_s), e.reason)
+        for e in exclusions
+        if e.start_s < stop_s and start_s < e.stop_s
+    )
+
+
 @dataclass(frozen=True)
 class Signal:
     """A signal over a stretch of one piece (a part of a recording without gaps).
@@ -141,7 +152,7 @@ class Signal:
 
     def index_at(self, time_s: Fraction) -> int:
         """Return the index of the first sample at or after a time, not clipped to ``x``."""
-        return _place_of(time_s, self.start_s, self.rate_hz)
+        return place_of(time_s, self.start_s, self.rate_hz)
 
     def with_samples(
         self, x: Floats, *, rate_hz: Fraction | None = None, unit: str | None = None
@@ -208,13 +219,11 @@ class Signal:
         """Return the samples at or after ``start_s`` and before ``stop_s``, masks cut alike."""
         first = min(max(0, self.index_at(start_s)), self.x.size)
         last = min(max(first, self.index_at(stop_s)), self.x.size)
-        kept = (
-            Exclusion(max(start_s, e.start_s), min(stop_s, e.stop_s), e.reason)
-            for e in self.excluded
-            if e.start_s < stop_s and start_s < e.stop_s
-        )
         return replace(
-            self, x=self.x[first:last], start_s=self.time_s(first), excluded=merged(kept)
+            self,
+            x=self.x[first:last],
+            start_s=self.time_s(first),
+            excluded=exclusions_within(self.excluded, start_s, stop_s),
         )
 
 

@@ -1,17 +1,19 @@
 """Named arrays and facts in one file of the store, by signal.
 
-The file is a block for each group of arrays (its own index and the arrays' bytes), the index of
-the blocks (JSON), and where that begins (8 bytes, little-endian); blocks and arrays begin at
-multiples of 64 bytes. One group is written or read without the others in memory. An archive of as
-many arrays (npz) takes longer to open than to read.
+The file is the arrays' bytes, those of a group together, then the index (JSON), and where that
+begins (8 bytes, little-endian); arrays begin at multiples of 64 bytes. One group is written, or
+read, without the others in memory. An archive of as many arrays (npz) takes longer to open than to
+read.
 """
 
+import hashlib
 import json
 import os
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass, field
 from fractions import Fraction
+from functools import lru_cache
 from pathlib import Path
 from typing import Any, BinaryIO
 
@@ -42,8 +44,14 @@ class GroupWriter:
 
     def __init__(self, file: BinaryIO) -> None:
         self._file = file
-        self._places: dict[str, tuple[int, int]] = {}
+        self._sha256 = hashlib.sha256()
+        self._groups: dict[str, Any] = {}
         self._offset = 0
+
+    @property
+    def sha256(self) -> str:
+        """The SHA-256 of what was written."""
+        return self._sha256.hexdigest()
 
     def add(self, name: str, group: Group) -> None:
         """Write a group.
@@ -53,17 +61,32 @@ class GroupWriter:
         ValueError
             When an array holds Python objects.
         """
-        begun = self._offset
-        for piece in _packed(group):
-            self._file.write(piece)
-            self._file.write(bytes(_padded(piece.nbytes) - piece.nbytes))
-            self._offset += _padded(piece.nbytes)
-        self._places[name] = (begun, self._offset - begun)
+        places, pieces, size = {}, [], 0
+        for key, array in group.arrays.items():
+            if array.dtype.hasobject:
+                raise ValueError(f"array {key} holds Python objects")
+            plain = np.ascontiguousarray(array)
+            places[key] = [plain.dtype.str, array.shape, size]
+            pieces.append(plain.reshape(-1).view(np.uint8).data)
+            gap = -plain.nbytes % _ALIGNED
+            if gap:
+                pieces.append(memoryview(bytes(gap)))
+            size += plain.nbytes + gap
+        self._groups[name] = {"facts": group.facts, "arrays": places, "place": [self._offset, size]}
+        # Most groups are many small arrays, which are faster written as one.
+        self._write(pieces[0] if len(pieces) == 1 else b"".join(pieces))
 
     def end(self, facts: Any) -> None:
         """Write the index, with facts about all groups."""
-        self._file.write(_json({"facts": facts, "groups": self._places}))
-        self._file.write(self._offset.to_bytes(_LENGTH, "little"))
+        begin = self._offset
+        index = {"facts": facts, "groups": self._groups}
+        self._write(json.dumps(index, sort_keys=True).encode())
+        self._write(begin.to_bytes(_LENGTH, "little"))
+
+    def _write(self, block: bytes | memoryview) -> None:
+        self._file.write(block)
+        self._sha256.update(block)
+        self._offset += len(block)
 
 
 @contextmanager
@@ -91,55 +114,53 @@ class ArrayFile:
             begin = int.from_bytes(file.read(_LENGTH), "little")
             index = json.loads(_read(file, begin, end - begin))
         self.facts: Any = index["facts"]
-        self._places: dict[str, tuple[int, int]] = index["groups"]
+        self._groups: dict[str, Any] = index["groups"]
 
     def __iter__(self) -> Iterator[str]:
-        return iter(self._places)
+        return iter(self._groups)
+
+    def facts_of(self, name: str) -> Any:
+        """Return the facts of one group; nothing is read."""
+        return self._groups[name]["facts"]
 
     def group(self, name: str) -> Group:
         """Read one group; its arrays may not be written."""
+        known = self._groups[name]
         with self.path.open("rb") as file:
-            return _unpacked(_read(file, *self._places[name]))
+            block = _read(file, *known["place"])
+        arrays = {}
+        for key, (kind, shape, offset) in known["arrays"].items():
+            dtype = np.dtype(kind)
+            count = int(np.prod(shape, dtype=np.int64))
+            flat = np.frombuffer(block, dtype, count, offset) if count else np.empty(0, dtype)
+            arrays[key] = flat.reshape(shape)
+        return Group(arrays, known["facts"])
 
+    def fill(self, out: NDArray[Any], name: str, array: str, first: int) -> None:
+        """Read a part of one array of one dimension, from element ``first`` on, and nothing else.
 
-def _json(known: Any) -> bytes:
-    return json.dumps(known, sort_keys=True).encode()
+        Parameters
+        ----------
+        out : what is filled; contiguous, and of the array's kind.
 
-
-def _packed(group: Group) -> list[memoryview]:
-    """Return the bytes of a group in pieces, each of which is padded when it is written."""
-    index, pieces, offset = {}, [], 0
-    for name, array in group.arrays.items():
-        if array.dtype.hasobject:
-            raise ValueError(f"array {name} holds Python objects")
-        plain = np.ascontiguousarray(array)
-        index[name] = [plain.dtype.str, array.shape, offset]
-        pieces.append(plain.reshape(-1).view(np.uint8).data)
-        offset += _padded(plain.nbytes)
-    text = _json({"facts": group.facts, "arrays": index})
-    return [memoryview(len(text).to_bytes(_LENGTH, "little") + text), *pieces]
-
-
-def _unpacked(block: bytes) -> Group:
-    length = int.from_bytes(block[:_LENGTH], "little")
-    index = json.loads(block[_LENGTH : _LENGTH + length])
-    first = _padded(_LENGTH + length)
-    arrays = {}
-    for name, (kind, shape, offset) in index["arrays"].items():
-        dtype = np.dtype(kind)
-        count = int(np.prod(shape, dtype=np.int64))
-        flat = np.frombuffer(block, dtype, count, first + offset) if count else np.empty(0, dtype)
-        arrays[name] = flat.reshape(shape)
-    return Group(arrays, index["facts"])
+        Raises
+        ------
+        ValueError
+            When the array is of another kind, or ends before.
+        """
+        known = self._groups[name]
+        kind, (count,), offset = known["arrays"][array]
+        if out.dtype.str != kind or first + out.size > count:
+            raise ValueError(f"{self.path}: {array} of {name} is {count} numbers of kind {kind}")
+        with self.path.open("rb") as file:
+            file.seek(known["place"][0] + offset + first * out.itemsize)
+            if file.readinto(out.view(np.uint8).data) != out.nbytes:
+                raise ValueError(f"{self.path}: the file ends within {array} of {name}")
 
 
 def _read(file: BinaryIO, start: int, size: int) -> bytes:
     file.seek(start)
     return file.read(size)
-
-
-def _padded(size: int) -> int:
-    return -(-size // _ALIGNED) * _ALIGNED
 
 
 def texts_to_arrays(name: str, texts: Sequence[str]) -> Arrays:
@@ -167,4 +188,10 @@ def exclusions_to_json(exclusions: tuple[Exclusion, ...]) -> list[list[str]]:
 
 def exclusions_from_json(items: list[list[str]]) -> tuple[Exclusion, ...]:
     """Read what `exclusions_to_json` wrote."""
-    return tuple(Exclusion(Fraction(a), Fraction(b), reason) for a, b, reason in items)
+    return tuple(Exclusion(fraction_of(a), fraction_of(b), reason) for a, b, reason in items)
+
+
+@lru_cache(maxsize=1 << 12)
+def fraction_of(text: str) -> Fraction:
+    """Read an exact number; signals have most of their times in common."""
+    return Fraction(text)

@@ -22,7 +22,15 @@ from waveassay.contract import (
     SignalSpec,
 )
 from waveassay.execute.moves import gain_move, mask_move, run_move
-from waveassay.execute.overlap_save import Fold, apply, fast_length, fold_of, support
+from waveassay.execute.overlap_save import (
+    Decimation,
+    Fold,
+    apply,
+    decimation_of,
+    fast_length,
+    fold_of,
+    support,
+)
 from waveassay.plan.blocks import BlockGrid, Span
 from waveassay.plan.fusing import Unit, ratio_of
 from waveassay.plan.program import Move
@@ -41,7 +49,8 @@ class Filter:
     rest : how far the steps that follow each step look ahead in all, and back, in steps.
     in_step, out_step : samples of input and output in a step of the grid.
     reads : how much input a block has, in samples; zeros follow.
-    length : samples in a block's transform.
+    length : samples in a block, zeros included.
+    first, folds : what makes bins of a block's samples, and what follows on the bins.
     """
 
     grid: BlockGrid
@@ -52,6 +61,7 @@ class Filter:
     out_step: int
     reads: int
     length: int
+    first: Fold | Decimation
     folds: tuple[Fold, ...]
 
 
@@ -132,7 +142,7 @@ def _middle(ready: Filter, signal: Signal, span: Span, own: Span) -> list[Floats
     for i in range(0, len(blocks), _AT_ONCE):
         some = starts[i : i + _AT_ONCE]
         rows = _rows(ready, signal, [start * ready.in_step - offset for start in some])
-        out = apply(rows, ready.folds)
+        out = apply(rows, ready.first, ready.folds)
         for k, start, row in zip(blocks[i : i + _AT_ONCE], some, out, strict=True):
             first = low if k == blocks[0] else grid.border(k)
             stop = high if k == blocks[-1] else grid.border(k + 1)
@@ -140,23 +150,27 @@ def _middle(ready: Filter, signal: Signal, span: Span, own: Span) -> list[Floats
     return parts
 
 
-def _rows(ready: Filter, signal: Signal, firsts: Sequence[int]) -> Floats:
-    """Return blocks of input that begin at some samples, zeros where the piece has none."""
-    x, apart = signal.x, np.diff(firsts)
+def _rows(ready: Filter, signal: Signal, firsts: Sequence[int]) -> Sequence[Floats] | Floats:
+    """Return blocks of input that begin at some samples, zeros where the piece has none.
+
+    Where all is there they are views, which overlap: copies cost a tenth of all.
+    """
+    x, length, apart = signal.x, ready.length, np.diff(firsts)
     inside = firsts[0] >= 0 and firsts[-1] + ready.reads <= x.size
-    if inside and ready.reads == ready.length and np.all(apart == apart[:1]):
-        # Blocks are views, which overlap: a copy costs a tenth of all.
-        several = sliding_window_view(x[firsts[0] :], ready.length)
+    if inside and ready.reads == length and np.all(apart == apart[:1]):
+        several = sliding_window_view(x[firsts[0] :], length)
         return several[:: int(apart[0]) if len(firsts) > 1 else 1][: len(firsts)]
-    rows = np.empty((len(firsts), ready.length))
+    rows = []
     starts_with_piece = signal.start_s == signal.piece.start_s
-    for row, first in zip(rows, firsts, strict=True):
+    for first in firsts:
         begin, stop = max(0, first), min(first + ready.reads, x.size)
         assert first >= 0 or starts_with_piece, "a block's input is there, or begins with the piece"
         assert stop == first + ready.reads or signal.stop_s == signal.piece.stop_s, "likewise"
-        row[: begin - first] = 0
-        row[begin - first : stop - first] = x[begin:stop]
-        row[stop - first :] = 0
+        row = x[begin:stop]
+        if row.size < length:
+            row = np.zeros(length)
+            row[begin - first : stop - first] = x[begin:stop]
+        rows.append(row)
     return rows
 
 
@@ -248,36 +262,59 @@ def _made_ready(group: _Group, grid: BlockGrid) -> Filter:
         before, after = before + sides[0], after + sides[1]
     in_step = _samples(unit.moves[0], grid)
     least = grid.reads(before + after)
-    steps = fast_length(least, in_step)
+    down = _down(unit.moves)
+    steps = fast_length(least, in_step // down)
     # What is read for a block by its steps' reaches, which are longer than its own, may fill it.
     fills = steps + unit.before - before <= grid.reads(unit.before + unit.after)
-    folds: list[Fold] = []
-    waiting: list[Move] = []
-    rate_hz = _rate_hz(unit.moves[0])
-    length = steps * in_step
-    for move in unit.moves:
-        ratio = ratio_of(move)
-        if ratio == 1:
-            waiting.append(move)
-            continue
-        between = gain_of([move], length * ratio.numerator, rate_hz * ratio.numerator)
-        after_it = np.ones(length * ratio.numerator // ratio.denominator // 2 + 1)
-        folds.append(fold_of(length, ratio, gain_of(waiting, length, rate_hz), between, after_it))
-        length, rate_hz, waiting = folds[-1].length_out, rate_hz * ratio, []
-    if waiting or not folds:
-        ones = np.ones(length // 2 + 1)
-        folds.append(fold_of(length, Fraction(1), gain_of(waiting, length, rate_hz), ones, ones))
+    first, folds = _applied(unit.moves, steps * in_step, down)
     return Filter(
         grid,
         before,
         after,
         _rest(unit.moves, grid),
         in_step,
-        length // steps,
+        (first, *folds)[-1].length_out // steps,
         (steps if fills else least) * in_step,
         steps * in_step,
-        tuple(folds),
+        first,
+        folds,
     )
+
+
+def _applied(
+    moves: Sequence[Move], length: int, down: int
+) -> tuple[Fold | Decimation, tuple[Fold, ...]]:
+    """Return what makes the bins of a block of samples, and what follows on them."""
+    first: Decimation | None = None
+    folds: list[Fold] = []
+    waiting: list[Move] = []
+    rate_hz = _rate_hz(moves[0])
+    for move in moves:
+        ratio = ratio_of(move)
+        if ratio == 1:
+            waiting.append(move)
+            continue
+        if down > 1 and first is None:
+            first = decimation_of(length, down, gain_of([*waiting, move], length, rate_hz))
+            length = first.length_out
+        else:
+            between = gain_of([move], length * ratio.numerator, rate_hz * ratio.numerator)
+            after_it = np.ones(length * ratio.numerator // ratio.denominator // 2 + 1)
+            before_it = gain_of(waiting, length, rate_hz)
+            folds.append(fold_of(length, ratio, before_it, between, after_it))
+            length = folds[-1].length_out
+        rate_hz, waiting = rate_hz * ratio, []
+    if waiting or (first is None and not folds):
+        ones = np.ones(length // 2 + 1)
+        folds.append(fold_of(length, Fraction(1), gain_of(waiting, length, rate_hz), ones, ones))
+    return first or folds[0], tuple(folds if first else folds[1:])
+
+
+def _down(moves: Sequence[Move]) -> int:
+    """Return D where the first change of rate is by 1 / D, and otherwise 1."""
+    ratios = (ratio_of(move) for move in moves)
+    ratio = next((ratio for ratio in ratios if ratio != 1), Fraction(1))
+    return ratio.denominator if ratio.numerator == 1 else 1
 
 
 def _rest(moves: Sequence[Move], grid: BlockGrid) -> tuple[tuple[int, int], ...]:

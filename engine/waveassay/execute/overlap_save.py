@@ -10,6 +10,15 @@ another. With n = D Q, and output bin m = Q u + q,
 
 where X and G are whole spectra, negative frequencies included: real n has X[n - i] = conj X[i].
 
+Where U is 1 and the change of rate comes first, the same sum is taken in another order. Of the D
+sequences x[D s + p], each D-th sample of a block, the spectra P have Q bins each, and
+
+    Y[m] = sum over p = 0 .. D - 1 of P[p, m] * H[p, m],
+    H[p, m] = 1 / D * exp(-2 pi i p m / n) * sum over j of G[Q j + m] * exp(-2 pi i p j / D)
+
+since X[k] is the sum over p of P[p, k modulo Q] * exp(-2 pi i p k / n). D short transforms, which
+a core's own memory holds, cost less than a long one, and no part is left out.
+
 The outcome is the circular convolution, so it is right where the response does not reach beyond
 the block. Each block is treated alike whatever stands beside it: same block, same bytes.
 
@@ -78,8 +87,14 @@ class Fold:
     parts: tuple[_Part, ...]
     leaks: tuple[_Part, ...]
 
+    def of_blocks(self, blocks: Sequence[Floats] | Floats) -> Complex:
+        """Return the output's bins of blocks of samples, shape (blocks, bins)."""
+        from scipy import fft
+
+        return self(fft.rfft(blocks, axis=-1))
+
     def __call__(self, bins: Complex) -> Complex:
-        """Return the output's bins of each block, shape (blocks, bins)."""
+        """Return the output's bins of each block, from its bins, shape (blocks, bins)."""
         made = self._sum(bins, self.parts)
         if self.leaks:
             with np.errstate(over="ignore", invalid="ignore"):
@@ -151,6 +166,52 @@ class Fold:
         return whole
 
 
+@dataclass(frozen=True)
+class Decimation:
+    """A change of rate by 1 / D, with all responses before and after it, of samples.
+
+    Attributes
+    ----------
+    gain : H, shape (D, Q // 2 + 1).
+    """
+
+    length_in: int
+    length_out: int
+    gain: Complex
+
+    def of_blocks(self, blocks: Sequence[Floats] | Floats) -> Complex:
+        """Return the output's bins of blocks of samples, shape (blocks, bins)."""
+        from scipy import fft
+
+        made = np.empty((len(blocks), self.gain.shape[1]), np.complex128)
+        for block, out in zip(blocks, made, strict=True):
+            parts = fft.rfft(block.reshape(self.length_out, -1).T, axis=-1)
+            np.multiply(parts[0], self.gain[0], out=out)
+            for part, gain in zip(parts[1:], self.gain[1:], strict=True):
+                part *= gain
+                out += part
+        return made
+
+
+def decimation_of(length: int, down: int, gain: Gain) -> Decimation:
+    """Return a change of rate by 1 / D with all responses before and after it.
+
+    Parameters
+    ----------
+    length : n, samples of a block of input; a multiple of D.
+    gain : of all of them but for repeats of the output's bins, at the input's rate, shape
+        (n // 2 + 1,).
+    """
+    assert length % down == 0, "a block is whole samples at both rates"
+    from scipy import fft
+
+    part = length // down
+    turns = np.outer(np.arange(down), np.arange(part // 2 + 1)) / length
+    parts = _whole(gain, length).reshape(down, part)[:, : part // 2 + 1]
+    made = fft.fft(parts, axis=0) * np.exp(-2j * np.pi * turns)
+    return Decimation(length, part, made / down)
+
+
 def fold_of(length: int, ratio: Fraction, before: Gain, between: Gain, after: Gain) -> Fold:
     """Return a change of rate with the responses on either side of it.
 
@@ -214,14 +275,16 @@ def _whole(gain: Gain, length: int) -> Gain:
     return np.concatenate((gain, np.conj(back)))
 
 
-def apply(blocks: Floats, folds: Sequence[Fold]) -> Floats:
-    """Return blocks of output; input of shape (blocks, n), zeros where there is none."""
+def apply(
+    blocks: Sequence[Floats] | Floats, first: Fold | Decimation, more: Sequence[Fold] = ()
+) -> Floats:
+    """Return blocks of output; input of n samples each, zeros where there is none."""
     from scipy import fft
 
-    bins: Complex = fft.rfft(blocks, axis=-1)
-    for fold in folds:
-        bins = fold(bins)
-    return np.asarray(fft.irfft(bins, n=folds[-1].length_out, axis=-1), np.float64)
+    bins, length = first.of_blocks(blocks), first.length_out
+    for fold in more:
+        bins, length = fold(bins), fold.length_out
+    return np.asarray(fft.irfft(bins, n=length, axis=-1), np.float64)
 
 
 def support(gain: Gain, length: int, share: float) -> tuple[int, int]:

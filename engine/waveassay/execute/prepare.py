@@ -19,8 +19,10 @@ States = Mapping[tuple[int, int], Part]
 
 def prepare(
     source: SignalSource, pass_no: int, stretch: Stretch, states: States, folder: Path
-) -> None:
+) -> dict[str, str]:
     """Run a pass's steps on samples over a stretch with its context, and keep the stretch.
+
+    Returns the SHA-256 of the file written, by its name.
 
     Parameters
     ----------
@@ -53,6 +55,7 @@ def prepare(
                 kept = as_held(values[index].cut(*bounds), held)
                 writer.add(f"{lane_no}.{index}", prepared_group(kept))
         writer.end({OUTSIDE: sorted(source.outside)})
+    return {FILE: writer.sha256}
 
 
 def run_form(

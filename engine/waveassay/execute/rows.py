@@ -1,11 +1,12 @@
 """The task that cuts the epochs that start in a stretch, down to their features, and collects."""
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from fractions import Fraction
 from pathlib import Path
 from typing import Any
 
 from waveassay.contract import Data, Features, Part, Signal
+from waveassay.contract.kinds import exclusions_within
 from waveassay.execute.arrays import Group, exclusions_to_json, group_writer
 from waveassay.execute.feature_arrays import ROWS_OF, features_to_arrays
 from waveassay.execute.moves import collect_move, run_move, starting_in
@@ -13,7 +14,7 @@ from waveassay.execute.prepare import States
 from waveassay.execute.signals import OUTSIDE, SignalSource, as_held
 from waveassay.plan.passage import Lane
 from waveassay.plan.precision import held_in_rows
-from waveassay.plan.program import Level
+from waveassay.plan.program import Level, Move
 from waveassay.plan.stretches import Stretch
 from waveassay.plan.tasks import collected, rows_moves
 from waveassay.recipe.model import Precision
@@ -25,8 +26,11 @@ MASKS = "masks"
 
 def make_rows(
     source: SignalSource, pass_no: int, stretch: Stretch, states: States, folder: Path
-) -> None:
-    """Run the steps on rows over a stretch; keep features, what is collected, and masks."""
+) -> dict[str, str]:
+    """Run the steps on rows over a stretch; keep features, what is collected, and masks.
+
+    Returns the SHA-256 of the file written, by its name.
+    """
     with group_writer(folder / FILE) as writer:
         for lane_no, signals in source.by_lane(_wanted(source, pass_no, stretch)):
             lane = source.passage.lanes[lane_no]
@@ -36,6 +40,7 @@ def make_rows(
             group = _lane_rows(lane, pass_no, precision, bounds_s, {**signals}, applied)
             writer.add(str(lane_no), group)
         writer.end({OUTSIDE: sorted(source.outside)})
+    return {FILE: writer.sha256}
 
 
 def _lane_rows(
@@ -49,8 +54,9 @@ def _lane_rows(
     """Run one signal's steps on rows; ``values`` holds the signals that they take."""
     masks: dict[str, Any] = {}
     features: dict[int, Features] = {}
-    in_rows = _as_rows_take(lane, pass_no, values, precision)
-    for move in rows_moves(lane, pass_no):
+    moves, gathering = rows_moves(lane, pass_no), collected(lane, pass_no)
+    in_rows = _as_rows_take(lane, [*moves, *gathering], values, precision)
+    for move in moves:
         assert move.source is not None, "only a source takes nothing"
         taken = in_rows.get(move.source, values[move.source])
         made = starting_in(run_move(move, taken, states.get(move.index)), bounds_s)
@@ -58,11 +64,13 @@ def _lane_rows(
         if move.pass_no != pass_no:
             continue
         if isinstance(taken, Signal):
-            masks[str(move.index)] = exclusions_to_json(taken.cut(*bounds_s).excluded)
+            masks[str(move.index)] = exclusions_to_json(
+                exclusions_within(taken.excluded, *bounds_s)
+            )
         if isinstance(made, Features):
             features[move.index] = made
     arrays, rows_of = features_to_arrays(features)
-    for move in collected(lane, pass_no):
+    for move in gathering:
         assert move.source is not None, "only a source takes nothing"
         data = values[move.source]
         if move.level is Level.ROWS:
@@ -75,10 +83,9 @@ def _lane_rows(
 
 
 def _as_rows_take(
-    lane: Lane, pass_no: int, values: Mapping[int, Data], precision: Precision
+    lane: Lane, takers: Sequence[Move], values: Mapping[int, Data], precision: Precision
 ) -> dict[int, Signal]:
     """Return the signals as steps on rows are given them; all other steps take them as they are."""
-    takers = [*rows_moves(lane, pass_no), *collected(lane, pass_no)]
     sources = {move.source for move in takers if move.level is Level.ROWS}
     return {
         index: as_held(signal, held_in_rows(lane.program.moves[index], precision))

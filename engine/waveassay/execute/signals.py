@@ -3,20 +3,22 @@
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from fractions import Fraction
-from math import ceil
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
-from waveassay.contract import Floats, Interval, Signal, merged
+from waveassay.contract import Floats, Signal, merged
+from waveassay.contract.kinds import exclusions_within, place_of
 from waveassay.execute.arrays import (
     ArrayFile,
     Group,
     exclusions_from_json,
     exclusions_to_json,
+    fraction_of,
 )
 from waveassay.execute.store import Store
-from waveassay.plan.passage import Lane, Passage
+from waveassay.plan.passage import Passage
 from waveassay.plan.precision import Held
 from waveassay.plan.tasks import Task, overlapping
 from waveassay.recording import Digital, Facts, open_recording
@@ -62,15 +64,6 @@ def as_held(signal: Signal, held: Held) -> Signal:
     return replace(signal, x=signal.x.astype(held))
 
 
-def _as_signal(lane: Lane, piece: Interval, start_s: Fraction, x: Floats) -> Signal:
-    rate_hz = lane.spec.rate_hz
-    assert rate_hz is not None, "a recording's rates are known"
-    first = ceil((start_s - piece.start_s) * rate_hz)
-    if lane.scale != 1.0:
-        x = x * lane.scale
-    return Signal(lane.signal, lane.spec.unit, rate_hz, piece.start_s + first / rate_hz, x, piece)
-
-
 def prepared_group(signal: Signal) -> Group:
     """Return a prepared signal as it is stored."""
     return Group(
@@ -79,36 +72,48 @@ def prepared_group(signal: Signal) -> Group:
             "rate_hz": str(signal.rate_hz),
             "start_s": str(signal.start_s),
             "unit": signal.unit,
+            "samples": signal.x.size,
+            "held": str(signal.x.dtype),
             "excluded": exclusions_to_json(signal.excluded),
         },
     )
 
 
 class PreparedFiles:
-    """Files of prepared signals in a store, the last few known to be what was written.
+    """Files of prepared signals in a store, with what is known of those used last.
 
-    A process that prepares a stretch cuts its epochs next: checking a file's digest once a process
+    A process that prepares a stretch cuts its epochs, too: checking a file's digest once a process
     is enough.
     """
 
     _KEPT = 4
+    _SOUND = 1000
 
     def __init__(self, store: Store) -> None:
         self._store = store
-        self._known: dict[str, ArrayFile] = {}
+        self._sound: dict[str, None] = {}
+        self._open: dict[str, ArrayFile] = {}
 
     def file(self, key: str) -> ArrayFile:
         """Return a result's file, checked against its digest unless it is known."""
-        if key not in self._known:
-            self._store.read(key)
-            self.know(key)
-        return self._known[key]
+        if key not in self._open:
+            if key not in self._sound:
+                self._store.read(key)
+                self.know(key)
+            self._open[key] = ArrayFile(self._store.place(key) / FILE)
+            _drop(self._open, self._KEPT)
+        return self._open[key]
 
     def know(self, key: str) -> None:
         """Note a result that was just written, or checked."""
-        self._known[key] = ArrayFile(self._store.place(key) / FILE)
-        while len(self._known) > self._KEPT:
-            del self._known[next(iter(self._known))]
+        self._sound[key] = None
+        _drop(self._sound, self._SOUND)
+
+
+def _drop(known: dict[str, Any], most: int) -> None:
+    """Drop what was noted first, beyond so many."""
+    while len(known) > most:
+        del known[next(iter(known))]
 
 
 @dataclass
@@ -155,15 +160,13 @@ class SignalSource:
             found: dict[int, Signal] = {}
             raw: Signal | None = None
             if lane_no in read:
-                lane, piece = self.passage.lanes[lane_no], self.passage.pieces[self.piece_no]
                 digital, place = read[lane_no]
-                raw = _as_signal(lane, piece, from_file[lane_no][0], digital.physical(place))
+                raw = self._raw(lane_no, from_file[lane_no][0], digital.physical(place))
             for move_no, window in windows.items():
                 if raw is not None and not self._is_prepared(lane_no, move_no):
-                    signal = raw
+                    found[move_no] = raw
                 else:
-                    signal = self._assemble(lane_no, move_no, window)
-                found[move_no] = replace(signal, conditions=self.passage.conditions)
+                    found[move_no] = self._assemble(lane_no, move_no, window)
             yield lane_no, found
 
     def _is_prepared(self, lane_no: int, move_no: int) -> bool:
@@ -171,40 +174,61 @@ class SignalSource:
         pass_no = program.moves[move_no].pass_no
         return program.prepares(pass_no) and any(held == pass_no for held, _ in self.prepared)
 
+    def _raw(self, lane_no: int, start_s: Fraction, x: Floats) -> Signal:
+        """Return a lane as it was read, in the recipe's unit."""
+        lane, piece = self.passage.lanes[lane_no], self.passage.pieces[self.piece_no]
+        rate_hz = lane.spec.rate_hz
+        assert rate_hz is not None, "a recording's rates are known"
+        first = place_of(start_s, piece.start_s, rate_hz)
+        return Signal(
+            lane.signal,
+            lane.spec.unit,
+            rate_hz,
+            piece.start_s + first / rate_hz,
+            x if lane.scale == 1.0 else x * lane.scale,
+            piece,
+            conditions=self.passage.conditions,
+        )
+
     def _assemble(self, lane_no: int, move_no: int, window: Window) -> Signal:
+        """Return what earlier tasks prepared of a lane; of their files, only what is needed."""
         lane = self.passage.lanes[lane_no]
         pass_no = lane.program.moves[move_no].pass_no
-        piece = self.passage.pieces[self.piece_no]
         start_s, stop_s = self._within(window)
-        parts: list[Signal] = []
-        for stretch in overlapping(lane, self.piece_no, start_s, stop_s):
-            file = self.files.file(self.prepared[pass_no, stretch.number])
-            self.outside |= set(file.facts[OUTSIDE])
-            group = file.group(f"{lane_no}.{move_no}")
-            known = group.facts
-            parts.append(
-                Signal(
-                    lane.signal,
-                    str(known["unit"]),
-                    Fraction(str(known["rate_hz"])),
-                    Fraction(str(known["start_s"])),
-                    group.arrays["x"],
-                    piece,
-                    exclusions_from_json(known["excluded"]),
-                )
-            )
-        return _joined(parts).cut(start_s, stop_s)
+        name = f"{lane_no}.{move_no}"
+        files = [
+            self.files.file(self.prepared[pass_no, stretch.number])
+            for stretch in overlapping(lane, self.piece_no, start_s, stop_s)
+        ]
+        for file in files:
+            self.outside.update(file.facts[OUTSIDE])
+        parts = [file.facts_of(name) for file in files]
+        begun_s, rate_hz = fraction_of(parts[0]["start_s"]), fraction_of(parts[0]["rate_hz"])
+        size = sum(part["samples"] for part in parts)
+        first = min(max(0, place_of(start_s, begun_s, rate_hz)), size)
+        last = min(max(first, place_of(stop_s, begun_s, rate_hz)), size)
+        x: Floats = np.empty(last - first, parts[0]["held"])
+        at = 0
+        for file, part in zip(files, parts, strict=True):
+            low, high = (min(max(0, i - at), part["samples"]) for i in (first, last))
+            if low < high:
+                file.fill(x[at + low - first : at + high - first], name, "x", low)
+            at += part["samples"]
+        excluded = merged(e for part in parts for e in exclusions_from_json(part["excluded"]))
+        return Signal(
+            lane.signal,
+            parts[0]["unit"],
+            rate_hz,
+            begun_s + first / rate_hz,
+            x,
+            self.passage.pieces[self.piece_no],
+            exclusions_within(excluded, start_s, stop_s),
+            self.passage.conditions,
+        )
 
     def _within(self, window: Window) -> Window:
         piece = self.passage.pieces[self.piece_no]
         return max(window[0], piece.start_s), min(window[1], piece.stop_s)
-
-
-def _joined(parts: Sequence[Signal]) -> Signal:
-    if len(parts) == 1:
-        return parts[0]
-    excluded = merged(item for part in parts for item in part.excluded)
-    return replace(parts[0], x=np.concatenate([part.x for part in parts]), excluded=excluded)
 
 
 def prepared_keys(task: Task, by_key: Mapping[str, Task]) -> dict[tuple[int, int], str]:

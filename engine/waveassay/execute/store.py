@@ -66,8 +66,15 @@ class Store:
         return os.path.exists(self._file(key))
 
     @contextmanager
-    def writing(self, key: str, environment: str) -> Iterator[Path]:
+    def writing(
+        self, key: str, environment: str, known: Mapping[str, str] | None = None
+    ) -> Iterator[Path]:
         """Give a folder to write a result's files to; it takes its place when all went well.
+
+        Parameters
+        ----------
+        known : names of files with the SHA-256 of what was written to them, which may be told until
+            the end; of all others it is worked out from what is there.
 
         Raises
         ------
@@ -80,7 +87,7 @@ class Store:
             part = Path(tempfile.mkdtemp(prefix=PART_PREFIX, dir=place.parent))
             try:
                 yield part
-                self._put(key, environment, part)
+                self._put(key, environment, part, known or {})
             finally:
                 shutil.rmtree(part, ignore_errors=True)
         except OSError as error:
@@ -89,13 +96,14 @@ class Store:
                 raise
             raise told from error
 
-    def _put(self, key: str, environment: str, part: Path) -> None:
+    def _put(self, key: str, environment: str, part: Path, known: Mapping[str, str]) -> None:
         place = self.place(key)
-        files = {
-            path.relative_to(part).as_posix(): _sha256(path)
+        paths = {
+            path.relative_to(part).as_posix(): path
             for path in sorted(part.rglob("*"))
             if path.is_file()
         }
+        files = {name: known.get(name) or _sha256(path) for name, path in paths.items()}
         facts = {"files": files, "digest": _digest(files), "environment": environment}
         (part / _FACTS).write_text(json.dumps(facts, sort_keys=True, indent=1))
         part.chmod(0o755)

@@ -176,7 +176,8 @@ def _do(bench: Bench, recording: str, task: Task) -> None:
     by_action: dict[str, list[str]] = {"prepare": [], "rows": [], "combine": [], "finish": []}
     for need in task.needs:
         by_action[ready.tasks[need].action].append(need)
-    with store.writing(task.key, bench.environment) as folder:
+    written: dict[str, str] = {}
+    with store.writing(task.key, bench.environment, written) as folder:
         if task.action == "finish":
             finish(passage, gather(store, by_action["rows"]), folder)
             add_texts(folder)
@@ -195,7 +196,7 @@ def _do(bench: Bench, recording: str, task: Task) -> None:
             states = read_states(store, by_action["combine"])
             make = prepare if task.action == "prepare" else make_rows
             require_unchanged(ready.path, ready.stamp)
-            make(source, task.pass_no, task.stretch, states, folder)
+            written |= make(source, task.pass_no, task.stretch, states, folder)
             require_unchanged(ready.path, ready.stamp)
     if task.action == "prepare":
         bench.prepared.know(task.key)

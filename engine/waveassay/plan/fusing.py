@@ -16,7 +16,7 @@ from waveassay.plan.blocks import BlockGrid, lengths_s
 from waveassay.plan.program import Level, Move, Program
 
 #: Enters the key of what is made: goes up when the way it is carried out can change a number.
-FORM = "overlap-save 2"
+FORM = "overlap-save 3"
 #: No block has more samples, nor four times as many at the rate at which the kernel between two
 #: rates stands: beyond, the steps one after another cost less, or need less memory.
 LARGEST_BLOCK = 1 << 21
