@@ -100,8 +100,8 @@ def masked_samples(starts: Ints, length: int, masks: Iterable[Span]) -> Ints:
     ahead = np.zeros(edges.shape, np.int64)
     ahead[:, 1] = np.cumsum(edges[:, 1] - edges[:, 0])
     ahead[1:, 0] = ahead[:-1, 1]
-    edges, ahead = edges.reshape(-1), ahead.reshape(-1)
-    found = np.interp(starts + length, edges, ahead) - np.interp(starts, edges, ahead)
+    knots, values = edges.ravel(), ahead.ravel()
+    found = np.interp(starts + length, knots, values) - np.interp(starts, knots, values)
     return np.asarray(found, np.int64)
 
 

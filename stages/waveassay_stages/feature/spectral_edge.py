@@ -188,7 +188,8 @@ def spectral_edges(
         power = power[found]
     target = power[:, -1] * fraction
     # Power rises along a row: the first point that has the share is the one after all that lack it.
-    lacking = power.T < target * (1 - _ROUNDING)
+    limit = target * (1 - _ROUNDING)
+    lacking = power.T < limit
     reached = np.add.reduce(lacking, axis=0, dtype=np.int32)
     if whole_bins:
         edge[found] = points[reached]
