@@ -189,7 +189,7 @@ def spectral_edges(
     target = power[:, -1] * fraction
     # Power rises along a row: the first point that has the share is the one after all that lack it.
     limit = target * (1 - _ROUNDING)
-    lacking = power.T < limit
+    lacking = limit > power.T
     reached = np.add.reduce(lacking, axis=0, dtype=np.int32)
     if whole_bins:
         edge[found] = points[reached]
