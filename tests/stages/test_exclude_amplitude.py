@@ -11,7 +11,7 @@ from pydantic import ValidationError
 from signal_data import is_masked, masked_s, signal_of, spec_of
 from spectrum_epochs import Found
 from waveassay_stages.exclude._sliding import sliding_max
-from waveassay_stages.exclude.amplitude import AmplitudeParams, run, spec
+from waveassay_stages.exclude.amplitude import AmplitudeParams, beyond, run, spec
 
 
 def params(**values: Any) -> AmplitudeParams:
@@ -53,6 +53,31 @@ def test_masked_is_what_lies_in_a_window_beyond_the_range(
             expected[i : i + width] = True
     assert is_masked(out).tolist() == expected.tolist()
     assert np.array_equal(out.x, values, equal_nan=True)
+
+
+@settings(deadline=None)
+@given(
+    st.lists(st.integers(-2, 2), min_size=1, max_size=120),
+    st.dictionaries(st.integers(0, 119), st.sampled_from([3, -3, np.nan, np.inf, -np.inf])),
+    st.sampled_from([2.0, 3.0, 4.0, 5.0]),
+    st.sampled_from(["peak_to_peak", "absolute"]),
+    st.data(),
+)
+def test_quiet_time_is_passed_over_and_nothing_in_it_is_missed(
+    quiet: list[int], events: dict[int, float], limit: float, criterion: str, data: st.DataObject
+) -> None:
+    """Window by window, where most keep within the limit and some lie on it."""
+    x = np.array(quiet, np.float64)
+    for place, value in events.items():
+        x[place % x.size] = value
+    width = data.draw(st.integers(1, x.size))
+    expected = []
+    for i in range(x.size - width + 1):
+        window = x[i : i + width][np.isfinite(x[i : i + width])]
+        if criterion == "absolute":
+            window = np.append(np.abs(window), 0.0)
+        expected.append(window.size > 0 and bool(np.max(window) - np.min(window) > limit))
+    assert beyond(x, width, limit, criterion).tolist() == expected
 
 
 def test_a_range_that_is_just_reached_is_not_exceeded() -> None:

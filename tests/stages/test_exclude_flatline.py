@@ -10,7 +10,7 @@ from pydantic import ValidationError
 
 from signal_data import is_masked, masked_s, signal_of, spec_of
 from spectrum_epochs import Found
-from waveassay_stages.exclude.flatline import FlatlineParams, run, spec
+from waveassay_stages.exclude.flatline import FlatlineParams, flat, run, spec
 
 
 def params(**values: Any) -> FlatlineParams:
@@ -35,6 +35,14 @@ def test_masked_is_what_lies_in_a_flat_window(
         if np.all(np.isfinite(window)) and max(window) - min(window) <= tolerance:
             expected[i : i + width] = True
     assert is_masked(out).tolist() == expected.tolist()
+
+
+@pytest.mark.parametrize("width", range(2, 10))
+def test_a_stretch_just_long_enough_is_found_wherever_it_lies(width: int) -> None:
+    for first in range(30 - width + 1):
+        x = np.arange(30.0)
+        x[first : first + width] = x[first]
+        assert np.flatnonzero(flat(x, width, 0.0)).tolist() == [first]
 
 
 def test_a_disconnected_electrode() -> None:

@@ -91,19 +91,18 @@ def masked_samples(starts: Ints, length: int, masks: Iterable[Span]) -> Ints:
     for mask in sorted(masks, key=lambda span: span.start):
         if joined and mask.start <= joined[-1][1]:
             joined[-1][1] = max(joined[-1][1], mask.stop)
-        else:
+        elif mask.start < mask.stop:
             joined.append([mask.start, mask.stop])
     if not joined:
         return np.zeros(starts.size, np.int64)
-    spans = np.array(joined, np.int64)
-    so_far = np.concatenate(([0], np.cumsum(spans[:, 1] - spans[:, 0])))
-
-    places = np.concatenate((starts, starts + length))
-    index = np.searchsorted(spans[:, 0], places, side="right")
-    last = np.maximum(index - 1, 0)
-    inside = np.minimum(places, spans[last, 1]) - spans[last, 0]
-    before = np.where(index > 0, so_far[last] + inside, 0)
-    return np.asarray(before[starts.size :] - before[: starts.size], np.int64)
+    edges = np.array(joined, np.int64)
+    # Masked samples ahead of a place: it rises by one a sample within a mask, else stands still.
+    ahead = np.zeros(edges.shape, np.int64)
+    ahead[:, 1] = np.cumsum(edges[:, 1] - edges[:, 0])
+    ahead[1:, 0] = ahead[:-1, 1]
+    knots, values = edges.ravel(), ahead.ravel()
+    found = np.interp(starts + length, knots, values) - np.interp(starts, knots, values)
+    return np.asarray(found, np.int64)
 
 
 def judge(
@@ -120,6 +119,8 @@ def judge(
     -------
     One truth value, and one text an epoch: the reasons in alphabetical order, joined by ``; ``.
     """
+    if not masks:
+        return np.ones(starts.size, np.bool_), ("",) * starts.size
     every = [span for spans in masks.values() for span in spans]
     kept = masked_samples(starts, length, every) <= floor(allowed * length)
     texts = [""] * starts.size
@@ -195,22 +196,26 @@ def run(params: ConsecutiveParams, signal: Signal) -> Epochs:
         )
         anchor = max(0, begins) if params.anchor == "condition" else 0
         groups.append(epoch_starts(within, anchor, length, step))
-    starts = np.concatenate(groups) if groups else np.empty(0, np.int64)
-    owner = np.repeat(np.arange(len(groups)), [group.size for group in groups])
-    if len(groups) > 1:
+    names = tuple(condition.name for condition in signal.conditions)
+    if len(groups) == 1:
+        (starts,) = groups
+        owners = names * starts.size
+    else:
+        starts = np.concatenate(groups) if groups else np.empty(0, np.int64)
+        owner = np.repeat(np.arange(len(groups)), [group.size for group in groups])
         order = np.lexsort((owner, starts))
-        starts, owner = starts[order], owner[order]
+        starts = starts[order]
+        owners = tuple(map(names.__getitem__, owner[order].tolist()))
     masks: dict[str, list[Span]] = {}
     for item in signal.excluded:
         if item.reason not in params.ignore:
             masks.setdefault(item.reason, []).append(_touched(item, origin_s, rate_hz))
     kept, reasons = judge(starts, length, masks, exact(params.allow_excluded))
-    names = [condition.name for condition in signal.conditions]
     return Epochs(
         signal=signal,
         length=length,
         first=starts - here.start,
-        condition=tuple(map(names.__getitem__, owner.tolist())),
+        condition=owners,
         kept=kept,
         reason=reasons,
     )
@@ -222,14 +227,22 @@ def _touched(item: Exclusion, origin_s: Fraction, rate_hz: Fraction) -> Span:
 
 
 def _floor(time_s: Fraction, origin_s: Fraction, rate_hz: Fraction) -> int:
-    """Return ``floor((time - origin) * rate)`` in whole numbers, which are quicker."""
-    ahead = time_s.numerator * origin_s.denominator - origin_s.numerator * time_s.denominator
-    each = time_s.denominator * origin_s.denominator * rate_hz.denominator
-    return ahead * rate_hz.numerator // each
+    """Return ``floor((time - origin) * rate)``."""
+    ahead, each = _ratio(time_s, origin_s, rate_hz)
+    return ahead // each
 
 
 def _ceil(time_s: Fraction, origin_s: Fraction, rate_hz: Fraction) -> int:
-    return -_floor(-time_s, -origin_s, rate_hz)
+    ahead, each = _ratio(time_s, origin_s, rate_hz)
+    return -(-ahead // each)
+
+
+def _ratio(time_s: Fraction, origin_s: Fraction, rate_hz: Fraction) -> tuple[int, int]:
+    """Return ``(time - origin) * rate`` as two whole numbers, which are quicker."""
+    time, per_time = time_s.as_integer_ratio()
+    origin, per_origin = origin_s.as_integer_ratio()
+    rate, per_rate = rate_hz.as_integer_ratio()
+    return (time * per_origin - origin * per_time) * rate, per_time * per_origin * per_rate
 
 
 def derive(params: ConsecutiveParams, given: SignalSpec) -> list[Derived]:

@@ -48,7 +48,13 @@ class AmplitudeParams(Params):
     )
 
 
-def beyond(x: Floats, width: int, limit: float, criterion: str) -> Bools:
+def beyond(
+    x: Floats,
+    width: int,
+    limit: float,
+    criterion: str,
+    bounds: tuple[Floats, Floats] | None = None,
+) -> Bools:
     r"""Tell which windows of ``width`` samples go beyond the limit.
 
     .. math::
@@ -62,12 +68,32 @@ def beyond(x: Floats, width: int, limit: float, criterion: str) -> Bools:
     width : samples a window, at most n.
     limit : in the unit of ``x``. Equal to it is not beyond it.
     criterion : ``peak_to_peak`` or ``absolute``.
+    bounds : `block_extremes` of x for this width, where they are known already.
 
     Returns
     -------
     One truth value for each window, shape (n - width + 1,). Samples that are not finite numbers
     take no part.
     """
+    windows = np.zeros(x.size - width + 1, np.bool_)
+    if bounds is None:
+        bounds = _sliding.block_extremes(x, width)
+    # A window lies within the block in which it starts and the next: where those keep within the
+    # limit, so does it.
+    low = _sliding.with_next(np.minimum, bounds[0])
+    high = _sliding.with_next(np.maximum, bounds[1])
+    with np.errstate(invalid="ignore"):  # between two infinities
+        size = np.maximum(high, -low) if criterion == "absolute" else high - low
+    for first, stop in _sliding.runs(~(size <= limit)):
+        near = x[first * width : (stop + 1) * width]
+        if near.size >= width:
+            found = _each_beyond(near, width, limit, criterion)
+            windows[first * width : first * width + found.size] = found
+    return windows
+
+
+def _each_beyond(x: Floats, width: int, limit: float, criterion: str) -> Bools:
+    """Return the same by looking at each window."""
     finite = np.isfinite(x)
     if criterion == "absolute":
         return _sliding.sliding_max(np.where(finite, np.abs(x), -np.inf), width) > limit
@@ -102,12 +128,13 @@ def run(params: AmplitudeParams, signal: Signal) -> Signal:
     if signal.x.size == 0:
         return signal
     width = min(signal.x.size, _sliding.window_samples(params.window, signal.rate_hz))
-    windows = beyond(signal.x, width, params.range.to(signal.unit), params.criterion)
+    bounds = _sliding.block_extremes(signal.x, width)
+    limit = params.range.to(signal.unit)
+    windows = beyond(signal.x, width, limit, params.criterion, bounds)
     found = _sliding.covered(signal, windows, width, "amplitude")
-    unfit = ~np.isfinite(signal.x)
-    if np.any(unfit):
-        found.extend(exclusions_of(signal, unfit, "not finite"))
-    return signal.excluding(found)
+    if not np.all(np.isfinite(bounds)):
+        found.extend(exclusions_of(signal, ~np.isfinite(signal.x), "not finite"))
+    return signal.excluding(found) if found else signal
 
 
 STAGE = Stage(

@@ -61,6 +61,23 @@ def flat(x: Floats, width: int, tolerance: float) -> Bools:
     One truth value for each window, shape (n - width + 1,). A window that holds a sample that is
     not a finite number is not flat.
     """
+    windows = np.zeros(x.size - width + 1, np.bool_)
+    # A window holds a whole block of half its length: where that moves, the window does.
+    half = (width + 1) // 2
+    low, high = _sliding.block_extremes(x, half)
+    with np.errstate(invalid="ignore"):  # between two infinities
+        still = high - low <= tolerance
+    for first, stop in _sliding.runs(still):
+        begin = max(0, (first + 1) * half - width)
+        near = x[begin : (stop - 1) * half + width]
+        if near.size >= width:
+            found = _each_flat(near, width, tolerance)
+            windows[begin : begin + found.size] = found
+    return windows
+
+
+def _each_flat(x: Floats, width: int, tolerance: float) -> Bools:
+    """Return the same by looking at each window."""
     finite = np.isfinite(x)
     every = bool(np.all(finite))
     highest = _sliding.sliding_max(x if every else np.where(finite, x, np.inf), width)

@@ -132,12 +132,19 @@ def _simpson_weights(count: int) -> Floats:
 @lru_cache(maxsize=256)
 def _bins_and_weights(
     freq_hz: bytes, low_hz: float, high_hz: float, rule: Rule, edges: Edges
-) -> tuple[slice, Floats]:
-    """Return the bins that count, and their weights, on bins given as the bytes of float64."""
+) -> tuple[slice, Floats | float]:
+    """Return the bins that count, and their weights, on bins given as the bytes of float64.
+
+    One number where all weigh the same.
+    """
     weights = band_weights(np.frombuffer(freq_hz), low_hz, high_hz, rule, edges)
     used = np.flatnonzero(weights)
-    span = slice(int(used[0]), int(used[-1]) + 1) if used.size else slice(0, 0)
+    if used.size == 0:
+        return slice(0, 0), 0.0
+    span = slice(int(used[0]), int(used[-1]) + 1)
     inside = weights[span]
+    if np.all(inside == inside[0]):
+        return span, float(inside[0])
     inside.flags.writeable = False
     return span, inside
 
@@ -150,9 +157,14 @@ def band_integrals(
     NaN where the band holds too few bins for the rule.
     """
     span, weights = _bins_and_weights(freq_hz.tobytes(), low_hz, high_hz, rule, edges)
-    if weights.size == 0:
+    if span.start == span.stop:
         return np.full(density.shape[0], np.nan)
-    total: Floats = np.add.reduce(density[:, span] * weights, axis=-1)
+    inside = density[:, span]
+    total: Floats
+    if isinstance(weights, float):
+        total = np.add.reduce(inside, axis=-1) * weights
+    else:
+        total = np.add.reduce(inside * weights, axis=-1)
     return total
 
 

@@ -116,9 +116,7 @@ def band_power(
 
 def relative_power(power: Floats, whole: Floats) -> Floats:
     """Return power as a share of the whole, NaN where the whole is not above 0."""
-    share = np.full(power.shape, np.nan)
-    np.divide(power, whole, out=share, where=whole > 0)
-    return share
+    return np.asarray(power / np.where(whole > 0, whole, np.nan), np.float64)
 
 
 def spec(params: BandPowerParams, given: SpectraSpec, findings: Findings) -> FeaturesSpec:
@@ -191,7 +189,7 @@ def run(params: BandPowerParams, spectra: Spectra) -> Features:
 
 STAGE = Stage(
     name="feature.band_power",
-    version=1,
+    version=2,
     params=BandPowerParams,
     takes=(Kind.SPECTRA, Kind.AVERAGES),
     gives=features_of,

@@ -1,6 +1,7 @@
 """Frequency below which a stated share of a spectrum's power lies: spectral edge, or median."""
 
 from functools import lru_cache
+from itertools import pairwise
 from typing import Literal
 
 import numpy as np
@@ -85,14 +86,14 @@ def cumulative_power(
     density = in_double(density)
     if integration == "rectangle" and not whole_bins:
         points, cells, widths = _cells(freq_hz.tobytes(), low_hz, high_hz)
-        return points, _from_zero(density[:, cells] * widths)
+        return points, _running(density[:, cells], widths, ahead=1)
     step = spacing(freq_hz)
     if whole_bins:
         inside = bins_inside(low_hz, high_hz, step, freq_hz.size)
         points, values = freq_hz[inside], density[:, inside]
         if integration == "rectangle":
-            return points, np.cumsum(values * step, axis=-1)
-        return points, _from_zero((values[:, 1:] + values[:, :-1]) * (step / 2))
+            return points, _running(values, step, ahead=0)
+        return points, _running(values[:, 1:] + values[:, :-1], step / 2, ahead=1)
     top = float(freq_hz[-1])
     low, high = max(low_hz, 0.0), min(high_hz, top)
     between = freq_hz[(freq_hz > low) & (freq_hz < high)]
@@ -101,14 +102,20 @@ def cumulative_power(
     left = np.minimum(position.astype(np.int64), freq_hz.size - 2)
     weight = position - left
     values = density[:, left] * (1 - weight) + density[:, left + 1] * weight
-    return points, _from_zero((values[:, 1:] + values[:, :-1]) * (np.diff(points) / 2))
+    return points, _running(values[:, 1:] + values[:, :-1], np.diff(points) / 2, ahead=1)
 
 
-def _from_zero(areas: Floats) -> Floats:
-    total = np.empty((areas.shape[0], areas.shape[1] + 1))
-    total[:, 0] = 0.0
-    np.cumsum(areas, axis=-1, out=total[:, 1:])
-    return total
+def _running(values: Floats, widths: Floats | float, *, ahead: int) -> Floats:
+    """Return the running sums of values times widths along each row, with zeros ahead of them.
+
+    Frequency by frequency for all rows at once: along a row each sum waits for the one before it.
+    """
+    total = np.empty((ahead + values.shape[1], values.shape[0]))
+    total[:ahead] = 0.0
+    np.multiply(values.T, np.reshape(widths, (-1, 1)), out=total[ahead:])
+    for before, here in pairwise(total):
+        np.add(before, here, out=here)
+    return total.T
 
 
 @lru_cache(maxsize=64)
@@ -181,7 +188,9 @@ def spectral_edges(
         power = power[found]
     target = power[:, -1] * fraction
     # Power rises along a row: the first point that has the share is the one after all that lack it.
-    reached = np.argmax(power >= (target * (1 - _ROUNDING))[:, None], axis=-1)
+    limit = target * (1 - _ROUNDING)
+    lacking = limit > power.T
+    reached = np.add.reduce(lacking, axis=0, dtype=np.int32)
     if whole_bins:
         edge[found] = points[reached]
         return edge

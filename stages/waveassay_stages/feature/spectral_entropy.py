@@ -105,7 +105,7 @@ def run(params: SpectralEntropyParams, spectra: Spectra) -> Features:
     """Return the entropy of each row; NaN in rows that are not kept."""
     freq = spectra.freq_hz
     inside = bins_inside(*params.within, spacing(freq), freq.size, params.edges)
-    taken = np.ascontiguousarray(in_double(spectra.density)[:, inside])
+    taken = in_double(spectra.density)[:, inside]
     entropy = spectral_entropy(taken, normalised=params.normalised)
     reasons = missing_reasons(spectra.rows, [(np.isnan(entropy), "no power in within")])
     return Features(spectra.signal, spectra.rows, {"": entropy}, reasons)

@@ -34,7 +34,7 @@ PADDING_TEXT = (
 FEWEST_SAMPLES = 8
 #: Bytes that are transformed in one call: with what comes out they fit a processor's cache (1 MB),
 #: and there are few calls. No number depends on it.
-BLOCK_BYTES = 3 << 17
+BLOCK_BYTES = 1 << 19
 
 
 @lru_cache(maxsize=64)
@@ -160,13 +160,13 @@ def density(
     rows = x.shape[0] if places is None else places.size
     out = np.empty((rows, n_fft // 2 + 1), kind)
     group, step = _block(many, n_fft * out.itemsize)
-    tapers = tapers.astype(kind, copy=False)
+    tapers = tapers.astype(kind, copy=False)[:, None]
     # A slope times time is rounded by as much as a large drift is large.
     plain = np.empty((min(step, rows), n), np.float64 if detrend == "linear" else kind)
     if many == 1 and n == n_fft and plain.dtype == kind:
-        tapered = plain[:, None]
+        tapered = plain[None]
     else:
-        tapered = np.zeros((min(step, rows), group, n_fft), kind)
+        tapered = np.zeros((group, min(step, rows), n_fft), kind)
     for first in range(0, rows, step):
         stop = min(first + step, rows)
         part = plain[: stop - first]
@@ -175,18 +175,18 @@ def density(
         else:
             _gather(x, places[first:stop], part)
         _remove_trend(part, detrend)
-        ready = part.astype(kind, copy=False)[:, None]
+        ready = part.astype(kind, copy=False)
         total = None
         for k in range(0, many, group):
-            some = tapered[: stop - first, : min(group, many - k)]
+            some = tapered[: min(group, many - k), : stop - first]
             np.multiply(ready, tapers[k : k + group], out=some[..., :n])
             squares = fft.rfft(some, axis=-1).view(kind)
             np.square(squares, out=squares)
-            if total is None:
-                total = squares[:, 0] if many == 1 else np.add.reduce(squares, axis=1)
-            else:
-                for j in range(squares.shape[1]):
-                    total += squares[:, j]
+            for of_taper in squares:
+                if total is None:
+                    total = of_taper
+                else:
+                    total += of_taper
         assert total is not None, "there is a taper"
         np.add(total[:, 0::2], total[:, 1::2], out=out[first:stop])
     out[:, 0] *= 0.5

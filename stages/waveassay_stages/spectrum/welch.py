@@ -156,28 +156,37 @@ def _of_rows(
     freq_hz = _density.bin_centres_hz(rate_hz, n_fft)
     if first.size == 0:
         return freq_hz, np.empty((0, freq_hz.size), _density.precision_of(x))
-    inside = np.array(segment_starts(samples, segment, overlap), np.int64)
-    asked = inside[:, None] + first
-    starts = _distinct(asked)
+    starts, places = _segments(first.tobytes(), samples, segment, overlap)
     taper = scaled_window(window_name, segment, rate_hz)
     each = _density.density(_density.sliding(x, segment), taper, n_fft, detrend, starts)
-    places = np.searchsorted(starts, asked)
+    count = len(places)
     if average == "median":
-        bias, _ = exponential_median(inside.size)
+        bias, _ = exponential_median(count)
         return freq_hz, np.median(each[places], axis=0) / bias
     total = each[places[0]]
     for further in places[1:]:  # in the order of time, whatever the number of rows
         total += each[further]
-    total /= inside.size
+    total /= count
     return freq_hz, total
 
 
-def _distinct(places: Ints) -> Ints:
-    """Return the places without repetition, rising."""
-    rising = np.sort(places, axis=None)
+@lru_cache(maxsize=8)
+def _segments(first: bytes, samples: int, segment: int, overlap: float) -> tuple[Ints, Ints]:
+    """Return where segments start, each once and rising, and which of them each row has.
+
+    Rows are given as the bytes of the places where they begin, which signals side by side mostly
+    have in common. The second has shape (segments of a row, rows); both are read-only.
+    """
+    inside = np.array(segment_starts(samples, segment, overlap), np.int64)
+    asked = inside[:, None] + np.frombuffer(first, np.int64)
+    rising = np.sort(asked, axis=None)
     new = np.ones(rising.size, np.bool_)
     np.not_equal(rising[1:], rising[:-1], out=new[1:])
-    return rising[new]
+    starts = rising[new]
+    places = np.searchsorted(starts, asked)
+    for array in (starts, places):
+        array.flags.writeable = False
+    return starts, places
 
 
 @lru_cache(maxsize=64)
