@@ -8,8 +8,8 @@ from waveassay.execute.arrays import ArrayFile, Group, save_groups
 from waveassay.execute.gathered import Gathered
 from waveassay.execute.moves import combine_move
 from waveassay.execute.store import Store
+from waveassay.plan.pass_parts import barriers
 from waveassay.plan.passage import Passage
-from waveassay.plan.tasks import barriers
 
 STATE_FILE = "state.arrays"
 
