@@ -18,7 +18,7 @@ def combine(passage: Passage, pass_no: int, gathered: Gathered, folder: Path) ->
     """Turn what the pass before collected into what this pass applies."""
     groups: dict[str, Group] = {}
     for lane_no, lane in enumerate(passage.lanes):
-        rows = gathered.lane(lane_no, lane.signal)
+        rows = gathered.lane(lane_no)
         for move in barriers(lane, pass_no):
             made: Part = combine_move(move, rows.parts(move.index))
             groups[f"{lane_no}.{move.index}"] = Group(dict(made))

@@ -11,13 +11,14 @@ import json
 import os
 import shutil
 import tempfile
-from collections.abc import Iterator, Mapping
+from collections.abc import Collection, Iterator, Mapping
 from contextlib import contextmanager, suppress
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 
 from waveassay.contract.errors import SignalError
-from waveassay.provenance.files import PART_PREFIX, machine_error
+from waveassay.provenance.files import PART_PREFIX, machine_error, sha256_of
+from waveassay.provenance.results import Made
 
 _FACTS = "artefact.json"
 
@@ -28,13 +29,26 @@ class MissingArtefactError(SignalError):
 
 @dataclass(frozen=True)
 class Artefact:
-    """A stored result; ``files`` are the names of its files with their SHA-256."""
+    """A stored result.
+
+    Attributes
+    ----------
+    files : the names of its files with their SHA-256.
+    rests_on : what was noted, when it was made, of the results that it rests on, by key.
+    contents : of files that were asked for, as they were checked.
+    """
 
     key: str
     folder: Path
-    digest: str
-    environment: str
+    made: Made
     files: Mapping[str, str]
+    rests_on: Mapping[str, Made] = field(default_factory=dict)
+    contents: Mapping[str, bytes] = field(default_factory=dict)
+
+    @property
+    def digest(self) -> str:
+        """Of what it holds."""
+        return self.made[0]
 
     def path(self, name: str) -> Path:
         """Return one of its files."""
@@ -66,8 +80,12 @@ class Store:
         return os.path.exists(self._file(key))
 
     @contextmanager
-    def writing(self, key: str, environment: str) -> Iterator[Path]:
+    def writing(
+        self, key: str, environment: str, rests_on: Mapping[str, Made] | None = None
+    ) -> Iterator[Path]:
         """Give a folder to write a result's files to; it takes its place when all went well.
+
+        ``rests_on`` is noted beside them, so that who wants to know need not look at all of these.
 
         Raises
         ------
@@ -80,7 +98,7 @@ class Store:
             part = Path(tempfile.mkdtemp(prefix=PART_PREFIX, dir=place.parent))
             try:
                 yield part
-                self._put(key, environment, part)
+                self._put(key, environment, part, rests_on or {})
             finally:
                 shutil.rmtree(part, ignore_errors=True)
         except OSError as error:
@@ -89,14 +107,20 @@ class Store:
                 raise
             raise told from error
 
-    def _put(self, key: str, environment: str, part: Path) -> None:
+    def _put(self, key: str, environment: str, part: Path, rests_on: Mapping[str, Made]) -> None:
         place = self.place(key)
         files = {
-            path.relative_to(part).as_posix(): _sha256(path)
+            path.relative_to(part).as_posix(): sha256_of(path)
             for path in sorted(part.rglob("*"))
             if path.is_file()
         }
-        facts = {"files": files, "digest": _digest(files), "environment": environment}
+        facts: dict[str, object] = {
+            "files": files,
+            "digest": _digest(files),
+            "environment": environment,
+        }
+        if rests_on:
+            facts["rests_on"] = rests_on
         (part / _FACTS).write_text(json.dumps(facts, sort_keys=True, indent=1))
         part.chmod(0o755)
         if place.exists() and not self.has(key):
@@ -111,8 +135,12 @@ class Store:
         """Tell whether an error is about the store, not about a recording being read."""
         return error.filename is None or Path(error.filename).is_relative_to(self.root)
 
-    def read(self, key: str) -> Artefact:
+    def read(self, key: str, wanted: Collection[str] = ()) -> Artefact:
         """Return a result after checking its files against their digests.
+
+        Parameters
+        ----------
+        wanted : files whose contents are returned, too, as they were checked.
 
         Raises
         ------
@@ -123,21 +151,28 @@ class Store:
         """
         place = self.place(key)
         try:
-            with open(self._file(key), "rb") as file:
-                facts = json.load(file)
-            files = dict(facts["files"])
+            facts = json.loads(_content(self._file(key)))
+            files: dict[str, str] = dict(facts["files"])
+            made = (facts["digest"], facts["environment"])
+            rests_on = {known: (a, b) for known, (a, b) in facts.get("rests_on", {}).items()}
         except FileNotFoundError:
             raise MissingArtefactError(f"result {key[:12]} is not in the store") from None
-        except (ValueError, KeyError, TypeError):
+        except (ValueError, KeyError, TypeError, AttributeError):
             raise self._damaged(place / _FACTS) from None
+        contents: dict[str, bytes] = {}
         for name, sha256 in files.items():
+            path = self._file(key, name)
             try:
-                sound = _sha256(self._file(key, name)) == sha256
+                if name in wanted:
+                    contents[name] = _content(path)
+                    found = hashlib.sha256(contents[name]).hexdigest()
+                else:
+                    found = sha256_of(path)
             except FileNotFoundError:
-                sound = False
-            if not sound:
+                found = ""
+            if found != sha256:
                 raise self._damaged(place / name)
-        return Artefact(key, place, facts["digest"], facts["environment"], files)
+        return Artefact(key, place, made, files, rests_on, contents)
 
     def _damaged(self, path: Path) -> SignalError:
         """Remove the result that a damaged file belongs to, and say so."""
@@ -147,11 +182,10 @@ class Store:
             "is computed afresh."
         )
 
-    def facts(self, key: str) -> tuple[str, str] | None:
+    def facts(self, key: str) -> Made | None:
         """Return a result's digest and environment without reading its files; None without it."""
         try:
-            with open(self._file(key), "rb") as file:
-                facts = json.load(file)
+            facts = json.loads(_content(self._file(key)))
         except FileNotFoundError:
             return None
         return facts["digest"], facts["environment"]
@@ -181,9 +215,9 @@ class Store:
             shutil.rmtree(part, ignore_errors=True)
 
 
-def _sha256(path: str | Path) -> str:
+def _content(path: str) -> bytes:
     with open(path, "rb", buffering=0) as file:
-        return hashlib.file_digest(file, "sha256").hexdigest()
+        return file.read()
 
 
 def _digest(files: dict[str, str]) -> str:

@@ -12,15 +12,13 @@ import numpy as np
 from waveassay.contract import (
     Condition,
     Exclusion,
-    Features,
     Floats,
     Interval,
     Ints,
-    Rows,
     Spectra,
     merged,
 )
-from waveassay.execute.arrays import coded
+from waveassay.execute.stored_features import CodedTexts, StoredFeatures, StoredRows
 from waveassay.plan.columns import FeatureColumn
 
 if TYPE_CHECKING:
@@ -55,10 +53,10 @@ class Block:
     """Rows of one signal that belong together: features of the same epochs, by step."""
 
     signal: str
-    features: Mapping[int, Features]
+    features: Mapping[int, StoredFeatures]
 
     @property
-    def rows(self) -> Rows:
+    def rows(self) -> StoredRows:
         """What the rows say; the last step decides, since it has been through every rejection."""
         return self.features[max(self.features)].rows
 
@@ -108,20 +106,21 @@ class TableOfFeatures:
         import pyarrow as pa
 
         rows, last = block.rows, len(self._rank)
-        names, codes = coded(rows.condition)
-        rank = np.array([self._rank.get(name, last) for name in names], np.int64)[codes]
+        condition = rows.condition
+        ranks = [self._rank.get(name, last) for name in condition.known]
+        rank = np.array(ranks, np.int64)[condition.codes]
         order = np.lexsort((rows.start_s, rank))
         count = order.size
         values: dict[str, Any] = {
             "recording": pa.repeat(self.recording, count),
             "signal": pa.repeat(block.signal, count),
             "signal_2": pa.nulls(count, pa.string()),
-            "condition": _texts(rows.condition, order),
+            "condition": _texts(condition, order),
             "start_s": rows.start_s[order],
             "duration_s": rows.duration_s[order],
             "kept": rows.kept[order],
             "reason": _texts(rows.reason, order),
-            "missing_reason": _texts(_missing(block, self.columns, count), order),
+            "missing_reason": _texts(_missing(block, self.columns), order),
         }
         if self.averaged:
             values["epochs"] = rows.epochs[order]
@@ -134,27 +133,38 @@ class TableOfFeatures:
         return pa.Table.from_arrays(arrays, schema=self.schema)
 
 
-def _texts(texts: Sequence[str], order: Ints) -> Any:
+def _texts(texts: CodedTexts, order: Ints) -> Any:
     """Return texts in an order; an empty one is missing."""
     import pyarrow as pa
 
-    known, codes = coded(texts)
-    dictionary = pa.array([text or None for text in known], pa.string())
-    return pa.DictionaryArray.from_arrays(codes[order], dictionary).cast(pa.string())
+    if not any(texts.known):
+        return pa.nulls(order.size, pa.string())
+    dictionary = pa.array([text or None for text in texts.known], pa.string())
+    return pa.DictionaryArray.from_arrays(texts.codes[order], dictionary).cast(pa.string())
 
 
-def _missing(block: Block, columns: Sequence[FeatureColumn], count: int) -> list[str]:
-    steps = dict.fromkeys((c.step_index, c.name.split(".")[0]) for c in columns)
-    texts: list[str] = [""] * count
-    for step_index, feature in steps:
+def _missing(block: Block, columns: Sequence[FeatureColumn]) -> CodedTexts:
+    """Return why features are missing, of all steps together."""
+    found = CodedTexts(("",), np.zeros(len(block.rows), np.int32))
+    for step_index, feature in dict.fromkeys((c.step_index, c.name.split(".")[0]) for c in columns):
         features = block.features.get(step_index)
-        if features is None or not any(features.missing):
-            continue
-        for place, reason in enumerate(features.missing):
-            if reason:
-                before = f"{texts[place]}; " if texts[place] else ""
-                texts[place] = f"{before}{feature}: {reason}"
-    return texts
+        if features is not None and features.missing is not None:
+            found = _both(found, features.missing, feature)
+    return found
+
+
+def _both(before: CodedTexts, more: CodedTexts, feature: str) -> CodedTexts:
+    """Return texts with those of one more feature behind them."""
+    pairs, codes = np.unique(
+        before.codes.astype(np.int64) * len(more.known) + more.codes, return_inverse=True
+    )
+    known = []
+    for one, other in (divmod(pair, len(more.known)) for pair in pairs.tolist()):
+        said = [before.known[one]] if before.known[one] else []
+        if more.known[other]:
+            said.append(f"{feature}: {more.known[other]}")
+        known.append("; ".join(said))
+    return CodedTexts(tuple(known), codes.astype(np.int32))
 
 
 def summary_rows(
@@ -171,11 +181,9 @@ def summary_rows(
     statistics (type 7 of Hyndman and Fan, The American Statistician 50:361-365, 1996).
     """
     for block in blocks:
-        names, codes = coded(block.rows.condition)
+        known = [column for column in columns if column.step_index in block.features]
         for condition in dict.fromkeys(c.name for c in conditions):
-            number = names.index(condition) if condition in names else -1
-            inside = (codes == number) & block.rows.kept
-            known = [column for column in columns if column.step_index in block.features]
+            inside = block.rows.condition.are(condition) & block.rows.kept
             values = np.array([block.column(column)[inside] for column in known])
             for column, statistics in zip(known, _statistics(values), strict=True):
                 unit = units.get((block.signal, column.name), column.unit)

@@ -8,6 +8,7 @@
 A key is the digest of all that can change a byte of what a task makes, and of nothing else.
 """
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 from waveassay.plan.drafts import Action, drafts_of, plain_digest
@@ -55,3 +56,14 @@ def tasks_of(passage: Passage) -> tuple[Task, ...]:
             )
         )
     return tuple(tasks)
+
+
+def needed_by(task: Task, tasks: Mapping[str, Task]) -> list[str]:
+    """Return the keys of all that a task needs, and of what that needs in turn."""
+    waiting = list(task.needs)
+    known = dict.fromkeys(waiting)
+    while waiting:
+        more = [key for key in tasks[waiting.pop()].needs if key not in known]
+        known |= dict.fromkeys(more)
+        waiting += more
+    return list(known)

@@ -16,6 +16,7 @@ from waveassay.contract.errors import MachineError
 #: What is still being written, or was left behind by a kill, has a name that starts so.
 PART_PREFIX = ".part-"
 
+_SHORT_BYTES = 1 << 15
 _O_BINARY: int = getattr(os, "O_BINARY", 0)
 
 _NO_ROOM = "free some space, or put the output on another disk with --into; then run again"
@@ -156,7 +157,7 @@ def copy_file(source: Path, target: Path) -> None:
             shutil.copyfileobj(taken, given, 1 << 20)
 
 
-def sha256_of(path: Path) -> str:
+def sha256_of(path: str | Path) -> str:
     """Return the SHA-256 of a file in hexadecimal, read in blocks.
 
     Raises
@@ -165,5 +166,9 @@ def sha256_of(path: Path) -> str:
         As the system gives it: whether a file that cannot be read stops everything or one
         recording is the caller's to say.
     """
-    with path.open("rb", buffering=0) as file:
+    with open(path, "rb", buffering=0) as file:
+        begun = file.read(_SHORT_BYTES)
+        if len(begun) < _SHORT_BYTES:  # all of it, without the large buffer that follows
+            return hashlib.sha256(begun).hexdigest()
+        file.seek(0)
         return hashlib.file_digest(file, "sha256").hexdigest()

@@ -7,7 +7,7 @@ from typing import Any
 from waveassay.plan.columns import FeatureColumn
 from waveassay.provenance.copies import Copies
 from waveassay.provenance.results import Result
-from waveassay.provenance.tables import Column, concat_to_csv, row_count, write_csv
+from waveassay.provenance.tables import Column, concat_to_csv, write_csv, write_csv_lines
 
 #: Above so many rows, the CSV of all recordings is written only when a recipe asks.
 CSV_ROWS = 1_000_000
@@ -176,7 +176,8 @@ def write_result_tables(
                 written.append((chain, kind))
     write_csv(folder / "summary.csv", _SUMMARY, list(_rows(results, "summary")))
     write_csv(folder / "excluded.csv", _EXCLUDED, list(_rows(results, "excluded")))
-    write_csv(folder / "derived.csv", _DERIVED, list(_rows(results, "derived")))
+    derived = (output.facts["derived"] for result in results for output in result.outputs)
+    write_csv_lines(folder / "derived.csv", _DERIVED, derived)
     dictionary = list(_dictionary(columns, written))
     names = ("table", "column", "unit", "meaning", "step")
     write_csv(folder / "columns.csv", [Column(name, "text") for name in names], dictionary)
@@ -193,6 +194,7 @@ def _wide_table(
 ) -> bool:
     """Copy every recording's table, and join them as CSV where they are few; tell if any is."""
     parts: list[Path] = []
+    rows = 0
     choices = set()
     for result in results:
         for output in result.outputs:
@@ -201,14 +203,13 @@ def _wide_table(
                 copies.take(output, file, path)
                 text = f"{file.removesuffix('.parquet')}.csv"
                 parts.append(output.folder / text if text in output.digests else path)
+                rows += output.facts["rows"][file]
                 choices.add(output.facts["csv"])
     if not parts:
         return False
     copies.done()
-    limit = None if "always" in choices else CSV_ROWS
-    csv_path = folder.with_name(f"{folder.name}.csv")
-    if choices != {"never"} and (limit is None or row_count(parts, limit) < limit):
-        concat_to_csv(parts, csv_path)
+    if choices != {"never"} and ("always" in choices or rows < CSV_ROWS):
+        concat_to_csv(parts, folder.with_name(f"{folder.name}.csv"))
     return True
 
 
