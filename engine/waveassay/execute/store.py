@@ -81,7 +81,7 @@ class Store:
 
     @contextmanager
     def writing(
-        self, key: str, environment: str, rests_on: Mapping[str, Made] | None = None
+        self, key: str, environment: str, *, rests_on: Mapping[str, Made] | None = None
     ) -> Iterator[Path]:
         """Give a folder to write a result's files to; it takes its place when all went well.
 

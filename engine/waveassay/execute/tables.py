@@ -1,10 +1,11 @@
 """The rows of a passage's tables, as Arrow tables and plain rows."""
 
 from bisect import bisect_right
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
 from itertools import pairwise
+from math import lcm
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -16,7 +17,6 @@ from waveassay.contract import (
     Interval,
     Ints,
     Spectra,
-    merged,
 )
 from waveassay.execute.stored_features import CodedTexts, StoredFeatures, StoredRows
 from waveassay.plan.columns import FeatureColumn
@@ -126,10 +126,11 @@ class TableOfFeatures:
             values["epochs"] = rows.epochs[order]
         else:
             sorted_rank = rank[order]
-            begun = np.searchsorted(sorted_rank, sorted_rank, side="left")
-            values["epoch"] = np.arange(count) - begun
+            begun = np.searchsorted(sorted_rank, np.arange(last + 1), side="left")
+            values["epoch"] = np.arange(count) - begun[sorted_rank]
         values |= {column.name: block.column(column)[order] for column in self.columns}
-        arrays = [pa.array(values[f.name], f.type, from_pandas=True) for f in self.schema]
+        # A number that is missing is still NaN here: who writes the table makes nothing of it.
+        arrays = [pa.array(values[f.name], f.type) for f in self.schema]
         return pa.Table.from_arrays(arrays, schema=self.schema)
 
 
@@ -219,33 +220,60 @@ def excluded_rows(
 ) -> Iterator[list[Any]]:
     """Yield one row a condition and reason: masked time, gaps, and all of it together (``any``)."""
     gaps = [Exclusion(before.stop_s, after.start_s, "gap") for before, after in pairwise(pieces)]
-    everything = merged((*masks, *gaps))
-    together = merged(Exclusion(e.start_s, e.stop_s, "any") for e in everything)
+    everything = (*masks, *gaps)
+    ticks = lcm(
+        *(t.denominator for item in (*everything, *conditions) for t in (item.start_s, item.stop_s))
+    )
+    by_reason: dict[str, list[_Ticks]] = {}
+    for item in everything:
+        by_reason.setdefault(item.reason, []).append(_in_ticks(item, ticks))
+    together = [span for spans in by_reason.values() for span in spans]
+    excluded = [(reason, _joined(spans)) for reason, spans in sorted(by_reason.items())]
+    excluded.append(("any", _joined(together)))
     for name in dict.fromkeys(c.name for c in conditions):
-        windows = [c for c in conditions if c.name == name]
-        total_s = sum((c.length_s for c in windows), Fraction(0))
-        for reason in (*sorted({e.reason for e in everything}), "any"):
-            source = together if reason == "any" else everything
-            excluded_s = _overlap_s([e for e in source if e.reason == reason], windows)
-            if excluded_s or reason == "any":
-                share = float(excluded_s / total_s) if total_s else None
-                yield [recording, chain, signal, name, reason, float(excluded_s), share]
+        windows = [_in_ticks(c, ticks) for c in conditions if c.name == name]
+        total = sum(stop - start for start, stop in windows)
+        for reason, spans in excluded:
+            shared = _overlap(spans, windows)
+            if shared or reason == "any":
+                share = float(Fraction(shared, total)) if total else None
+                excluded_s = float(Fraction(shared, ticks))
+                yield [recording, chain, signal, name, reason, excluded_s, share]
 
 
-def _overlap_s(masks: Sequence[Interval], windows: Sequence[Interval]) -> Fraction:
+#: Start and stop in whole parts of a second: sums of fractions would reduce at every step.
+_Ticks = tuple[int, int]
+
+
+def _in_ticks(item: Interval, ticks: int) -> _Ticks:
+    start_s, stop_s = item.start_s, item.stop_s
+    return (
+        start_s.numerator * (ticks // start_s.denominator),
+        stop_s.numerator * (ticks // stop_s.denominator),
+    )
+
+
+def _joined(spans: Iterable[_Ticks]) -> list[_Ticks]:
+    """Join spans that touch or overlap; sorted."""
+    joined: list[_Ticks] = []
+    for start, stop in sorted(spans):
+        if joined and start <= joined[-1][1]:
+            joined[-1] = (joined[-1][0], max(joined[-1][1], stop))
+        else:
+            joined.append((start, stop))
+    return joined
+
+
+def _overlap(masks: Sequence[_Ticks], windows: Sequence[_Ticks]) -> int:
     """Return the time that windows share with masks, which are sorted and do not overlap."""
-    stops = [mask.stop_s for mask in masks]
-    shared = Fraction(0)
-    for window in windows:
-        for mask in masks[bisect_right(stops, window.start_s) :]:
-            if mask.start_s >= window.stop_s:
+    stops = [stop for _, stop in masks]
+    shared = 0
+    for start, stop in windows:
+        for mask_start, mask_stop in masks[bisect_right(stops, start) :]:
+            if mask_start >= stop:
                 break
-            shared += _shared_s(mask, window)
+            shared += min(mask_stop, stop) - max(mask_start, start)
     return shared
-
-
-def _shared_s(one: Interval, other: Interval) -> Fraction:
-    return max(Fraction(0), min(one.stop_s, other.stop_s) - max(one.start_s, other.start_s))
 
 
 def spectra_table(recording: str, averages: Sequence[tuple[str, Spectra]]) -> "pa.Table":

@@ -177,7 +177,7 @@ def _do(bench: Bench, recording: str, task: Task) -> None:
         by_action[ready.tasks[need].action].append(need)
     behind = needed_by(task, ready.tasks) if task.action == "finish" else ()
     rests_on = {key: made for key in behind if (made := store.facts(key)) is not None}
-    with store.writing(task.key, bench.environment, rests_on) as folder:
+    with store.writing(task.key, bench.environment, rests_on=rests_on) as folder:
         if task.action == "finish":
             finish(passage, gather(store, by_action["rows"]), folder)
         elif task.action == "combine":
