@@ -140,13 +140,18 @@ def sweep(folder: Path, older_than_s: float = 0.0) -> list[Path]:
     return sorted(removed)
 
 
-def copy_file(source: Path, target: Path) -> None:
+def copy_file(source: str | Path, target: str | Path) -> None:
     """Copy the bytes of a file to a new one; a disk that can share them between files does.
 
     The copy is a file of its own: what is later written to one never shows in the other.
     """
     copy_range = getattr(os, "copy_file_range", None)
-    with source.open("rb", buffering=0) as taken, target.open("wb", buffering=0) as given:
+    with open(source, "rb", buffering=0) as taken, open(target, "wb", buffering=0) as given:
+        begun = taken.read(_SHORT_BYTES)
+        if len(begun) < _SHORT_BYTES:  # all of it: there is next to nothing to share
+            given.write(begun)
+            return
+        taken.seek(0)
         try:
             while copy_range is not None and copy_range(taken.fileno(), given.fileno(), 1 << 30):
                 pass

@@ -171,8 +171,8 @@ def write_result_tables(
     written = []
     for chain in columns:
         for kind, place in _PLACES.items():
-            path = folder / place.format(chain=chain)
-            if _wide_table(path, chain, results, f"{kind}.parquet", copies):
+            place = place.format(chain=chain)
+            if _wide_table(folder, place, chain, results, f"{kind}.parquet", copies):
                 written.append((chain, kind))
     write_csv(folder / "summary.csv", _SUMMARY, list(_rows(results, "summary")))
     write_csv(folder / "excluded.csv", _EXCLUDED, list(_rows(results, "excluded")))
@@ -190,26 +190,25 @@ def _rows(results: Sequence[Result], table: str) -> Iterator[list[Any]]:
 
 
 def _wide_table(
-    folder: Path, chain: str, results: Sequence[Result], file: str, copies: Copies
+    folder: Path, place: str, chain: str, results: Sequence[Result], file: str, copies: Copies
 ) -> bool:
     """Copy every recording's table, and join them as CSV where they are few; tell if any is."""
-    parts: list[Path] = []
+    parts: list[str] = []
+    text = f"{file.removesuffix('.parquet')}.csv"
     rows = 0
     choices = set()
     for result in results:
         for output in result.outputs:
             if output.chain == chain and file in output.digests:
-                path = folder / f"{result.recording}.parquet"
-                copies.take(output, file, path)
-                text = f"{file.removesuffix('.parquet')}.csv"
-                parts.append(output.folder / text if text in output.digests else path)
+                copies.take(output, file, f"{place}/{result.recording}.parquet")
+                parts.append(f"{output.folder}/{text if text in output.digests else file}")
                 rows += output.facts["rows"][file]
                 choices.add(output.facts["csv"])
     if not parts:
         return False
     copies.done()
     if choices != {"never"} and ("always" in choices or rows < CSV_ROWS):
-        concat_to_csv(parts, folder.with_name(f"{folder.name}.csv"))
+        concat_to_csv(parts, folder / f"{place}.csv")
     return True
 
 

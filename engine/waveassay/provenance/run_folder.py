@@ -270,7 +270,7 @@ def _copy_figures(folder: Path, results: Sequence[Result], copies: Copies) -> No
                 file = f"{Path(result.recording).name}.{figure['signal']}.{figure['name']}.png"
                 safe = "".join(c if c.isalnum() or c in "-_." else "_" for c in file)
                 path = _free(Path("figures", output.chain, result.recording).with_name(safe), taken)
-                copies.take(output, figure["file"], folder / path)
+                copies.take(output, figure["file"], path.as_posix())
                 rows.append([path.as_posix(), figure["caption"]])
     if rows:
         columns = (Column("figure", "text"), Column("caption", "text"))

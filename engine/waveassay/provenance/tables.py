@@ -191,7 +191,9 @@ def write_csv_lines(path: Path, columns: Sequence[Column], parts: Iterable[str])
         file.write("".join(parts).encode("utf-8", "backslashreplace"))
 
 
-def concat_to_csv(paths: Iterable[Path], csv_path: Path, columns: Sequence[Column] = ()) -> None:
+def concat_to_csv(
+    paths: Iterable[str | Path], csv_path: Path, columns: Sequence[Column] = ()
+) -> None:
     """Write the rows of Parquet files, one after another, as one CSV.
 
     A batch of rows is held at a time, whatever the files' size.
@@ -215,8 +217,9 @@ def concat_to_csv(paths: Iterable[Path], csv_path: Path, columns: Sequence[Colum
     with write_beside(csv_path) as target:
         target.write(header)
         for path in paths:
-            if path.suffix == ".csv":
-                text = path.read_bytes()
+            if str(path).endswith(".csv"):
+                with open(path, "rb", buffering=0) as short:
+                    text = short.read()
                 begun = text.index(b"\n") + 1
                 header = _same_header(target, header, text[:begun], path)
                 target.write(memoryview(text)[begun:])
@@ -230,7 +233,7 @@ def concat_to_csv(paths: Iterable[Path], csv_path: Path, columns: Sequence[Colum
                 _write_rows(target, source.iter_batches(batch_size=_BATCH_ROWS))
 
 
-def _same_header(target: BinaryIO, header: bytes, own: bytes, path: Path) -> bytes:
+def _same_header(target: BinaryIO, header: bytes, own: bytes, path: str | Path) -> bytes:
     """Write the first file's header; refuse a file that has another."""
     if not header:
         target.write(own)
