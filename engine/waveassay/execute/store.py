@@ -69,7 +69,7 @@ class Store:
 
     def place(self, key: str) -> Path:
         """Return the folder that a result has, or would have."""
-        return self.root / "objects" / key[:2] / key
+        return Path(f"{self._objects}{key[:2]}/{key}")
 
     def _file(self, key: str, name: str = _FACTS) -> str:
         # As text: paths are put together for every result of thousands of recordings.

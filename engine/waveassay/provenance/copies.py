@@ -1,6 +1,5 @@
 """Copies of what the store holds, for a run folder."""
 
-from collections import deque
 from collections.abc import Sequence
 from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass, field
@@ -31,21 +30,16 @@ class Copies:
 
     def __post_init__(self) -> None:
         self._pool = ThreadPoolExecutor(_THREADS)
-        self._running: deque[Future[None]] = deque()
+        self._running: list[Future[None]] = []
         self._waiting: list[tuple[str, str]] = []
         self._made: set[str] = set()
 
     def take(self, output: Output, file: str, target: str) -> None:
-        """Copy a file of a result, soon.
+        """Copy a file of a result, until `done` at the latest.
 
         Parameters
         ----------
         target : path below the run folder, with forward slashes.
-
-        Raises
-        ------
-        OSError
-            When an earlier copy could not be made.
         """
         # As text: paths are put together for every table of thousands of recordings.
         parent = target.rpartition("/")[0]
@@ -56,8 +50,6 @@ class Copies:
         self._waiting.append((f"{output.folder}/{file}", f"{self.folder}/{target}"))
         if len(self._waiting) == _TOGETHER:
             self._hand_over()
-        while len(self._running) > 2 * _THREADS:
-            self._running.popleft().result()
 
     def done(self) -> None:
         """Wait until all copies are made.
@@ -68,8 +60,9 @@ class Copies:
             When one could not be made.
         """
         self._hand_over()
-        while self._running:
-            self._running.popleft().result()
+        for copied in self._running:
+            copied.result()
+        self._running.clear()
 
     def _hand_over(self) -> None:
         self._running.append(self._pool.submit(_copy, tuple(self._waiting)))

@@ -206,7 +206,6 @@ def _wide_table(
                 choices.add(output.facts["csv"])
     if not parts:
         return False
-    copies.done()
     if choices != {"never"} and ("always" in choices or rows < CSV_ROWS):
         concat_to_csv(parts, folder / f"{place}.csv")
     return True
