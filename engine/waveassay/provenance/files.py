@@ -146,7 +146,8 @@ def copy_file(source: str | Path, target: str | Path) -> None:
     The copy is a file of its own: what is later written to one never shows in the other.
     """
     copy_range = getattr(os, "copy_file_range", None)
-    with open(source, "rb", buffering=0) as taken, open(target, "wb", buffering=0) as given:
+    # Written through a buffer: the bare system call may write less than it was given.
+    with open(source, "rb", buffering=0) as taken, open(target, "wb") as given:
         begun = taken.read(_SHORT_BYTES)
         if len(begun) < _SHORT_BYTES:  # all of it: there is next to nothing to share
             given.write(begun)
