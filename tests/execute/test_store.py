@@ -53,6 +53,31 @@ def test_a_digest_that_is_told_spares_reading_the_file_and_must_be_its(tmp_path:
         store.read(OTHER)
 
 
+def test_a_result_tells_what_it_rests_on_and_holds_what_is_asked_for(tmp_path: Path) -> None:
+    store = Store(tmp_path)
+    rests_on = {"cd" + "0" * 62: ("a digest", "environment-0")}
+    with store.writing(KEY, "environment-1", rests_on=rests_on) as folder:
+        (folder / "value.txt").write_text("number")
+        (folder / "other.txt").write_text("other")
+    artefact = store.read(KEY, ["value.txt"])
+    assert artefact.rests_on == rests_on
+    assert artefact.made == store.facts(KEY) == (artefact.digest, "environment-1")
+    assert artefact.contents == {"value.txt": b"number"}
+    assert store.read(KEY).contents == {}
+
+
+@pytest.mark.parametrize("name", ["value.txt", "other.txt"])
+def test_a_changed_file_is_found_whether_it_is_asked_for_or_not(tmp_path: Path, name: str) -> None:
+    store = Store(tmp_path)
+    with store.writing(KEY, "e") as folder:
+        (folder / "value.txt").write_text("number")
+        (folder / "other.txt").write_text("other")
+    store.read(KEY).path(name).write_text("!")
+    with pytest.raises(SignalError, match=f"{name}: a stored result was changed"):
+        store.read(KEY, ["value.txt"])
+    assert not store.has(KEY)
+
+
 def test_work_that_fails_leaves_nothing(tmp_path: Path) -> None:
     store = Store(tmp_path)
     with pytest.raises(SignalError), store.writing(KEY, "e") as folder:  # noqa: PT012

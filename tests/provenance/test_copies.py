@@ -26,9 +26,7 @@ def test_every_file_is_copied_once_with_its_digest(tmp_path: Path, count: int) -
     run = tmp_path / "run"
     with Copies(run) as copies:
         for number, output in enumerate(outputs(tmp_path / "store", count)):
-            copies.take(
-                output, "epochs.parquet", run / "epochs" / f"site{number % 3}" / f"{number}"
-            )
+            copies.take(output, "epochs.parquet", f"epochs/site{number % 3}/{number}")
         copies.done()
     assert len(copies.digests) == count
     for path, sha256 in copies.digests.items():
@@ -41,5 +39,5 @@ def test_a_copy_that_cannot_be_made_is_told(tmp_path: Path) -> None:
     (made[1].folder / "epochs.parquet").unlink()
     with Copies(tmp_path) as copies, pytest.raises(FileNotFoundError, match="key1"):  # noqa: PT012
         for number, output in enumerate(made):
-            copies.take(output, "epochs.parquet", tmp_path / "epochs" / str(number))
+            copies.take(output, "epochs.parquet", f"epochs/{number}")
         copies.done()

@@ -185,7 +185,7 @@ def test_an_error_that_is_not_the_machines_passes_through(tmp_path: Path) -> Non
     assert not isinstance(caught.value, MachineError)
 
 
-@pytest.mark.parametrize("size", [0, 1, 262_144, 3_000_001])
+@pytest.mark.parametrize("size", [0, 1, 32_767, 32_768, 262_144, 3_000_001])
 def test_sha256_of_a_file_is_that_of_its_bytes(tmp_path: Path, size: int) -> None:
     content = (b"waveform" * (size // 8 + 1))[:size]
     (tmp_path / "a").write_bytes(content)
@@ -200,7 +200,7 @@ def test_sha256_of_the_published_example(tmp_path: Path) -> None:
     )
 
 
-@pytest.mark.parametrize("size", [0, 1, 1 << 20, (1 << 20) + 7])
+@pytest.mark.parametrize("size", [0, 1, 32_767, 32_768, 1 << 20, (1 << 20) + 7])
 @pytest.mark.parametrize("fails_at", [None, 0, 1])
 def test_a_copy_has_the_same_bytes_whatever_the_system_can_do(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch, size: int, fails_at: int | None

@@ -304,13 +304,13 @@ class _Settled:
     """Digests remembered of files that changed long ago, and how many were read."""
 
     def __init__(self, folder: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-        self.read: list[Path] = []
+        self.read: list[str] = []
         self.folder = folder
         now_ns = time.time_ns() + 3600 * 10**9
         monkeypatch.setattr(time, "time_ns", lambda: now_ns)
         monkeypatch.setattr(recording_digests, "sha256_of", self._sha256_of)
 
-    def _sha256_of(self, path: Path) -> str:
+    def _sha256_of(self, path: str) -> str:
         self.read.append(path)
         return sha256_of(path)
 
@@ -334,7 +334,7 @@ def test_unchanged_files_are_read_once_and_any_change_is_still_found(
     os.utime(path, ns=(times.st_atime_ns, times.st_mtime_ns))
     changed = {("epochs/cortex/site1/p03.parquet", Difference.CHANGED)}
     assert settled.found(run) == changed
-    assert settled.read == [path]
+    assert settled.read == [str(path)]
     assert settled.found(run) == changed  # remembered as it is, not as intact
     path.unlink()
     (run / "extra").write_text("x")

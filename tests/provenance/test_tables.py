@@ -22,11 +22,11 @@ from waveassay.contract.errors import MachineError
 from waveassay.provenance.tables import (
     Column,
     concat_to_csv,
+    csv_lines,
     parquet_writer,
-    read_parquet,
-    row_count,
     table_of,
     write_csv,
+    write_csv_lines,
     write_parquet,
     write_short_csv,
 )
@@ -99,6 +99,17 @@ def test_another_reader_sees_the_same(tmp_path: Path, rows: list[tuple[Any, ...]
     assert [bits(v) for v in read["band_power.alpha"]] == [bits(row[1]) for row in rows]
     assert read["epoch"] == [row[2] for row in rows]
     assert read["kept"] == [row[3] for row in rows]
+
+
+@in_one_folder
+@given(parts=st.lists(st.lists(st.tuples(TEXT, TEXT)), max_size=4))
+def test_lines_of_text_are_those_of_a_table(
+    tmp_path: Path, parts: list[list[tuple[str, str]]]
+) -> None:
+    columns = [Column("step", "text"), Column("value", "text")]
+    write_csv(tmp_path / "t.csv", columns, [row for part in parts for row in part])
+    write_csv_lines(tmp_path / "lines.csv", columns, map(csv_lines, parts))
+    assert (tmp_path / "lines.csv").read_bytes() == (tmp_path / "t.csv").read_bytes()
 
 
 @in_one_folder
@@ -239,7 +250,7 @@ def test_a_table_added_in_pieces_is_the_same_file(tmp_path: Path) -> None:
             write(table.slice(start, stop - start))
     whole, pieces = (tmp_path / f"{name}.parquet" for name in ("whole", "pieces"))
     assert pieces.read_bytes() == whole.read_bytes()
-    assert read_parquet(whole).equals(table)
+    assert pyarrow.parquet.read_table(whole).equals(table)
 
 
 def test_another_process_writes_the_same_parquet_bytes(tmp_path: Path) -> None:
@@ -256,7 +267,7 @@ def test_parquet_reads_back_cell_by_cell(tmp_path: Path, rows: list[tuple[Any, .
     path = tmp_path / "t.parquet"
     table = table_of(COLUMNS, rows)
     write_parquet(path, table)
-    read = read_parquet(path)
+    read = pyarrow.parquet.read_table(path)
     assert read.schema.equals(table.schema)
     found = read.to_pydict()
     for i, column in enumerate(COLUMNS):
@@ -269,7 +280,11 @@ def test_parquet_reads_back_cell_by_cell(tmp_path: Path, rows: list[tuple[Any, .
 
 def test_not_a_number_is_missing_in_parquet(tmp_path: Path) -> None:
     write_parquet(tmp_path / "t.parquet", pa.table({"x": [1.0, math.nan, None]}))
-    assert read_parquet(tmp_path / "t.parquet").column("x").to_pylist() == [1.0, None, None]
+    assert pyarrow.parquet.read_table(tmp_path / "t.parquet").column("x").to_pylist() == [
+        1.0,
+        None,
+        None,
+    ]
 
 
 def test_dictionaries_are_for_text_only(tmp_path: Path) -> None:
@@ -289,7 +304,6 @@ def test_many_parquet_files_become_the_csv_of_all_rows(tmp_path: Path) -> None:
         paths.append(tmp_path / f"{i}.parquet")
         write_parquet(paths[-1], table.slice(start, count))
     concat_to_csv(paths, tmp_path / "all.csv")
-    assert row_count(paths) == 30_000
     write_csv(tmp_path / "whole.csv", columns, table)
     assert (tmp_path / "all.csv").read_bytes() == (tmp_path / "whole.csv").read_bytes()
 
@@ -299,21 +313,23 @@ def test_short_files_can_be_joined_as_text_with_the_same_bytes(tmp_path: Path) -
     table = table_of(columns, data)
     parts = []
     for i, (start, count) in enumerate([(0, 10), (10, 0), (10, 20_000), (20_010, 9_990 - 5_000)]):
+        part = table.slice(start, count)
         path = tmp_path / f"{i}.parquet"
-        write_parquet(path, table.slice(start, count))
-        assert write_short_csv(path) == (count < 8_192)
-        parts.append(path.with_suffix(".csv") if count < 8_192 else path)
+        write_parquet(path, part)
+        if count < 8_192:
+            path = path.with_suffix(".csv")
+            write_short_csv(path, table.schema, [part.slice(0, 7), part.slice(7)])
+        parts.append(path)
     concat_to_csv(parts, tmp_path / "all.csv")
     write_csv(tmp_path / "whole.csv", columns, table.slice(0, 25_000))
     assert (tmp_path / "all.csv").read_bytes() == (tmp_path / "whole.csv").read_bytes()
-    assert row_count(parts) == 25_000
-    assert 15_000 <= row_count(parts, 15_000) < 25_000
 
 
 def test_short_files_with_other_columns_are_refused_by_name(tmp_path: Path) -> None:
     for name in ("a", "b"):
-        write_parquet(tmp_path / f"{name}.parquet", pa.table({name: [1.0]}))
-        write_short_csv(tmp_path / f"{name}.parquet")
+        table = pa.table({name: [1.0]})
+        write_parquet(tmp_path / f"{name}.parquet", table)
+        write_short_csv(tmp_path / f"{name}.csv", table.schema, [table])
     for first, second in (("a.csv", "b.parquet"), ("a.parquet", "b.csv"), ("a.csv", "b.csv")):
         with pytest.raises(ValueError, match=second.replace(".", r"\.")):
             concat_to_csv([tmp_path / first, tmp_path / second], tmp_path / "t.csv")

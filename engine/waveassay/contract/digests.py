@@ -15,6 +15,9 @@ from fractions import Fraction
 from pathlib import Path
 from typing import Any
 
+#: Most values by far are of these types, of which json writes each in one way.
+_AS_THEY_ARE = frozenset({str, int, bool, type(None)})
+
 
 def canonical_json(value: object) -> bytes:
     """Return the one text of a value: sorted keys, floats by their shortest exact text.
@@ -61,6 +64,8 @@ def _sha256(path: Path) -> str:
 
 def _plain(value: object) -> Any:
     """Turn a value into what json writes in one way only, or refuse it."""
+    if type(value) in _AS_THEY_ARE:
+        return value
     if isinstance(value, Enum):  # before int and str, which an enumeration may also be
         return _plain(value.value)
     if value is None or isinstance(value, bool):
@@ -78,12 +83,14 @@ def _plain(value: object) -> Any:
         return f"{value.numerator}/{value.denominator}"
     if isinstance(value, list | tuple):
         return [_plain(item) for item in value]
-    if isinstance(value, Mapping):
+    if isinstance(value, dict) or isinstance(value, Mapping):  # noqa: SIM101 (most are; it is fast)
         return {_key(key): _plain(item) for key, item in value.items()}
     raise TypeError(f"{type(value).__name__} has no canonical form (got {value!r})")
 
 
 def _key(key: object) -> str:
+    if type(key) is str:
+        return key
     plain = _plain(key)
     if not isinstance(plain, str) or isinstance(key, Fraction):
         raise TypeError(f"keys are text in the canonical form (got {key!r})")

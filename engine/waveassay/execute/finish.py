@@ -2,11 +2,11 @@
 
 import json
 from collections import defaultdict
-from collections.abc import Iterator, Mapping, Sequence
-from contextlib import ExitStack
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -17,14 +17,13 @@ from waveassay.contract import (
     FeaturesSpec,
     Figure,
     Kind,
-    Rows,
     Spectra,
     Table,
     number_text,
 )
-from waveassay.execute.arrays import coded
 from waveassay.execute.gathered import Gathered, LaneRows
 from waveassay.execute.moves import collect_move, combine_move, run_move
+from waveassay.execute.stored_features import CodedTexts, StoredFeatures, StoredRows
 from waveassay.execute.tables import (
     Block,
     TableOfFeatures,
@@ -36,8 +35,14 @@ from waveassay.plan.columns import column_name
 from waveassay.plan.passage import Lane, Passage
 from waveassay.plan.precision import takers_of_rows
 from waveassay.plan.program import Level, Move
-from waveassay.provenance.tables import parquet_writer, write_parquet
+from waveassay.provenance.tables import SHORT_ROWS, csv_lines, parquet_writer, write_short_csv
 
+if TYPE_CHECKING:
+    import pyarrow as pa
+
+#: What a run folder is told of a passage beside its tables and figures: warnings; rows of the
+#: tables of excluded time and of the summary; lines of the table of derived quantities; figures
+#: with captions; how many rows each table has, and when to write all recordings' as CSV.
 FACTS_FILE = "passage.json"
 
 
@@ -49,8 +54,9 @@ class _Told:
     excluded: list[list[Any]] = field(default_factory=list)
     figures: list[dict[str, str]] = field(default_factory=list)
     summary: list[list[Any]] = field(default_factory=list)
-    derived: list[list[Any]] = field(default_factory=list)
+    derived: list[list[str]] = field(default_factory=list)
     averages: list[tuple[str, Spectra]] = field(default_factory=list)
+    table_rows: dict[str, int] = field(default_factory=dict)
 
 
 def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
@@ -62,6 +68,8 @@ def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
             for lane in sorted(gathered.outside)
         ]
     )
+    csv = _csv_choice(passage)
+    texts = csv != "never"
     with ExitStack() as stack:
         tables = {}
         if any(_table_moves(lane) for lane in passage.lanes):
@@ -71,10 +79,11 @@ def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
                     table = TableOfFeatures(
                         passage.recording, columns, passage.conditions, averaged
                     )
-                    write = stack.enter_context(parquet_writer(folder / name, table.schema))
+                    file = _table_file(folder / name, table.schema, told.table_rows, texts)
+                    write = stack.enter_context(file)
                     tables[averaged] = (table, write)
         for lane_no, lane in enumerate(passage.lanes):
-            rows = gathered.lane(lane_no, lane.signal)
+            rows = gathered.lane(lane_no)
             values = _recording_values(passage.recording, lane, rows)
             blocks = {False: _epoch_blocks(lane, rows), True: _average_blocks(lane, values)}
             if _table_moves(lane):
@@ -83,16 +92,46 @@ def finish(passage: Passage, gathered: Gathered, folder: Path) -> None:
                         write(table.of(block))
             _tell(told, passage, lane, rows, values, blocks[False], folder)
     if told.averages:
-        write_parquet(folder / "spectra.parquet", spectra_table(passage.recording, told.averages))
+        spectra = spectra_table(passage.recording, told.averages)
+        path = folder / "spectra.parquet"
+        with _table_file(path, spectra.schema, told.table_rows, texts) as write:
+            write(spectra)
     facts: dict[str, Any] = {
         "warnings": told.warnings,
         "excluded": told.excluded,
         "figures": told.figures,
         "summary": told.summary,
-        "derived": told.derived,
-        "csv": _csv_choice(passage),
+        "derived": csv_lines(told.derived),
+        "rows": told.table_rows,
+        "csv": csv,
     }
     (folder / FACTS_FILE).write_text(json.dumps(facts, sort_keys=True))
+
+
+@contextmanager
+def _table_file(
+    path: Path, schema: "pa.Schema", table_rows: dict[str, int], texts: bool
+) -> Iterator[Callable[["pa.Table"], None]]:
+    """Give a function that adds rows to a Parquet file, and count them.
+
+    With ``texts`` a short table is written as CSV, too: a run joins thousands of them as text.
+    """
+    rows = 0
+    short: list[pa.Table] = []
+    with parquet_writer(path, schema) as write:
+
+        def add(table: "pa.Table") -> None:
+            nonlocal rows
+            rows += table.num_rows
+            short.append(table)
+            if rows > SHORT_ROWS:
+                short.clear()
+            write(table)
+
+        yield add
+    table_rows[path.name] = rows
+    if texts and rows <= SHORT_ROWS:
+        write_short_csv(path.with_suffix(".csv"), schema, short)
 
 
 def _tell(
@@ -122,7 +161,7 @@ def _tell(
         told.summary += summary_rows(recording, chain, blocks, own, _units(lane), conditions)
 
 
-def _derived(passage: Passage, lane: Lane) -> Iterator[list[Any]]:
+def _derived(passage: Passage, lane: Lane) -> Iterator[list[str]]:
     """Yield what follows from a signal's parameters and rates.
 
     A row is: recording, chain, step, signal, quantity, value, unit.
@@ -142,9 +181,8 @@ def _derived(passage: Passage, lane: Lane) -> Iterator[list[Any]]:
 def _without_epochs(passage: Passage, blocks: Sequence[Block]) -> Iterator[str]:
     """Yield a warning for each condition of a signal that gave nothing."""
     for block in blocks:
-        names, codes = coded(block.rows.condition)
         for name in dict.fromkeys(c.name for c in passage.conditions):
-            of_it = codes == (names.index(name) if name in names else -1)
+            of_it = block.rows.condition.are(name)
             rows, kept = np.count_nonzero(of_it), np.count_nonzero(of_it & block.rows.kept)
             if kept == 0:
                 why = "no epoch fits in it" if rows == 0 else f"none of {rows} epochs is kept"
@@ -176,29 +214,29 @@ def _recording_values(recording: str, lane: Lane, rows: LaneRows) -> dict[int, D
 
 def _epoch_blocks(lane: Lane, rows: LaneRows) -> list[Block]:
     cut = lane.program.rows_step
-    by_cut: dict[int, dict[int, Features]] = defaultdict(dict)
+    by_cut: dict[int, dict[int, StoredFeatures]] = defaultdict(dict)
     for move in lane.program.moves.values():
         if move.step.given is Kind.FEATURES and move.level is Level.ROWS:
             features = rows.features.get(move.index)
-            by_cut[cut[move.index]][move.index] = features or _no_features(lane, move)
+            by_cut[cut[move.index]][move.index] = features or _no_features(move)
     return [Block(lane.signal, features) for _, features in sorted(by_cut.items())]
 
 
-def _no_features(lane: Lane, move: Move) -> Features:
+def _no_features(move: Move) -> StoredFeatures:
     """Return the features of a signal none of whose time lies in a condition."""
     spec = move.spec_out
     parts = [column.part for column in spec.columns] if isinstance(spec, FeaturesSpec) else []
-    none = np.empty(0)
+    none, texts = np.empty(0), CodedTexts.of(())
     whole, flags = np.empty(0, np.int64), np.empty(0, np.bool_)
-    rows = Rows(none, none, (), flags, (), whole)
-    return Features(lane.signal, rows, {part: np.empty(0) for part in parts}, ())
+    rows = StoredRows(none, none, texts, flags, texts, whole)
+    return StoredFeatures(rows, {part: none for part in parts})
 
 
 def _average_blocks(lane: Lane, values: Mapping[int, Data]) -> list[Block]:
-    by_source: dict[int, dict[int, Features]] = defaultdict(dict)
+    by_source: dict[int, dict[int, StoredFeatures]] = defaultdict(dict)
     for index, data in values.items():
         if isinstance(data, Features):
-            by_source[lane.program.moves[index].source or 0][index] = data
+            by_source[lane.program.moves[index].source or 0][index] = StoredFeatures.of(data)
     return [Block(lane.signal, features) for _, features in sorted(by_source.items())]
 
 

@@ -4,25 +4,24 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
 
-from waveassay.contract import Exclusion, Features, Part, merged
+from waveassay.contract import Exclusion, Part, merged
 from waveassay.execute.arrays import ArrayFile, Group, exclusions_from_json
-from waveassay.execute.feature_arrays import features_from_groups
 from waveassay.execute.rows import FILE, MASKS
 from waveassay.execute.signals import OUTSIDE
 from waveassay.execute.store import Store
+from waveassay.execute.stored_features import StoredFeatures, features_from_groups
 
 
 @dataclass(frozen=True)
 class LaneRows:
     """What the stretches gave of one signal, in order of time."""
 
-    signal: str
     groups: Sequence[Group]
 
     @cached_property
-    def features(self) -> dict[int, Features]:
+    def features(self) -> dict[int, StoredFeatures]:
         """Features by the number of their step."""
-        return features_from_groups(self.signal, self.groups)
+        return features_from_groups(self.groups)
 
     def parts(self, index: int) -> list[Part]:
         """Return what was collected for a step, one part a stretch that has some."""
@@ -56,9 +55,9 @@ class Gathered:
     files: Sequence[ArrayFile]
     outside: frozenset[int]
 
-    def lane(self, lane_no: int, signal: str) -> LaneRows:
+    def lane(self, lane_no: int) -> LaneRows:
         """Read what there is of one signal: all signals at once would fill the memory."""
-        return LaneRows(signal, [file.group(str(lane_no)) for file in self.files])
+        return LaneRows([file.group(str(lane_no)) for file in self.files])
 
 
 def gather(store: Store, keys: Sequence[str]) -> Gathered:

@@ -9,9 +9,9 @@ from waveassay.execute.arrays import group_writer
 from waveassay.execute.fused import run_unit
 from waveassay.execute.moves import run_move
 from waveassay.execute.signals import FILE, OUTSIDE, SignalSource, as_held, prepared_group
+from waveassay.plan.pass_parts import window_s
 from waveassay.plan.precision import held_in_store
 from waveassay.plan.stretches import Stretch
-from waveassay.plan.tasks import window_s
 from waveassay.plan.windows import Form
 
 States = Mapping[tuple[int, int], Part]

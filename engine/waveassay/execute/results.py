@@ -2,20 +2,19 @@
 
 import json
 from collections.abc import Iterator, Mapping, Sequence
+from itertools import islice
 from pathlib import Path
 from typing import Any
 
 from waveassay.contract import SignalError
 from waveassay.contract.digests import digest
 from waveassay.execute.finish import FACTS_FILE
-from waveassay.execute.store import Store
+from waveassay.execute.store import MissingArtefactError, Store
 from waveassay.execute.work import OUTCOMES, Failure
+from waveassay.plan.drafts import drafts_of, holders_of
 from waveassay.plan.jobs import Job
-from waveassay.plan.passage import Passage
 from waveassay.plan.plan import Plan, PlannedRecording
-from waveassay.plan.program import Level, Move
-from waveassay.plan.tasks import Task
-from waveassay.provenance.results import Output, Result
+from waveassay.provenance.results import Made, Output, Result
 
 _MACHINE = "MachineError: "
 
@@ -79,14 +78,13 @@ def _result(item: PlannedRecording, store: Store, failures: Mapping[str, Failure
     finishing = {task.chain: task.key for task in item.tasks if task.action == "finish"}
     failure: Failure | None = None
     outputs: list[Output] = []
-    if not all(store.has(key) for key in finishing.values()):
+    try:  # whatever happened to its job, all of it may have been done
+        outputs = [_output(store, chain, key) for chain, key in finishing.items()]
+    except MissingArtefactError:
         unknown = Failure(item.found.name, "", "", "it was not finished. Run again.")
         failure = failures.get(item.found.name, unknown)
-    else:  # whatever happened to its job, all of it was done
-        try:
-            outputs = [_output(store, chain, key) for chain, key in finishing.items()]
-        except SignalError as error:
-            failure = Failure(item.found.name, "", "", str(error))
+    except SignalError as error:
+        failure = Failure(item.found.name, "", "", str(error))
     if failure is not None:
         return Result(
             **known,
@@ -106,57 +104,39 @@ def _result(item: PlannedRecording, store: Store, failures: Mapping[str, Failure
 
 
 def _output(store: Store, chain: str, key: str) -> Output:
-    artefact = store.read(key)
-    text = artefact.path(FACTS_FILE).read_text(encoding="utf-8")
-    return Output(chain, artefact.folder, json.loads(text), artefact.files)
+    artefact = store.read(key, (FACTS_FILE,))
+    facts = json.loads(artefact.contents[FACTS_FILE])
+    made = {**artefact.rests_on, key: artefact.made}
+    return Output(chain, artefact.folder, facts, artefact.files, made)
 
 
-def step_rows(
-    plan: Plan, store: Store, computed: set[str], results: Sequence[Result]
-) -> Iterator[list[Any]]:
+def step_rows(plan: Plan, computed: set[str], results: Sequence[Result]) -> Iterator[list[Any]]:
     """Yield a row a recording, chain and step: recording, chain, step, key, digest, reused, env.
 
     The key stands for the results that hold the step's work (one a stretch), the digest for what
     they keep.
     """
-    done = {result.recording for result in results if result.status != "failed"}
-    for item in plan.recordings:
-        if item.found.name not in done:
-            continue
+    for item, result in zip(plan.recordings, results, strict=True):
+        by_chain = {output.chain: output for output in result.outputs}
+        tasks = iter(item.tasks)
         for passage in item.passages:
-            tasks = [task for task in item.tasks if task.chain == passage.chain.name]
-            known: dict[str, list[Any]] = {}
-            for index, step in enumerate(passage.chain.steps):
-                moves = [
-                    lane.program.moves[index]
-                    for lane in passage.lanes
-                    if index in lane.program.moves
-                ]
-                if moves:
-                    held = _holding(passage, moves[0], tasks)
-                    key = held[0].key if len(held) == 1 else digest([task.key for task in held])
-                    if key not in known:  # steps of one task share its result
-                        known[key] = [key, *_kept(held, store, computed)]
-                    yield [item.found.name, passage.chain.name, step.name, *known[key]]
+            own = list(islice(tasks, len(drafts_of(passage))))
+            output = by_chain.get(passage.chain.name)
+            if output is None:  # a recording that failed leaves none
+                continue
+            kept: dict[tuple[int, ...], list[Any]] = {}
+            for step, places in holders_of(passage):
+                if places not in kept:  # steps of one task share its result
+                    held = [own[place].key for place in places]
+                    kept[places] = _kept(held, output.made, computed)
+                yield [result.recording, output.chain, step, *kept[places]]
 
 
-def _holding(passage: Passage, move: Move, tasks: Sequence[Task]) -> list[Task]:
-    """Return the tasks whose results hold a step's work."""
-    prepares = any(lane.program.prepares(move.pass_no) for lane in passage.lanes)
-    if move.level is Level.RECORDING:
-        action = "finish"
-    elif move.level is Level.SAMPLES and prepares:
-        action = "prepare"
-    else:
-        action = "rows"
-    return [t for t in tasks if t.action == action and t.pass_no in (move.pass_no, 0)]
-
-
-def _kept(held: Sequence[Task], store: Store, computed: set[str]) -> list[Any]:
-    """Return of tasks' results: digest, whether all was there before, and environments."""
-    facts = [known for known in map(store.facts, [task.key for task in held]) if known]
-    reused = not any(task.key in computed for task in held)
-    environments = ";".join(sorted({environment for _, environment in facts}))
-    if len(facts) == 1 and len(held) == 1:
-        return [facts[0][0], reused, environments]
-    return [digest([d for d, _ in facts]), reused, environments]
+def _kept(keys: Sequence[str], made: Mapping[str, Made], computed: set[str]) -> list[Any]:
+    """Return of results: their key, digest, whether all was there before, and environments."""
+    known = [made[key] for key in keys if key in made]
+    reused = computed.isdisjoint(keys)
+    environments = ";".join(sorted({environment for _, environment in known}))
+    if len(keys) == 1 == len(known):
+        return [keys[0], known[0][0], reused, environments]
+    return [digest(keys), digest([found for found, _ in known]), reused, environments]

@@ -12,11 +12,11 @@ from waveassay.execute.feature_arrays import ROWS_OF, features_to_arrays
 from waveassay.execute.moves import collect_move, run_move, starting_in
 from waveassay.execute.prepare import States
 from waveassay.execute.signals import OUTSIDE, SignalSource, as_held
+from waveassay.plan.pass_parts import collected, rows_moves
 from waveassay.plan.passage import Lane
 from waveassay.plan.precision import held_in_rows
 from waveassay.plan.program import Level, Move
 from waveassay.plan.stretches import Stretch
-from waveassay.plan.tasks import collected, rows_moves
 from waveassay.recipe.model import Precision
 
 FILE = "rows.arrays"

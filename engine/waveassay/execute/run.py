@@ -155,7 +155,7 @@ class _Run:
         computed = {task.key for tasks in todo for task in tasks}
         with _nothing_collected():
             results = collect_results(plan, self.store, failures)
-            steps = list(step_rows(plan, self.store, computed, results))
+            steps = list(step_rows(plan, computed, results))
             used = sorted({name for row in steps for name in row[-1].split(";") if name})
             records = [self.store.root / "environments" / f"{name}.json" for name in used]
             results_digest = folder.complete(self.recipe, results, steps, records)

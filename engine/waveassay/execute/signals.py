@@ -18,9 +18,10 @@ from waveassay.execute.arrays import (
     fraction_of,
 )
 from waveassay.execute.store import Store
+from waveassay.plan.pass_parts import overlapping
 from waveassay.plan.passage import Passage
 from waveassay.plan.precision import Held
-from waveassay.plan.tasks import Task, overlapping
+from waveassay.plan.tasks import Task
 from waveassay.recording import Digital, Facts, open_recording
 
 FILE = "signals.arrays"

@@ -8,8 +8,8 @@ from waveassay.execute.arrays import ArrayFile, Group, save_groups
 from waveassay.execute.gathered import Gathered
 from waveassay.execute.moves import combine_move
 from waveassay.execute.store import Store
+from waveassay.plan.pass_parts import barriers
 from waveassay.plan.passage import Passage
-from waveassay.plan.tasks import barriers
 
 STATE_FILE = "state.arrays"
 
@@ -18,7 +18,7 @@ def combine(passage: Passage, pass_no: int, gathered: Gathered, folder: Path) ->
     """Turn what the pass before collected into what this pass applies."""
     groups: dict[str, Group] = {}
     for lane_no, lane in enumerate(passage.lanes):
-        rows = gathered.lane(lane_no, lane.signal)
+        rows = gathered.lane(lane_no)
         for move in barriers(lane, pass_no):
             made: Part = combine_move(move, rows.parts(move.index))
             groups[f"{lane_no}.{move.index}"] = Group(dict(made))

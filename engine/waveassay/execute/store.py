@@ -11,13 +11,14 @@ import json
 import os
 import shutil
 import tempfile
-from collections.abc import Iterator, Mapping
+from collections.abc import Collection, Iterator, Mapping
 from contextlib import contextmanager, suppress
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 
 from waveassay.contract.errors import SignalError
-from waveassay.provenance.files import PART_PREFIX, machine_error
+from waveassay.provenance.files import PART_PREFIX, machine_error, sha256_of
+from waveassay.provenance.results import Made
 
 _FACTS = "artefact.json"
 
@@ -28,13 +29,26 @@ class MissingArtefactError(SignalError):
 
 @dataclass(frozen=True)
 class Artefact:
-    """A stored result; ``files`` are the names of its files with their SHA-256."""
+    """A stored result.
+
+    Attributes
+    ----------
+    files : the names of its files with their SHA-256.
+    rests_on : what was noted, when it was made, of the results that it rests on, by key.
+    contents : of files that were asked for, as they were checked.
+    """
 
     key: str
     folder: Path
-    digest: str
-    environment: str
+    made: Made
     files: Mapping[str, str]
+    rests_on: Mapping[str, Made] = field(default_factory=dict)
+    contents: Mapping[str, bytes] = field(default_factory=dict)
+
+    @property
+    def digest(self) -> str:
+        """Of what it holds."""
+        return self.made[0]
 
     def path(self, name: str) -> Path:
         """Return one of its files."""
@@ -55,7 +69,7 @@ class Store:
 
     def place(self, key: str) -> Path:
         """Return the folder that a result has, or would have."""
-        return self.root / "objects" / key[:2] / key
+        return Path(f"{self._objects}{key[:2]}/{key}")
 
     def _file(self, key: str, name: str = _FACTS) -> str:
         # As text: paths are put together for every result of thousands of recordings.
@@ -67,7 +81,12 @@ class Store:
 
     @contextmanager
     def writing(
-        self, key: str, environment: str, known: Mapping[str, str] | None = None
+        self,
+        key: str,
+        environment: str,
+        known: Mapping[str, str] | None = None,
+        *,
+        rests_on: Mapping[str, Made] | None = None,
     ) -> Iterator[Path]:
         """Give a folder to write a result's files to; it takes its place when all went well.
 
@@ -75,6 +94,8 @@ class Store:
         ----------
         known : names of files with the SHA-256 of what was written to them, which may be told until
             the end; of all others it is worked out from what is there.
+        rests_on : what is noted of the results that it rests on, by key, so that who wants to know
+            need not look at all of these.
 
         Raises
         ------
@@ -87,7 +108,7 @@ class Store:
             part = Path(tempfile.mkdtemp(prefix=PART_PREFIX, dir=place.parent))
             try:
                 yield part
-                self._put(key, environment, part, known or {})
+                self._put(key, environment, part, known or {}, rests_on or {})
             finally:
                 shutil.rmtree(part, ignore_errors=True)
         except OSError as error:
@@ -96,15 +117,28 @@ class Store:
                 raise
             raise told from error
 
-    def _put(self, key: str, environment: str, part: Path, known: Mapping[str, str]) -> None:
+    def _put(
+        self,
+        key: str,
+        environment: str,
+        part: Path,
+        known: Mapping[str, str],
+        rests_on: Mapping[str, Made],
+    ) -> None:
         place = self.place(key)
         paths = {
             path.relative_to(part).as_posix(): path
             for path in sorted(part.rglob("*"))
             if path.is_file()
         }
-        files = {name: known.get(name) or _sha256(path) for name, path in paths.items()}
-        facts = {"files": files, "digest": _digest(files), "environment": environment}
+        files = {name: known.get(name) or sha256_of(path) for name, path in paths.items()}
+        facts: dict[str, object] = {
+            "files": files,
+            "digest": _digest(files),
+            "environment": environment,
+        }
+        if rests_on:
+            facts["rests_on"] = rests_on
         (part / _FACTS).write_text(json.dumps(facts, sort_keys=True, indent=1))
         part.chmod(0o755)
         if place.exists() and not self.has(key):
@@ -119,8 +153,12 @@ class Store:
         """Tell whether an error is about the store, not about a recording being read."""
         return error.filename is None or Path(error.filename).is_relative_to(self.root)
 
-    def read(self, key: str) -> Artefact:
+    def read(self, key: str, wanted: Collection[str] = ()) -> Artefact:
         """Return a result after checking its files against their digests.
+
+        Parameters
+        ----------
+        wanted : files whose contents are returned, too, as they were checked.
 
         Raises
         ------
@@ -131,21 +169,28 @@ class Store:
         """
         place = self.place(key)
         try:
-            with open(self._file(key), "rb") as file:
-                facts = json.load(file)
-            files = dict(facts["files"])
+            facts = json.loads(_content(self._file(key)))
+            files: dict[str, str] = dict(facts["files"])
+            made = (facts["digest"], facts["environment"])
+            rests_on = {known: (a, b) for known, (a, b) in facts.get("rests_on", {}).items()}
         except FileNotFoundError:
             raise MissingArtefactError(f"result {key[:12]} is not in the store") from None
-        except (ValueError, KeyError, TypeError):
+        except (ValueError, KeyError, TypeError, AttributeError):
             raise self._damaged(place / _FACTS) from None
+        contents: dict[str, bytes] = {}
         for name, sha256 in files.items():
+            path = self._file(key, name)
             try:
-                sound = _sha256(self._file(key, name)) == sha256
+                if name in wanted:
+                    contents[name] = _content(path)
+                    found = hashlib.sha256(contents[name]).hexdigest()
+                else:
+                    found = sha256_of(path)
             except FileNotFoundError:
-                sound = False
-            if not sound:
+                found = ""
+            if found != sha256:
                 raise self._damaged(place / name)
-        return Artefact(key, place, facts["digest"], facts["environment"], files)
+        return Artefact(key, place, made, files, rests_on, contents)
 
     def _damaged(self, path: Path) -> SignalError:
         """Remove the result that a damaged file belongs to, and say so."""
@@ -155,11 +200,10 @@ class Store:
             "is computed afresh."
         )
 
-    def facts(self, key: str) -> tuple[str, str] | None:
+    def facts(self, key: str) -> Made | None:
         """Return a result's digest and environment without reading its files; None without it."""
         try:
-            with open(self._file(key), "rb") as file:
-                facts = json.load(file)
+            facts = json.loads(_content(self._file(key)))
         except FileNotFoundError:
             return None
         return facts["digest"], facts["environment"]
@@ -189,9 +233,9 @@ class Store:
             shutil.rmtree(part, ignore_errors=True)
 
 
-def _sha256(path: str | Path) -> str:
+def _content(path: str) -> bytes:
     with open(path, "rb", buffering=0) as file:
-        return hashlib.file_digest(file, "sha256").hexdigest()
+        return file.read()
 
 
 def _digest(files: dict[str, str]) -> str:

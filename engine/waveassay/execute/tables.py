@@ -1,10 +1,11 @@
 """The rows of a passage's tables, as Arrow tables and plain rows."""
 
 from bisect import bisect_right
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
 from itertools import pairwise
+from math import lcm
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -12,15 +13,12 @@ import numpy as np
 from waveassay.contract import (
     Condition,
     Exclusion,
-    Features,
     Floats,
     Interval,
     Ints,
-    Rows,
     Spectra,
-    merged,
 )
-from waveassay.execute.arrays import coded
+from waveassay.execute.stored_features import CodedTexts, StoredFeatures, StoredRows
 from waveassay.plan.columns import FeatureColumn
 
 if TYPE_CHECKING:
@@ -55,10 +53,10 @@ class Block:
     """Rows of one signal that belong together: features of the same epochs, by step."""
 
     signal: str
-    features: Mapping[int, Features]
+    features: Mapping[int, StoredFeatures]
 
     @property
-    def rows(self) -> Rows:
+    def rows(self) -> StoredRows:
         """What the rows say; the last step decides, since it has been through every rejection."""
         return self.features[max(self.features)].rows
 
@@ -108,53 +106,66 @@ class TableOfFeatures:
         import pyarrow as pa
 
         rows, last = block.rows, len(self._rank)
-        names, codes = coded(rows.condition)
-        rank = np.array([self._rank.get(name, last) for name in names], np.int64)[codes]
+        condition = rows.condition
+        ranks = [self._rank.get(name, last) for name in condition.known]
+        rank = np.array(ranks, np.int64)[condition.codes]
         order = np.lexsort((rows.start_s, rank))
         count = order.size
         values: dict[str, Any] = {
             "recording": pa.repeat(self.recording, count),
             "signal": pa.repeat(block.signal, count),
             "signal_2": pa.nulls(count, pa.string()),
-            "condition": _texts(rows.condition, order),
+            "condition": _texts(condition, order),
             "start_s": rows.start_s[order],
             "duration_s": rows.duration_s[order],
             "kept": rows.kept[order],
             "reason": _texts(rows.reason, order),
-            "missing_reason": _texts(_missing(block, self.columns, count), order),
+            "missing_reason": _texts(_missing(block, self.columns), order),
         }
         if self.averaged:
             values["epochs"] = rows.epochs[order]
         else:
             sorted_rank = rank[order]
-            begun = np.searchsorted(sorted_rank, sorted_rank, side="left")
-            values["epoch"] = np.arange(count) - begun
+            begun = np.searchsorted(sorted_rank, np.arange(last + 1), side="left")
+            values["epoch"] = np.arange(count) - begun[sorted_rank]
         values |= {column.name: block.column(column)[order] for column in self.columns}
-        arrays = [pa.array(values[f.name], f.type, from_pandas=True) for f in self.schema]
+        # A number that is missing is still NaN here: who writes the table makes nothing of it.
+        arrays = [pa.array(values[f.name], f.type) for f in self.schema]
         return pa.Table.from_arrays(arrays, schema=self.schema)
 
 
-def _texts(texts: Sequence[str], order: Ints) -> Any:
+def _texts(texts: CodedTexts, order: Ints) -> Any:
     """Return texts in an order; an empty one is missing."""
     import pyarrow as pa
 
-    known, codes = coded(texts)
-    dictionary = pa.array([text or None for text in known], pa.string())
-    return pa.DictionaryArray.from_arrays(codes[order], dictionary).cast(pa.string())
+    if not any(texts.known):
+        return pa.nulls(order.size, pa.string())
+    dictionary = pa.array([text or None for text in texts.known], pa.string())
+    return pa.DictionaryArray.from_arrays(texts.codes[order], dictionary).cast(pa.string())
 
 
-def _missing(block: Block, columns: Sequence[FeatureColumn], count: int) -> list[str]:
-    steps = dict.fromkeys((c.step_index, c.name.split(".")[0]) for c in columns)
-    texts: list[str] = [""] * count
-    for step_index, feature in steps:
+def _missing(block: Block, columns: Sequence[FeatureColumn]) -> CodedTexts:
+    """Return why features are missing, of all steps together."""
+    found = CodedTexts(("",), np.zeros(len(block.rows), np.int32))
+    for step_index, feature in dict.fromkeys((c.step_index, c.name.split(".")[0]) for c in columns):
         features = block.features.get(step_index)
-        if features is None or not any(features.missing):
-            continue
-        for place, reason in enumerate(features.missing):
-            if reason:
-                before = f"{texts[place]}; " if texts[place] else ""
-                texts[place] = f"{before}{feature}: {reason}"
-    return texts
+        if features is not None and features.missing is not None:
+            found = _both(found, features.missing, feature)
+    return found
+
+
+def _both(before: CodedTexts, more: CodedTexts, feature: str) -> CodedTexts:
+    """Return texts with those of one more feature behind them."""
+    pairs, codes = np.unique(
+        before.codes.astype(np.int64) * len(more.known) + more.codes, return_inverse=True
+    )
+    known = []
+    for one, other in (divmod(pair, len(more.known)) for pair in pairs.tolist()):
+        said = [before.known[one]] if before.known[one] else []
+        if more.known[other]:
+            said.append(f"{feature}: {more.known[other]}")
+        known.append("; ".join(said))
+    return CodedTexts(tuple(known), codes.astype(np.int32))
 
 
 def summary_rows(
@@ -171,11 +182,9 @@ def summary_rows(
     statistics (type 7 of Hyndman and Fan, The American Statistician 50:361-365, 1996).
     """
     for block in blocks:
-        names, codes = coded(block.rows.condition)
+        known = [column for column in columns if column.step_index in block.features]
         for condition in dict.fromkeys(c.name for c in conditions):
-            number = names.index(condition) if condition in names else -1
-            inside = (codes == number) & block.rows.kept
-            known = [column for column in columns if column.step_index in block.features]
+            inside = block.rows.condition.are(condition) & block.rows.kept
             values = np.array([block.column(column)[inside] for column in known])
             for column, statistics in zip(known, _statistics(values), strict=True):
                 unit = units.get((block.signal, column.name), column.unit)
@@ -211,33 +220,60 @@ def excluded_rows(
 ) -> Iterator[list[Any]]:
     """Yield one row a condition and reason: masked time, gaps, and all of it together (``any``)."""
     gaps = [Exclusion(before.stop_s, after.start_s, "gap") for before, after in pairwise(pieces)]
-    everything = merged((*masks, *gaps))
-    together = merged(Exclusion(e.start_s, e.stop_s, "any") for e in everything)
+    everything = (*masks, *gaps)
+    ticks = lcm(
+        *(t.denominator for item in (*everything, *conditions) for t in (item.start_s, item.stop_s))
+    )
+    by_reason: dict[str, list[_Ticks]] = {}
+    for item in everything:
+        by_reason.setdefault(item.reason, []).append(_in_ticks(item, ticks))
+    together = [span for spans in by_reason.values() for span in spans]
+    excluded = [(reason, _joined(spans)) for reason, spans in sorted(by_reason.items())]
+    excluded.append(("any", _joined(together)))
     for name in dict.fromkeys(c.name for c in conditions):
-        windows = [c for c in conditions if c.name == name]
-        total_s = sum((c.length_s for c in windows), Fraction(0))
-        for reason in (*sorted({e.reason for e in everything}), "any"):
-            source = together if reason == "any" else everything
-            excluded_s = _overlap_s([e for e in source if e.reason == reason], windows)
-            if excluded_s or reason == "any":
-                share = float(excluded_s / total_s) if total_s else None
-                yield [recording, chain, signal, name, reason, float(excluded_s), share]
+        windows = [_in_ticks(c, ticks) for c in conditions if c.name == name]
+        total = sum(stop - start for start, stop in windows)
+        for reason, spans in excluded:
+            shared = _overlap(spans, windows)
+            if shared or reason == "any":
+                share = float(Fraction(shared, total)) if total else None
+                excluded_s = float(Fraction(shared, ticks))
+                yield [recording, chain, signal, name, reason, excluded_s, share]
 
 
-def _overlap_s(masks: Sequence[Interval], windows: Sequence[Interval]) -> Fraction:
+#: Start and stop in whole parts of a second: sums of fractions would reduce at every step.
+_Ticks = tuple[int, int]
+
+
+def _in_ticks(item: Interval, ticks: int) -> _Ticks:
+    start_s, stop_s = item.start_s, item.stop_s
+    return (
+        start_s.numerator * (ticks // start_s.denominator),
+        stop_s.numerator * (ticks // stop_s.denominator),
+    )
+
+
+def _joined(spans: Iterable[_Ticks]) -> list[_Ticks]:
+    """Join spans that touch or overlap; sorted."""
+    joined: list[_Ticks] = []
+    for start, stop in sorted(spans):
+        if joined and start <= joined[-1][1]:
+            joined[-1] = (joined[-1][0], max(joined[-1][1], stop))
+        else:
+            joined.append((start, stop))
+    return joined
+
+
+def _overlap(masks: Sequence[_Ticks], windows: Sequence[_Ticks]) -> int:
     """Return the time that windows share with masks, which are sorted and do not overlap."""
-    stops = [mask.stop_s for mask in masks]
-    shared = Fraction(0)
-    for window in windows:
-        for mask in masks[bisect_right(stops, window.start_s) :]:
-            if mask.start_s >= window.stop_s:
+    stops = [stop for _, stop in masks]
+    shared = 0
+    for start, stop in windows:
+        for mask_start, mask_stop in masks[bisect_right(stops, start) :]:
+            if mask_start >= stop:
                 break
-            shared += _shared_s(mask, window)
+            shared += min(mask_stop, stop) - max(mask_start, start)
     return shared
-
-
-def _shared_s(one: Interval, other: Interval) -> Fraction:
-    return max(Fraction(0), min(one.stop_s, other.stop_s) - max(one.start_s, other.start_s))
 
 
 def spectra_table(recording: str, averages: Sequence[tuple[str, Spectra]]) -> "pa.Table":

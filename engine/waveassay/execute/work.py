@@ -23,10 +23,9 @@ from waveassay.execute.signals import PreparedFiles, SignalSource, prepared_keys
 from waveassay.execute.stamps import Stamp, require_unchanged
 from waveassay.execute.states import combine, read_states
 from waveassay.execute.store import MissingArtefactError, Store
-from waveassay.execute.texts import add_texts
 from waveassay.plan.passage import Passage, passages
 from waveassay.plan.routes import Routes
-from waveassay.plan.tasks import Task, tasks_of
+from waveassay.plan.tasks import Task, needed_by, tasks_of
 from waveassay.provenance.files import write_text
 from waveassay.recipe.check import check_recipe
 from waveassay.recipe.problems import RecipeError
@@ -176,11 +175,12 @@ def _do(bench: Bench, recording: str, task: Task) -> None:
     by_action: dict[str, list[str]] = {"prepare": [], "rows": [], "combine": [], "finish": []}
     for need in task.needs:
         by_action[ready.tasks[need].action].append(need)
+    behind = needed_by(task, ready.tasks) if task.action == "finish" else ()
+    rests_on = {key: made for key in behind if (made := store.facts(key)) is not None}
     written: dict[str, str] = {}
-    with store.writing(task.key, bench.environment, written) as folder:
+    with store.writing(task.key, bench.environment, written, rests_on=rests_on) as folder:
         if task.action == "finish":
             finish(passage, gather(store, by_action["rows"]), folder)
-            add_texts(folder)
         elif task.action == "combine":
             combine(passage, task.pass_no, gather(store, by_action["rows"]), folder)
         else:

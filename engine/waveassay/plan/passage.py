@@ -1,9 +1,10 @@
 """One recording's passage through one chain: its signals, their programs and their stretches."""
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from functools import cached_property
+from typing import TYPE_CHECKING
 
 from waveassay.contract import Condition, Interval, SignalError, SignalSpec
 from waveassay.plan.columns import FeatureColumn
@@ -15,6 +16,9 @@ from waveassay.plan.stretches import Stretch, bounds_s
 from waveassay.plan.windows import Form
 from waveassay.recipe.model import Chain, Precision
 from waveassay.recording import Facts, SignalFacts
+
+if TYPE_CHECKING:
+    from waveassay.plan.drafts import Draft
 
 
 @dataclass(frozen=True)
@@ -60,6 +64,17 @@ class Lane:
         return self.route.forms
 
 
+@dataclass
+class Shared:
+    """What follows from the passages of all recordings that are alike, once it is known.
+
+    See `waveassay.plan.drafts`.
+    """
+
+    drafts: "tuple[Draft, ...] | None" = None
+    holders: tuple[tuple[str, tuple[int, ...]], ...] | None = None
+
+
 @dataclass(frozen=True)
 class Passage:
     """One recording's passage through one chain.
@@ -67,6 +82,7 @@ class Passage:
     Attributes
     ----------
     precision : of the recipe; see `waveassay.plan.precision`.
+    shared : with the passages of all recordings that are alike, which differ in name and digest.
     """
 
     recording: str
@@ -78,6 +94,7 @@ class Passage:
     lanes: tuple[Lane, ...]
     columns: tuple[FeatureColumn, ...]
     warnings: tuple[str, ...]
+    shared: Shared = field(default_factory=Shared, compare=False, repr=False)
 
     @cached_property
     def stretches(self) -> tuple[Stretch, ...]:
@@ -96,6 +113,14 @@ class Passage:
         return max((lane.program.passes for lane in self.lanes), default=0)
 
 
+@dataclass(frozen=True)
+class Alike:
+    """What the passages of recordings have in common that are alike: all but name and digest."""
+
+    ways: tuple[Passage, ...]
+    warnings: tuple[str, ...]
+
+
 def passages(
     routes: Routes, recording: str, sha256: str, facts: Facts
 ) -> tuple[tuple[Passage, ...], tuple[str, ...]]:
@@ -111,30 +136,37 @@ def passages(
         When a signal or an annotation cannot be matched, a unit does not fit, or a stage refuses
         what the recording has (a band above its Nyquist frequency).
     """
-    recipe = routes.recipe
     conditions = resolve_conditions(
-        recipe.conditions, facts.annotations, facts.start, facts.duration_s
+        routes.recipe.conditions, facts.annotations, facts.start, facts.duration_s
     )
+    signals = tuple((s.index, s.label, s.unit, s.rate_hz) for s in facts.signals)
+    alike = routes.alike(
+        (signals, facts.pieces, conditions), lambda: _alike(routes, facts, conditions)
+    )
+    ways = tuple(replace(way, recording=recording, sha256=sha256) for way in alike.ways)
+    return ways, tuple(dict.fromkeys((*facts.warnings, *alike.warnings)))
+
+
+def _alike(routes: Routes, facts: Facts, conditions: tuple[Condition, ...]) -> Alike:
+    """Work out the passages of a recording; of its facts no others count than those it is alike in.
+
+    Those are the signals' places, labels, units and rates, the pieces and the conditions.
+    """
     matched = routes.matched([signal.label for signal in facts.signals])
-    warnings = list(facts.warnings)
-    found: list[Passage] = []
-    empty: list[str] = []
-    for chain in recipe.chains.values():
-        passage = _passage(routes, chain, recording, sha256, facts, conditions, matched)
-        if not passage.lanes:
-            empty.append(chain.name)
-        warnings.extend(passage.warnings)
-        found.append(passage)
+    ways = tuple(
+        _passage(routes, chain, facts, conditions, matched)
+        for chain in routes.recipe.chains.values()
+    )
+    warnings = [text for way in ways for text in way.warnings]
+    empty = [way.chain.name for way in ways if not way.lanes]
     if empty:
         warnings.append(f"nothing to do in {', '.join(empty)}: no signal of theirs is in the file")
-    return tuple(found), tuple(dict.fromkeys(warnings))
+    return Alike(ways, tuple(warnings))
 
 
 def _passage(
     routes: Routes,
     chain: Chain,
-    recording: str,
-    sha256: str,
     facts: Facts,
     conditions: tuple[Condition, ...],
     matched: Mapping[str, tuple[tuple[str, int], ...]],
@@ -160,15 +192,19 @@ def _passage(
         raise SignalError("; ".join(_with_signals(refusals)))
     whole = any(route.program.whole_pieces() for *_, route in planned)
     lanes = []
+    borders_by_step: dict[Fraction, tuple[tuple[Fraction, ...], ...]] = {}
     for name, role, file_signal, scale, route in planned:
         for text in _short_pieces(chain, route.program, facts.pieces):
             warnings.setdefault(text, []).append(name)
         step_s = route.program.grid_step_s
-        borders = tuple(bounds_s(piece, step_s, whole=whole) for piece in facts.pieces)
+        borders = borders_by_step.get(step_s)
+        if borders is None:
+            borders = tuple(bounds_s(piece, step_s, whole=whole) for piece in facts.pieces)
+            borders_by_step[step_s] = borders
         lanes.append(Lane(name, role, file_signal.index, file_signal.label, scale, route, borders))
     return Passage(
-        recording,
-        sha256,
+        "",
+        "",
         chain,
         routes.recipe.precision,
         facts.pieces,

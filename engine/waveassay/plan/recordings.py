@@ -1,6 +1,7 @@
 """Find the recordings that the user means, and name them."""
 
-from collections.abc import Sequence
+import os
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -47,13 +48,15 @@ def find_recordings(arguments: Sequence[Path]) -> tuple[Found, ...]:
     return _without_clashes(found)
 
 
-def _inside(folder: Path) -> list[Found]:
-    return [
-        Found(path.relative_to(folder).with_suffix("").as_posix(), path)
-        for path in folder.rglob("*")
-        if path.suffix.lower() in SUFFIXES
-        and not any(part.startswith(".") for part in path.relative_to(folder).parts)
-    ]
+def _inside(folder: Path) -> Iterator[Found]:
+    for where, below, files in os.walk(folder):
+        below[:] = [name for name in below if not name.startswith(".")]
+        place = Path(where)
+        prefix = "" if place == folder else f"{place.relative_to(folder).as_posix()}/"
+        for name in (*below, *files):  # a folder of that name is told when it is read
+            stem, suffix = os.path.splitext(name)
+            if suffix.lower() in SUFFIXES and not name.startswith("."):
+                yield Found(f"{prefix}{stem}", place / name)
 
 
 def _without_clashes(found: Sequence[Found]) -> tuple[Found, ...]:

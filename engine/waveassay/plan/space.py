@@ -3,9 +3,10 @@
 from fractions import Fraction
 
 from waveassay.contract import EpochsSpec, FeaturesSpec, SignalSpec
+from waveassay.plan.pass_parts import rows_moves
 from waveassay.plan.passage import Lane, Passage
 from waveassay.plan.stretches import Stretch
-from waveassay.plan.tasks import Task, rows_moves
+from waveassay.plan.tasks import Task
 
 #: No sample and no number takes more, and the samples of a standard run take half as much.
 _LEAST_BYTES = 4

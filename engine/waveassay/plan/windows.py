@@ -59,7 +59,7 @@ class Form:
         return wanted
 
     @cached_property
-    def _alike(self) -> Hashable:
+    def alike(self) -> Hashable:
         """What two forms have in common that need the same of every stretch."""
         units = tuple((u.index, u.source, u.before, u.after, u.block_s) for u in self.units)
         return self.step_s, self.kept, units
@@ -67,7 +67,7 @@ class Form:
     def window_s(self, piece: Interval, start_s: Fraction, stop_s: Fraction) -> Window:
         """Return what must be read for all that lies from start to stop."""
         # The signals of a recording are mostly alike, and each is asked for every stretch.
-        key = (self._alike, piece, start_s, stop_s)
+        key = (self.alike, piece, start_s, stop_s)
         if key not in _windows:
             if len(_windows) > _MOST_WINDOWS:
                 _windows.clear()

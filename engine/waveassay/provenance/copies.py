@@ -1,6 +1,5 @@
 """Copies of what the store holds, for a run folder."""
 
-from collections import deque
 from collections.abc import Sequence
 from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass, field
@@ -31,27 +30,26 @@ class Copies:
 
     def __post_init__(self) -> None:
         self._pool = ThreadPoolExecutor(_THREADS)
-        self._running: deque[Future[None]] = deque()
-        self._waiting: list[tuple[Path, Path]] = []
-        self._made: set[Path] = set()
+        self._running: list[Future[None]] = []
+        self._waiting: list[tuple[str, str]] = []
+        self._made: set[str] = set()
 
-    def take(self, output: Output, file: str, target: Path) -> None:
-        """Copy a file of a result, soon.
+    def take(self, output: Output, file: str, target: str) -> None:
+        """Copy a file of a result, until `done` at the latest.
 
-        Raises
-        ------
-        OSError
-            When an earlier copy could not be made.
+        Parameters
+        ----------
+        target : path below the run folder, with forward slashes.
         """
-        if target.parent not in self._made:
-            target.parent.mkdir(parents=True, exist_ok=True)
-            self._made.add(target.parent)
-        self.digests[target.relative_to(self.folder).as_posix()] = output.digests[file]
-        self._waiting.append((output.folder / file, target))
+        # As text: paths are put together for every table of thousands of recordings.
+        parent = target.rpartition("/")[0]
+        if parent not in self._made:
+            (self.folder / parent).mkdir(parents=True, exist_ok=True)
+            self._made.add(parent)
+        self.digests[target] = output.digests[file]
+        self._waiting.append((f"{output.folder}/{file}", f"{self.folder}/{target}"))
         if len(self._waiting) == _TOGETHER:
             self._hand_over()
-        while len(self._running) > 2 * _THREADS:
-            self._running.popleft().result()
 
     def done(self) -> None:
         """Wait until all copies are made.
@@ -62,8 +60,9 @@ class Copies:
             When one could not be made.
         """
         self._hand_over()
-        while self._running:
-            self._running.popleft().result()
+        for copied in self._running:
+            copied.result()
+        self._running.clear()
 
     def _hand_over(self) -> None:
         self._running.append(self._pool.submit(_copy, tuple(self._waiting)))
@@ -81,6 +80,6 @@ class Copies:
         self._pool.shutdown(cancel_futures=True)
 
 
-def _copy(pairs: Sequence[tuple[Path, Path]]) -> None:
+def _copy(pairs: Sequence[tuple[str, str]]) -> None:
     for source, target in pairs:
         copy_file(source, target)

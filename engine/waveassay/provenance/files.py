@@ -16,6 +16,7 @@ from waveassay.contract.errors import MachineError
 #: What is still being written, or was left behind by a kill, has a name that starts so.
 PART_PREFIX = ".part-"
 
+_SHORT_BYTES = 1 << 15
 _O_BINARY: int = getattr(os, "O_BINARY", 0)
 
 _NO_ROOM = "free some space, or put the output on another disk with --into; then run again"
@@ -139,13 +140,19 @@ def sweep(folder: Path, older_than_s: float = 0.0) -> list[Path]:
     return sorted(removed)
 
 
-def copy_file(source: Path, target: Path) -> None:
+def copy_file(source: str | Path, target: str | Path) -> None:
     """Copy the bytes of a file to a new one; a disk that can share them between files does.
 
     The copy is a file of its own: what is later written to one never shows in the other.
     """
     copy_range = getattr(os, "copy_file_range", None)
-    with source.open("rb", buffering=0) as taken, target.open("wb", buffering=0) as given:
+    # Written through a buffer: the bare system call may write less than it was given.
+    with open(source, "rb", buffering=0) as taken, open(target, "wb") as given:
+        begun = taken.read(_SHORT_BYTES)
+        if len(begun) < _SHORT_BYTES:  # all of it: there is next to nothing to share
+            given.write(begun)
+            return
+        taken.seek(0)
         try:
             while copy_range is not None and copy_range(taken.fileno(), given.fileno(), 1 << 30):
                 pass
@@ -156,7 +163,7 @@ def copy_file(source: Path, target: Path) -> None:
             shutil.copyfileobj(taken, given, 1 << 20)
 
 
-def sha256_of(path: Path) -> str:
+def sha256_of(path: str | Path) -> str:
     """Return the SHA-256 of a file in hexadecimal, read in blocks.
 
     Raises
@@ -165,5 +172,9 @@ def sha256_of(path: Path) -> str:
         As the system gives it: whether a file that cannot be read stops everything or one
         recording is the caller's to say.
     """
-    with path.open("rb", buffering=0) as file:
+    with open(path, "rb", buffering=0) as file:
+        begun = file.read(_SHORT_BYTES)
+        if len(begun) < _SHORT_BYTES:  # all of it, without the large buffer that follows
+            return hashlib.sha256(begun).hexdigest()
+        file.seek(0)
         return hashlib.file_digest(file, "sha256").hexdigest()

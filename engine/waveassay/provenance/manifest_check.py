@@ -43,7 +43,7 @@ class Finding:
         return f"{self.path}: {self.difference}: {self.message}"
 
 
-def verify_manifest(folder: Path, digest_of: Callable[[Path], str] = sha256_of) -> list[Finding]:
+def verify_manifest(folder: Path, digest_of: Callable[[str], str] = sha256_of) -> list[Finding]:
     """Compare a run folder with its manifest; an empty list means that it is intact.
 
     Parameters
@@ -84,10 +84,11 @@ def verify_manifest(folder: Path, digest_of: Callable[[Path], str] = sha256_of) 
     return sorted(findings, key=lambda f: (f.path, f.difference))
 
 
-def _now(folder: Path, path: str, digest_of: Callable[[Path], str]) -> FileEntry | None:
+def _now(folder: Path, path: str, digest_of: Callable[[str], str]) -> FileEntry | None:
     """Return what a file is now; None where a link or something else stands in its place."""
-    size = plain_size(f"{folder}/{path}")
-    return None if size is None else FileEntry(path, size, digest_of(folder / path))
+    place = f"{folder}/{path}"
+    size = plain_size(place)
+    return None if size is None else FileEntry(path, size, digest_of(place))
 
 
 def _file_findings(

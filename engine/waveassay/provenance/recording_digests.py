@@ -91,7 +91,7 @@ class RecordingDigests:
             store_folder.mkdir(parents=True, exist_ok=True)
         self._load()
 
-    def digest(self, path: Path) -> str:
+    def digest(self, path: str | Path) -> str:
         """Return the SHA-256 of a recording's bytes, in hexadecimal.
 
         Raises
@@ -160,14 +160,14 @@ class RecordingDigests:
     ) -> None:
         self.close()
 
-    def _entry(self, path: Path) -> _Entry | None:
+    def _entry(self, path: str | Path) -> _Entry | None:
         """Return what is known of a file as it stands there now."""
         entry = self._entries.get(_key(path))
         if entry is None or entry.stamp != _stamp(os.stat(path)):
             return None
         return entry
 
-    def _keep(self, path: Path, read: "_Read", change: Callable[[_Entry], None]) -> None:
+    def _keep(self, path: str | Path, read: "_Read", change: Callable[[_Entry], None]) -> None:
         """Remember something of a file, if it had settled when its reading began."""
         if not read.settled:
             return
@@ -269,7 +269,7 @@ def _begin(stat: os.stat_result) -> _Read:
     return _Read(_stamp(stat), time.time_ns() - newest > UNSETTLED_S * 1e9)
 
 
-def _read_steady(path: Path, read: Callable[[], str]) -> tuple[_Read, str]:
+def _read_steady(path: str | Path, read: Callable[[], str]) -> tuple[_Read, str]:
     """Read a file that must not change meanwhile; one that does is read once more."""
     for _ in range(2):
         begun = _begin(os.stat(path))
@@ -287,7 +287,7 @@ def _stamp(stat: os.stat_result) -> _Stamp:
     return stat.st_size, stat.st_mtime_ns, stat.st_ctime_ns, inode
 
 
-def _key(path: Path) -> bytes:
+def _key(path: str | Path) -> bytes:
     return os.fsencode(os.path.abspath(path))
 
 

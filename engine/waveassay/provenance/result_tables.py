@@ -7,7 +7,7 @@ from typing import Any
 from waveassay.plan.columns import FeatureColumn
 from waveassay.provenance.copies import Copies
 from waveassay.provenance.results import Result
-from waveassay.provenance.tables import Column, concat_to_csv, row_count, write_csv
+from waveassay.provenance.tables import Column, concat_to_csv, write_csv, write_csv_lines
 
 #: Above so many rows, the CSV of all recordings is written only when a recipe asks.
 CSV_ROWS = 1_000_000
@@ -171,12 +171,13 @@ def write_result_tables(
     written = []
     for chain in columns:
         for kind, place in _PLACES.items():
-            path = folder / place.format(chain=chain)
-            if _wide_table(path, chain, results, f"{kind}.parquet", copies):
+            place = place.format(chain=chain)
+            if _wide_table(folder, place, chain, results, f"{kind}.parquet", copies):
                 written.append((chain, kind))
     write_csv(folder / "summary.csv", _SUMMARY, list(_rows(results, "summary")))
     write_csv(folder / "excluded.csv", _EXCLUDED, list(_rows(results, "excluded")))
-    write_csv(folder / "derived.csv", _DERIVED, list(_rows(results, "derived")))
+    derived = (output.facts["derived"] for result in results for output in result.outputs)
+    write_csv_lines(folder / "derived.csv", _DERIVED, derived)
     dictionary = list(_dictionary(columns, written))
     names = ("table", "column", "unit", "meaning", "step")
     write_csv(folder / "columns.csv", [Column(name, "text") for name in names], dictionary)
@@ -189,26 +190,24 @@ def _rows(results: Sequence[Result], table: str) -> Iterator[list[Any]]:
 
 
 def _wide_table(
-    folder: Path, chain: str, results: Sequence[Result], file: str, copies: Copies
+    folder: Path, place: str, chain: str, results: Sequence[Result], file: str, copies: Copies
 ) -> bool:
     """Copy every recording's table, and join them as CSV where they are few; tell if any is."""
-    parts: list[Path] = []
+    parts: list[str] = []
+    text = f"{file.removesuffix('.parquet')}.csv"
+    rows = 0
     choices = set()
     for result in results:
         for output in result.outputs:
             if output.chain == chain and file in output.digests:
-                path = folder / f"{result.recording}.parquet"
-                copies.take(output, file, path)
-                text = f"{file.removesuffix('.parquet')}.csv"
-                parts.append(output.folder / text if text in output.digests else path)
+                copies.take(output, file, f"{place}/{result.recording}.parquet")
+                parts.append(f"{output.folder}/{text if text in output.digests else file}")
+                rows += output.facts["rows"][file]
                 choices.add(output.facts["csv"])
     if not parts:
         return False
-    copies.done()
-    limit = None if "always" in choices else CSV_ROWS
-    csv_path = folder.with_name(f"{folder.name}.csv")
-    if choices != {"never"} and (limit is None or row_count(parts, limit) < limit):
-        concat_to_csv(parts, csv_path)
+    if choices != {"never"} and ("always" in choices or rows < CSV_ROWS):
+        concat_to_csv(parts, folder / f"{place}.csv")
     return True
 
 

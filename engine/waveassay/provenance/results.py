@@ -1,11 +1,13 @@
 """What came of a recording."""
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, Literal
 
 Status = Literal["done", "done_with_warnings", "failed"]
+#: Digest of what a stored result holds, and the id of the environment that made it.
+Made = tuple[str, str]
 
 
 @dataclass(frozen=True)
@@ -15,14 +17,16 @@ class Output:
     Attributes
     ----------
     folder : its tables and figures.
-    facts : summary and excluded rows, figures with captions, and when to write CSV.
+    facts : see `waveassay.execute.finish`.
     digests : SHA-256 by name of the folder's files, as they were found when they were read.
+    made : of the results that the numbers went through, by their key.
     """
 
     chain: str
     folder: Path
     facts: Mapping[str, Any]
     digests: Mapping[str, str]
+    made: Mapping[str, Made] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)

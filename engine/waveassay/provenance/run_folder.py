@@ -119,14 +119,14 @@ class RunFolder:
         ----------
         environments : the records of all environments that ``steps`` name.
         """
-        write_text(self.path / RESOLVED, resolved_yaml(recipe))
-        self._write_parameters(recipe)
-        self._write_recordings(results)
-        write_csv(self.path / "steps.csv", _STEP_COLUMNS, steps)
         with machine_errors(self.path):
-            with Copies(self.path) as copies:
-                write_result_tables(self.path, columns_by_chain(recipe), results, copies)
+            with Copies(self.path) as copies:  # begun first: the rest is written meanwhile
                 _copy_figures(self.path, results, copies)
+                write_result_tables(self.path, columns_by_chain(recipe), results, copies)
+                write_text(self.path / RESOLVED, resolved_yaml(recipe))
+                self._write_parameters(recipe)
+                self._write_recordings(results)
+                write_csv(self.path / "steps.csv", _STEP_COLUMNS, steps)
                 copies.done()
             for record in environments:
                 (self.path / "environments").mkdir(exist_ok=True)
@@ -270,7 +270,7 @@ def _copy_figures(folder: Path, results: Sequence[Result], copies: Copies) -> No
                 file = f"{Path(result.recording).name}.{figure['signal']}.{figure['name']}.png"
                 safe = "".join(c if c.isalnum() or c in "-_." else "_" for c in file)
                 path = _free(Path("figures", output.chain, result.recording).with_name(safe), taken)
-                copies.take(output, figure["file"], folder / path)
+                copies.take(output, figure["file"], path.as_posix())
                 rows.append([path.as_posix(), figure["caption"]])
     if rows:
         columns = (Column("figure", "text"), Column("caption", "text"))

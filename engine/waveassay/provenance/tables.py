@@ -1,5 +1,6 @@
 """Tables as files: CSV for people, Parquet for many rows; the same table, the same bytes."""
 
+import re
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
@@ -11,9 +12,14 @@ from waveassay.provenance.files import write_beside
 #: Text; a float (missing: NaN or None); a whole number; true or false.
 ColumnType = Literal["text", "number", "count", "flag"]
 
+#: A table of no more rows may be written as CSV when it is made, see `write_short_csv`.
+SHORT_ROWS = 8_192
+
 # Rows in one group of a Parquet file, and rows turned into CSV at once: what bounds the memory.
 _GROUP_ROWS = 131_072
 _BATCH_ROWS = 8_192
+# What is quoted in CSV.
+_SPECIAL = re.compile('[",\r\n]')
 
 
 @dataclass(frozen=True)
@@ -145,52 +151,49 @@ def parquet_writer(path: Path, schema: Any) -> Iterator[Callable[[Any], None]]:
         write_groups(0)
 
 
-def read_parquet(path: Path) -> Any:
-    """Return the table of a Parquet file as a pyarrow Table."""
-    pq = _parquet()
+def write_short_csv(path: Path, schema: Any, tables: Sequence[Any]) -> None:
+    """Write the rows of pyarrow Tables as one CSV, with the bytes that `concat_to_csv` would write.
 
-    with pq.ParquetFile(path, memory_map=False) as file:
-        return file.read()
-
-
-def write_short_csv(path: Path) -> bool:
-    """Write the rows of a Parquet file as CSV beside it, if they are few; tell if they are.
-
-    Of thousands of short files, most of the time to join them would go into opening each.
+    Of thousands of short files, most of the time to join them would go into opening each as
+    Parquet. Like a Parquet file it is not synced to the disk.
 
     Raises
     ------
     MachineError
         When the disk or a permission declines.
     """
-    table = read_parquet(path)
-    if table.num_rows > _BATCH_ROWS:
-        return False
-    with write_beside(path.with_suffix(".csv"), sync=False) as file:
-        file.write(_header(table.column_names))
-        _write_rows(file, table.to_batches())
-    return True
+    import pyarrow as pa
+
+    whole = pa.concat_tables([schema.empty_table(), *tables]).combine_chunks()
+    with write_beside(path, sync=False) as file:
+        file.write(_header(schema.names))
+        _write_rows(file, whole.to_batches())
 
 
-def row_count(paths: Iterable[Path], limit: int | None = None) -> int:
-    """Return how many rows files have, as in `concat_to_csv`; beyond the limit no more are counted.
+def csv_lines(rows: Iterable[Sequence[str]]) -> str:
+    """Return rows of texts as lines of CSV, as `write_csv` writes them, without a header.
 
-    In a CSV file, lines are counted: a text that holds a line end counts for more than one.
+    A row has more than one cell.
     """
-    pq = _parquet()
-
-    count = 0
-    for path in paths:
-        if path.suffix == ".csv":
-            count += path.read_bytes().count(b"\n") - 1
-        else:
-            count += pq.read_metadata(path).num_rows
-        if limit is not None and count >= limit:
-            break
-    return count
+    return "".join(f"{','.join(map(_quoted, row))}\n" for row in rows)
 
 
-def concat_to_csv(paths: Iterable[Path], csv_path: Path, columns: Sequence[Column] = ()) -> None:
+def write_csv_lines(path: Path, columns: Sequence[Column], parts: Iterable[str]) -> None:
+    """Write lines that `csv_lines` gave, for columns of text, one part after another.
+
+    Raises
+    ------
+    MachineError
+        When the disk or a permission declines.
+    """
+    with write_beside(path) as file:
+        file.write(_header([column.name for column in columns]))
+        file.write("".join(parts).encode("utf-8", "backslashreplace"))
+
+
+def concat_to_csv(
+    paths: Iterable[str | Path], csv_path: Path, columns: Sequence[Column] = ()
+) -> None:
     """Write the rows of Parquet files, one after another, as one CSV.
 
     A batch of rows is held at a time, whatever the files' size.
@@ -214,8 +217,9 @@ def concat_to_csv(paths: Iterable[Path], csv_path: Path, columns: Sequence[Colum
     with write_beside(csv_path) as target:
         target.write(header)
         for path in paths:
-            if path.suffix == ".csv":
-                text = path.read_bytes()
+            if str(path).endswith(".csv"):
+                with open(path, "rb", buffering=0) as short:
+                    text = short.read()
                 begun = text.index(b"\n") + 1
                 header = _same_header(target, header, text[:begun], path)
                 target.write(memoryview(text)[begun:])
@@ -229,7 +233,7 @@ def concat_to_csv(paths: Iterable[Path], csv_path: Path, columns: Sequence[Colum
                 _write_rows(target, source.iter_batches(batch_size=_BATCH_ROWS))
 
 
-def _same_header(target: BinaryIO, header: bytes, own: bytes, path: Path) -> bytes:
+def _same_header(target: BinaryIO, header: bytes, own: bytes, path: str | Path) -> bytes:
     """Write the first file's header; refuse a file that has another."""
     if not header:
         target.write(own)
@@ -281,6 +285,12 @@ def _array(column: Column, cells: Any) -> Any:
         return _without_nan(cells.cast(wanted))
     except (pa.ArrowException, ValueError, TypeError, OverflowError) as error:
         raise ValueError(f"column {column.name}: {error}") from error
+
+
+def _quoted(cell: str) -> str:
+    if _SPECIAL.search(cell) is None:
+        return cell
+    return '"' + cell.replace('"', '""') + '"'
 
 
 def _sound(cell: Any) -> Any:
@@ -339,7 +349,7 @@ def _cells(array: Any) -> Any:
 
     if not pa.types.is_string(array.type):
         return _without_nan(array).cast(pa.string())
-    special = pc.match_substring_regex(array, '[",\r\n]')
+    special = pc.match_substring_regex(array, _SPECIAL.pattern)
     if not pc.any(special).as_py():
         return array
     doubled = pc.replace_substring(array, '"', '""')
