@@ -129,8 +129,8 @@ class TableOfFeatures:
             begun = np.searchsorted(sorted_rank, np.arange(last + 1), side="left")
             values["epoch"] = np.arange(count) - begun[sorted_rank]
         values |= {column.name: block.column(column)[order] for column in self.columns}
-        # A number that is missing is still NaN here: who writes the table makes nothing of it.
-        arrays = [pa.array(values[f.name], f.type) for f in self.schema]
+        # Copied, not lent: numpy's memory would stay in pieces until the table is written.
+        arrays = [pa.array(values[f.name], f.type, from_pandas=True) for f in self.schema]
         return pa.Table.from_arrays(arrays, schema=self.schema)
 
 
