@@ -28,6 +28,7 @@ from waveassay.contract import Interval, Signal
 from waveassay.execute.memory import keep_freed_memory
 from waveassay.plan import fusing
 from waveassay.plan.program import Program
+from waveassay.plan.stretches import STRETCH_S
 from waveassay.plan.windows import Form
 
 #: Fused filter and resampling over the bound: what is acceptable, and what would be excellent.
@@ -110,7 +111,7 @@ def _compare(case: Case, hours: float, channels: int, rounds: int) -> dict[str, 
 
 def _by_stretches(forms: list[Form], signals: list[Signal]) -> list[np.ndarray[Any, Any]]:
     """Run all channels over a stretch before the next, as tasks do."""
-    borders = borders_s(signals[0].piece, forms[0].program, Fraction(600))
+    borders = borders_s(signals[0].piece, forms[0].program, STRETCH_S)
     return [
         run_by_form(form, signal, *pair).x
         for pair in pairwise(borders)

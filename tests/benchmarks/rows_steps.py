@@ -1,7 +1,7 @@
 """Steps on rows against the transforms that they cannot do without, in both precisions.
 
 Run as a script: ``python tests/benchmarks/rows_steps.py [hours] [rounds]``. CPU milliseconds per
-channel-hour at 128 Hz: 4 s epochs with 50 % overlap, run by stretches of ten minutes as a worker
+channel-hour at 128 Hz: 4 s epochs with 50 % overlap, run by stretches as a worker
 runs them, on signals in memory; medians of rounds in which every step takes its turn. The bound is
 the transforms alone, of the same precision, on a block that stays in the cache: one for each taper
 and epoch, or for each segment of Welch's estimate, which overlapping epochs share.
@@ -26,6 +26,7 @@ from waveassay.contract import Condition, Epochs, Exclusion, Interval, Signal
 from waveassay.execute.memory import keep_freed_memory
 from waveassay.execute.moves import run_move, starting_in
 from waveassay.plan.program import Level, Move
+from waveassay.plan.stretches import STRETCH_S
 
 RATE_HZ = 128
 PRECISIONS = ("float32", "float64")
@@ -50,7 +51,7 @@ FEATURES = {
 TARGETS = {"multitaper": (3.0, 2.2), "welch": (3.0, 2.2)}
 #: Milliseconds per channel-hour: all features above together, and epochs with their rows.
 TARGETS_MS = {"features": 2.5, "epochs": 0.6}
-_STRETCH_S, _EPOCH_S = Fraction(600), Fraction(4)
+_EPOCH_S = Fraction(4)
 _EPOCH, _STEP, _SEGMENT, _HOP, _TAPERS, _BLOCK = 512, 256, 256, 128, 5, 32
 
 Times = dict[str, float]
@@ -85,7 +86,7 @@ def _by_stretches(signal: Signal) -> Times:
     """Return CPU seconds of each step, run one after another over each stretch."""
     moves = _moves()
     times = dict.fromkeys(moves, 0.0)
-    for bounds in pairwise(borders_s(signal.piece, program_of([], RATE_HZ), _STRETCH_S)):
+    for bounds in pairwise(borders_s(signal.piece, program_of([], RATE_HZ), STRETCH_S)):
         values: dict[int, Any] = {0: signal.cut(bounds[0], bounds[1] + _EPOCH_S)}
         for name, move in moves.items():
             assert move.source is not None, "a step takes something"

@@ -105,4 +105,4 @@ def test_a_step_s_work_is_held_where_its_level_has_it() -> None:
         "export.table": {"finish"},
     }
     counts = {step: len(places) for step, places in holders_of(way)}
-    assert counts["load"] == counts["epoch.consecutive"] == 3  # stretches of 1,500 s
+    assert counts["load"] == counts["epoch.consecutive"] == 2  # stretches of 1,500 s

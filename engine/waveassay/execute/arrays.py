@@ -14,6 +14,7 @@ from contextlib import contextmanager
 from dataclasses import dataclass, field
 from fractions import Fraction
 from functools import lru_cache
+from math import prod
 from pathlib import Path
 from typing import Any, BinaryIO
 
@@ -131,7 +132,7 @@ class ArrayFile:
         arrays = {}
         for key, (kind, shape, offset) in known["arrays"].items():
             dtype = np.dtype(kind)
-            count = int(np.prod(shape, dtype=np.int64))
+            count = prod(shape)
             flat = np.frombuffer(block, dtype, count, offset) if count else np.empty(0, dtype)
             arrays[key] = flat.reshape(shape)
         return Group(arrays, known["facts"])
@@ -173,12 +174,6 @@ def coded(texts: Sequence[str]) -> tuple[list[str], NDArray[np.int32]]:
     """Return which texts there are, in the order first met, and for each place which one."""
     number = {text: place for place, text in enumerate(dict.fromkeys(texts))}
     return list(number), np.fromiter(map(number.__getitem__, texts), np.int32, len(texts))
-
-
-def texts_from_arrays(name: str, arrays: Mapping[str, NDArray[Any]]) -> tuple[str, ...]:
-    """Return the texts that `texts_to_arrays` put into arrays."""
-    texts: list[str] = arrays[f"{name}.texts"].tolist()
-    return tuple(map(texts.__getitem__, arrays[f"{name}.codes"].tolist()))
 
 
 def exclusions_to_json(exclusions: tuple[Exclusion, ...]) -> list[list[str]]:

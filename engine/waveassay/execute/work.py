@@ -15,7 +15,7 @@ from waveassay.contract import SignalError
 from waveassay.contract.errors import MachineError
 from waveassay.execute.finish import finish
 from waveassay.execute.gathered import gather
-from waveassay.execute.memory import keep_freed_memory
+from waveassay.execute.memory import give_back_freed_memory, keep_freed_memory
 from waveassay.execute.moves import StepError
 from waveassay.execute.prepare import prepare
 from waveassay.execute.rows import make_rows
@@ -180,6 +180,7 @@ def _do(bench: Bench, recording: str, task: Task) -> None:
     written: dict[str, str] = {}
     with store.writing(task.key, bench.environment, written, rests_on=rests_on) as folder:
         if task.action == "finish":
+            give_back_freed_memory()  # Arrow, which makes the tables, has its own
             finish(passage, gather(store, by_action["rows"]), folder)
         elif task.action == "combine":
             combine(passage, task.pass_no, gather(store, by_action["rows"]), folder)

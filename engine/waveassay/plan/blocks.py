@@ -1,6 +1,6 @@
 """The fixed grid of blocks in which a fused group is applied, from the start of a piece.
 
-A block is a quarter, a half or a whole of a stretch, by how far the group reaches, and blocks lie
+A block is a sixth, a third or a whole of a stretch, by how far the group reaches, and blocks lie
 where stretches do; which block gives a sample that is kept depends on neither. All is counted in
 steps of the grid of stretches.
 """
@@ -10,11 +10,13 @@ from fractions import Fraction
 from functools import cached_property
 from math import ceil
 
+from waveassay.plan.stretches import STRETCH_S
+
 #: The reach to both sides up to which blocks have each length, s: what is read twice is to cost
 #: less than what a longer transform, which leaves a core's memory, costs more (measured).
 LENGTHS_S = ((Fraction(75), Fraction(150)), (Fraction(300), Fraction(300)))
 #: A longer reach has whole stretches as blocks: more of one would be made and thrown away.
-LONGEST_S = Fraction(600)
+LONGEST_S = STRETCH_S
 #: How far the steps that follow may look beyond a block's borders without another block, as a
 #: share of its length.
 MARGIN = Fraction(1, 50)
