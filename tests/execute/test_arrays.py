@@ -52,6 +52,14 @@ def test_what_is_written_is_read(
             np.testing.assert_array_equal(found.arrays[key], array)
 
 
+def test_signals_alike_share_a_layout(tmp_path: Path) -> None:
+    arrays = {f"column {k}": np.zeros(8) for k in range(20)}
+    groups = {str(n): Group(arrays) for n in range(100)}
+    save_groups(tmp_path / "file", groups)
+    content = sum(array.nbytes for array in arrays.values()) * len(groups)
+    assert (tmp_path / "file").stat().st_size < content + 100 * len(groups)
+
+
 def test_arrays_that_are_not_contiguous_are_written_as_they_are_seen(tmp_path: Path) -> None:
     array = np.arange(24.0).reshape(4, 6).T[::2]
     save_groups(tmp_path / "file", {"a": Group({"x": array})})

@@ -1,9 +1,10 @@
 """Named arrays and facts in one file of the store, by signal.
 
 The file is the arrays' bytes, those of a group together, then the index (JSON), and where that
-begins (8 bytes, little-endian); arrays begin at multiples of 64 bytes. One group is written, or
-read, without the others in memory. An archive of as many arrays (npz) takes longer to open than to
-read.
+begins (8 bytes, little-endian); arrays begin at multiples of 64 bytes. Signals of one file mostly
+have arrays of the same names and shapes: a layout that groups share is told once. One group is
+written, or read, without the others in memory. An archive of as many arrays (npz) takes longer to
+open than to read.
 """
 
 import hashlib
@@ -46,6 +47,7 @@ class GroupWriter:
     def __init__(self, file: BinaryIO) -> None:
         self._file = file
         self._sha256 = hashlib.sha256()
+        self._layouts: dict[str, int] = {}
         self._groups: dict[str, Any] = {}
         self._offset = 0
 
@@ -62,25 +64,28 @@ class GroupWriter:
         ValueError
             When an array holds Python objects.
         """
-        places, pieces, size = {}, [], 0
+        arrays, pieces, size = {}, [], 0
         for key, array in group.arrays.items():
             if array.dtype.hasobject:
                 raise ValueError(f"array {key} holds Python objects")
             plain = np.ascontiguousarray(array)
-            places[key] = [plain.dtype.str, array.shape, size]
+            arrays[key] = [plain.dtype.str, array.shape, size]
             pieces.append(plain.reshape(-1).view(np.uint8).data)
             gap = -plain.nbytes % _ALIGNED
             if gap:
                 pieces.append(memoryview(bytes(gap)))
             size += plain.nbytes + gap
-        self._groups[name] = {"facts": group.facts, "arrays": places, "place": [self._offset, size]}
+        layout = json.dumps({"arrays": arrays, "size": size}, sort_keys=True)
+        number = self._layouts.setdefault(layout, len(self._layouts))
+        self._groups[name] = {"facts": group.facts, "layout": number, "start": self._offset}
         # Most groups are many small arrays, which are faster written as one.
         self._write(pieces[0] if len(pieces) == 1 else b"".join(pieces))
 
     def end(self, facts: Any) -> None:
         """Write the index, with facts about all groups."""
         begin = self._offset
-        index = {"facts": facts, "groups": self._groups}
+        layouts = [json.loads(layout) for layout in self._layouts]
+        index = {"facts": facts, "groups": self._groups, "layouts": layouts}
         self._write(json.dumps(index, sort_keys=True).encode())
         self._write(begin.to_bytes(_LENGTH, "little"))
 
@@ -116,6 +121,7 @@ class ArrayFile:
             index = json.loads(_read(file, begin, end - begin))
         self.facts: Any = index["facts"]
         self._groups: dict[str, Any] = index["groups"]
+        self._layouts: list[Any] = index["layouts"]
 
     def __iter__(self) -> Iterator[str]:
         return iter(self._groups)
@@ -127,10 +133,11 @@ class ArrayFile:
     def group(self, name: str) -> Group:
         """Read one group; its arrays may not be written."""
         known = self._groups[name]
+        layout = self._layouts[known["layout"]]
         with self.path.open("rb") as file:
-            block = _read(file, *known["place"])
+            block = _read(file, known["start"], layout["size"])
         arrays = {}
-        for key, (kind, shape, offset) in known["arrays"].items():
+        for key, (kind, shape, offset) in layout["arrays"].items():
             dtype = np.dtype(kind)
             count = prod(shape)
             flat = np.frombuffer(block, dtype, count, offset) if count else np.empty(0, dtype)
@@ -150,11 +157,11 @@ class ArrayFile:
             When the array is of another kind, or ends before.
         """
         known = self._groups[name]
-        kind, (count,), offset = known["arrays"][array]
+        kind, (count,), offset = self._layouts[known["layout"]]["arrays"][array]
         if out.dtype.str != kind or first + out.size > count:
             raise ValueError(f"{self.path}: {array} of {name} is {count} numbers of kind {kind}")
         with self.path.open("rb") as file:
-            file.seek(known["place"][0] + offset + first * out.itemsize)
+            file.seek(known["start"] + offset + first * out.itemsize)
             if file.readinto(out.view(np.uint8).data) != out.nbytes:
                 raise ValueError(f"{self.path}: the file ends within {array} of {name}")
 
