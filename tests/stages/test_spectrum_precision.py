@@ -1,5 +1,6 @@
 """Spectra of samples in float32, against the same samples in float64."""
 
+from fractions import Fraction
 from typing import Any
 
 import numpy as np
@@ -17,6 +18,7 @@ from waveassay_stages.feature import (
     spectral_peak,
 )
 from waveassay_stages.spectrum import _density, average, multitaper, periodogram, welch
+from waveassay_stages.spectrum._windows import scaled_window
 
 RATE = 128
 SMOOTH = {
@@ -105,6 +107,20 @@ def test_the_error_is_a_small_share_of_the_mean_amplitude(
     double = _density.density(x.astype(np.float64), h, n_fft, detrend)
     apart = np.abs(np.sqrt(single.astype(np.float64)) - np.sqrt(double))
     assert np.all(apart <= 4e-6 * np.sqrt(np.mean(double, axis=-1, keepdims=True)))
+
+
+@pytest.mark.parametrize("spike", [1e3, 1e4, 1e5, 1e6])
+@pytest.mark.parametrize("n", [128, 256, 512, 1000])
+def test_the_error_beside_a_spike_that_the_window_hides(n: int, spike: float) -> None:
+    """The law that `density` states of a sample that only the mean shows."""
+    x = np.random.default_rng(n).standard_normal((64, n))
+    x[:, 0] += spike
+    x = narrowed(x)
+    h = scaled_window("hann", n, Fraction(128))
+    single = _density.density(x, h, n, "constant")
+    double = _density.density(x.astype(np.float64), h, n, "constant")
+    apart = np.abs(np.sqrt(single.astype(np.float64)) - np.sqrt(double))
+    assert np.all(apart <= 1e-5 * np.sqrt(np.mean(double, axis=-1, keepdims=True)))
 
 
 @pytest.mark.parametrize("offset", [0.0, 1e5])

@@ -142,7 +142,8 @@ def density(
 
     against the same samples in float64, the mean being over all frequencies: a small share of a
     density, unless it lies far below that mean (which leakage limits anyway, or an epoch happens
-    to have next to nothing at a frequency).
+    to have next to nothing at a frequency). A sample a thousand times the rest, where a window is
+    next to 0, is felt through the mean that is taken out alone: the error is below 1e-5 then.
 
     Parameters
     ----------
