@@ -18,17 +18,18 @@ class JobLength(NamedTuple):
     """How long jobs should be, in predicted CPU seconds.
 
     Up to ``whole_s`` a recording is not cut up where there are many: whole, it needs no other job.
+    Between these limits there are ``a_worker`` jobs for each worker, so that all workers end at
+    about the same time.
     """
 
     shortest_s: float
     longest_s: float
     whole_s: float = 0.0
+    a_worker: int = 4
 
 
 #: A worker that is already running starts a job in milliseconds; a cluster takes seconds at best.
-LOCAL, CLUSTER = JobLength(1.0, 60.0, 600.0), JobLength(10.0, 300.0, 900.0)
-#: Jobs for each worker, so that all end at about the same time.
-_JOBS_A_WORKER = 4
+LOCAL, CLUSTER = JobLength(1.0, 60.0, 600.0, a_worker=12), JobLength(10.0, 300.0, 900.0)
 
 
 @dataclass(frozen=True)
@@ -80,7 +81,7 @@ def group_into_jobs(
     """
     todo = [list(tasks) for tasks in by_recording if tasks]
     costs_s = [_cost_s(tasks) for tasks in todo]
-    fair_s = sum(costs_s) / (_JOBS_A_WORKER * workers)
+    fair_s = sum(costs_s) / (length.a_worker * workers)
     target_s = min(length.longest_s, max(length.shortest_s, fair_s))
     whole_s = max(target_s, min(length.whole_s, fair_s))
     groups: list[list[Task]] = []
