@@ -144,10 +144,11 @@ def test_ctrl_c_stops_with_130_and_keeps_what_was_finished(made: Path, tmp_path:
 def test_the_second_run_in_a_folder_is_refused_and_says_who_holds_it(
     made: Path, tmp_path: Path
 ) -> None:
-    process = start(made, tmp_path)
-    wait_until(iter(lambda: (tmp_path / "runs" / ".lock").exists(), None))
-    time.sleep(0.2)
+    process, lock = start(made, tmp_path), tmp_path / "runs" / ".lock"
+    wait_until(iter(lambda: lock.exists() and lock.read_text().endswith("\n"), None))
+    process.send_signal(signal.SIGSTOP)  # else it might end before the second begins
     second = command("run", made, "--into", tmp_path)
+    process.send_signal(signal.SIGCONT)
     process.communicate(timeout=120)
     assert second.returncode == 5
     assert f"process {process.pid} on" in second.stderr
