@@ -11,6 +11,9 @@ CHANNELS = 64
 #: One worker on 24 h: wall seconds and MB of the largest process; (acceptable, excellent).
 WALL_TARGET_S, MEMORY_TARGET_MB = (90.0, 45.0), (1000.0, 300.0)
 TARGET_HOURS = 24
+#: The same wall over the bound: the seconds were set where that took 11.7 ms a channel-hour, which
+#: makes them 5 times the bound. Machines differ in seconds, and a busy one from hour to hour.
+BOUND_TARGET = (5.0, 2.5)
 #: One worker's wall over two workers', by hours.
 SPEED_UP_TARGETS = {4: (1.3, 1.5), 24: (1.6, 1.85)}
 # What a run keeps in its store and run folder, as a share of the recording; measured, with room.
@@ -56,5 +59,6 @@ def _measure(asked_hours: int, channels: int, rounds: int) -> dict[str, Any]:
         "cpu_s": {n: Spread.of(t.cpu_s for t in ts) for n, ts in workers_found.items()},
         "peak_mb": {n: Spread.of(t.peak_mb for t in ts) for n, ts in workers_found.items()},
         "bound_s": Spread.of(bound_s),
+        "over_bound": ratios((t.wall_s for t in found["1"]), bound_s),
         "speed_up": ratios((t.wall_s for t in found["1"]), (t.wall_s for t in found["2"])),
     }

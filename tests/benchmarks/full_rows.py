@@ -35,6 +35,8 @@ def full_target_rows(found: Mapping[str, Any]) -> Iterator[Row]:
         if long["hours"] == full_long.TARGET_HOURS:
             wall_s, peak_mb = long["wall_s"]["1"], long["peak_mb"]["1"]
             yield Row(f"{size}, one worker", wall_s, "s", *full_long.WALL_TARGET_S)
+            what = f"{size}, one worker, wall / bound"
+            yield Row(what, long["over_bound"], "", *full_long.BOUND_TARGET)
             yield Row(f"{size}, largest process", peak_mb, "MB", *full_long.MEMORY_TARGET_MB)
         limits = full_long.SPEED_UP_TARGETS.get(long["asked_hours"])
         if limits:

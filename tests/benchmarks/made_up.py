@@ -104,6 +104,7 @@ def _whole_chain() -> dict[str, Any]:
                 "peak_mb": workers,
                 "bound_s": S,
                 "speed_up": Spread(1.6, 1.7, 1.9),
+                "over_bound": Spread.of([3.0]),
             }
             for hours in (4, 24)
         ],

@@ -139,7 +139,8 @@ met by every round, and half of the rounds or more are excellent.
 - **Largest error of a bin.** Of any bin of any kept epoch, 0.5 to 40 Hz, relative to that bin of
   the textbook's chain: the steps one after another on the whole recording, in float64.
 - **Long recordings** ({full_long}). Wall of the command, and of its processes the one with most
-  memory.{full_cut}
+  memory. Its seconds were set on another machine, where they are five times the bound, of which the
+  ratio tells on this one.{full_cut}
 - **Many recordings** (`many_recordings.py`). Of 20 s and two signals, each with other samples. The
   plan is made in a process of its own, from known headers to what workers are handed. *One
   recording more* makes a new run folder for all; what the same command takes on that recording

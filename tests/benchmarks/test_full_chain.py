@@ -212,6 +212,7 @@ def test_a_length_without_room_is_halved(monkeypatch: pytest.MonkeyPatch) -> Non
     assert found["wall_s"]["1"].median == pytest.approx(3600 / 32, rel=0.01)
     assert found["speed_up"] == Spread.of([2.0])
     assert found["bound_s"] == Spread.of([len(full_bound.STAGES)])
+    assert found["over_bound"].median == pytest.approx(3600 / 32 / len(full_bound.STAGES), rel=0.01)
 
 
 def test_points_of_the_figure_are_in_order_of_size() -> None:

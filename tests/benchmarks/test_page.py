@@ -55,6 +55,7 @@ def test_page_shows_every_target_and_what_is_not_met() -> None:
         second_run.TARGET_S,
         full_chain.BOUND_TARGET[0],
         full_long.WALL_TARGET_S[0],
+        full_long.BOUND_TARGET[0],
         full_long.MEMORY_TARGET_MB[0],
     ]
     for limit in limits:
